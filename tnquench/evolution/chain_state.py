@@ -1,0 +1,155 @@
+"""The state sigma as a matrix product of real tensors graded by charge.
+
+sigma = U sqrt(rho_0) U+ is Hermitian, so it has real coefficients in products of normalised Pauli matrices P/sqrt(2).
+Every bond index carries a charge; the charge of a site's local operator is the XOR of the charges on both sides, so it
+need not be stored: a site tensor is an array (multiplicity, left, right) in which the charges of the left and right
+index select the local operators `grading.members[charge]`.
+
+Representation: C. Karrasch, J. H. Bardarson, J. E. Moore, Phys. Rev. Lett. 108, 227206 (2012), written as an operator.
+"""
+
+from __future__ import annotations
+
+from dataclasses import dataclass
+
+import numpy as np
+
+from tnquench.conventions import Integers, Reals
+from tnquench.model.grading import Grading
+
+
+@dataclass
+class ChainState:
+    """A matrix product state in mixed canonical form with unit norm.
+
+    grading : charges of the local operators
+    tensors : one array (multiplicity, left, right) a site
+    bonds   : L + 1 arrays (sectors,): number of indices of each charge, ordered by charge, on the bond left of each
+              site and on the one right of the last; both ends hold a single neutral index
+    centre  : the site that carries the norm; tensors left (right) of it are left (right) isometries
+    """
+
+    grading: Grading
+    tensors: list[Reals]
+    bonds: list[Integers]
+    centre: int = 0
+
+    @property
+    def sites(self) -> int:
+        """Number of sites."""
+        return len(self.tensors)
+
+    @property
+    def bond_dimensions(self) -> Integers:
+        """Bond dimension of each inner bond, shape (L - 1,)."""
+        return np.array([int(sizes.sum()) for sizes in self.bonds[1:-1]], dtype=np.int64)
+
+    @property
+    def bytes(self) -> int:
+        """Memory of all tensors in bytes."""
+        return sum(tensor.nbytes for tensor in self.tensors)
+
+    def copy(self) -> ChainState:
+        """Return an independent copy."""
+        return ChainState(
+            self.grading, [tensor.copy() for tensor in self.tensors], [sizes.copy() for sizes in self.bonds], self.centre
+        )
+
+    def sector_slices(self, bond: int) -> list[slice]:
+        """Return the index range of each charge on `bond` (0..L, counted as in `bonds`)."""
+        edges = np.concatenate(([0], np.cumsum(self.bonds[bond])))
+        return [slice(int(a), int(b)) for a, b in zip(edges[:-1], edges[1:], strict=True)]
+
+
+def infinite_temperature(sites: int, grading: Grading) -> ChainState:
+    """Return the identity operator with unit norm, the state at beta = 0."""
+    end = np.zeros(grading.sectors, dtype=np.int64)
+    end[0] = 1
+    identity = np.zeros((grading.multiplicity, 1, 1))
+    identity[int(np.flatnonzero(grading.members[0] == 0)[0])] = 1.0
+    return ChainState(grading, [identity.copy() for _ in range(sites)], [end.copy() for _ in range(sites + 1)])
+
+
+def move_centre(state: ChainState, site: int) -> None:
+    """Move the orthogonality centre to `site` by QR decompositions of the tensors on the way."""
+    while state.centre < site:
+        _step_right(state)
+    while state.centre > site:
+        _step_left(state)
+
+
+def _step_right(state: ChainState) -> None:
+    """Make the centre a left isometry and hand its triangular factor to the next site."""
+    here = state.centre
+    tensor, following = state.tensors[here], state.tensors[here + 1]
+    multiplicity, left, _ = tensor.shape
+    columns = state.sector_slices(here + 1)
+    isometries, factors = [], []
+    for block in columns:
+        q, r = np.linalg.qr(tensor[:, :, block].reshape(multiplicity * left, -1))
+        isometries.append(q.reshape(multiplicity, left, -1))
+        factors.append(r)
+    state.tensors[here] = np.concatenate(isometries, axis=2)
+    state.tensors[here + 1] = np.concatenate(
+        [r @ following[:, block, :] for r, block in zip(factors, columns, strict=True)], axis=1
+    )
+    state.bonds[here + 1] = np.array([r.shape[0] for r in factors], dtype=np.int64)
+    state.centre = here + 1
+
+
+def _step_left(state: ChainState) -> None:
+    """Make the centre a right isometry and hand its triangular factor to the site before."""
+    here = state.centre
+    tensor, previous = state.tensors[here], state.tensors[here - 1]
+    multiplicity, _, right = tensor.shape
+    rows = state.sector_slices(here)
+    isometries, factors = [], []
+    for block in rows:
+        flat = tensor[:, block, :].transpose(0, 2, 1).reshape(multiplicity * right, -1)
+        q, r = np.linalg.qr(flat)
+        isometries.append(q.reshape(multiplicity, right, -1).transpose(0, 2, 1))
+        factors.append(r.T)
+    state.tensors[here] = np.concatenate(isometries, axis=1)
+    state.tensors[here - 1] = np.concatenate(
+        [previous[:, :, block] @ r for r, block in zip(factors, rows, strict=True)], axis=2
+    )
+    state.bonds[here] = np.array([r.shape[1] for r in factors], dtype=np.int64)
+    state.centre = here - 1
+
+
+def distance(first: ChainState, second: ChainState) -> float:
+    """Return the norm of the difference of two unit vectors, accurate to rounding even when they nearly agree.
+
+    The difference is written as one chain of block-diagonal tensors and its norm is found by orthogonalising from the
+    left, which avoids the loss of half the digits in 2 - 2 <first|second>.
+    Raises ValueError if the chains differ in length or grading.
+    """
+    if first.sites != second.sites or first.grading.sectors != second.grading.sectors:
+        message = "states of different chains have no distance"
+        raise ValueError(message)
+    sectors = first.grading.sectors
+    carried = [np.hstack([np.eye(1), -np.eye(1)]) if charge == 0 else np.zeros((0, 0)) for charge in range(sectors)]
+    for site in range(first.sites):
+        carried = _absorb_pair(first, second, site, carried)
+    closing = carried[0]
+    return float(np.linalg.norm(closing.sum(axis=1)))
+
+
+def _absorb_pair(first: ChainState, second: ChainState, site: int, carried: list[Reals]) -> list[Reals]:
+    """Push the triangular factors of the difference chain through one site, charge by charge.
+
+    carried : for each charge of the left bond an array (rows, left of first + left of second)
+    """
+    a, b = first.tensors[site], second.tensors[site]
+    split = [int(size) for size in first.bonds[site]]
+    left_a, left_b = first.sector_slices(site), second.sector_slices(site)
+    right_a, right_b = first.sector_slices(site + 1), second.sector_slices(site + 1)
+    factors = []
+    for ra, rb in zip(right_a, right_b, strict=True):
+        stacked = [
+            np.hstack([carry[:, :cut] @ a[copy, la, ra], carry[:, cut:] @ b[copy, lb, rb]])
+            for carry, cut, la, lb in zip(carried, split, left_a, left_b, strict=True)
+            for copy in range(a.shape[0])
+        ]
+        factors.append(np.linalg.qr(np.vstack(stacked), mode="r"))
+    return factors
