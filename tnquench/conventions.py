@@ -1,8 +1,8 @@
 """Conventions said once and imported everywhere.
 
-hbar = k_B = lattice spacing = 1. Energies are in units of the coupling that the user sets, times in its inverse.
-Sites i = 0..L-1 sit at x_i = i - (L-1)/2; bond j joins sites j and j+1 and sits at x_j = j + 1/2 - (L-1)/2.
-Ends are open. Spin operators are S = sigma/2. Currents follow from the continuity equations
+hbar = k_B = lattice spacing = 1. Energies are in units of the coupling that the user sets, times in its
+inverse. Sites i = 0..L-1 sit at x_i = i - (L-1)/2; bond j joins sites j and j+1 and sits at x_j = j + 1/2 -
+(L-1)/2. Ends are open. Spin operators are S = sigma/2. Currents follow from the continuity equations
 dq_i/dt = J_{i-1} - J_i (charge current J on bonds) and dh_j/dt = K_j - K_{j+1} (energy current K on sites,
 K_j = i[h_{j-1}, h_j], zero at both ends).
 """
@@ -41,9 +41,9 @@ PHYSICAL_SOURCES: frozenset[str] = frozenset({"initial_gradient"})
 
 def site_positions(sites: int) -> Reals:
     """Positions x_i = i - (L-1)/2 of the sites, shape (site,), in lattice spacings."""
-    return np.arange(sites) - 0.5 * (sites - 1)
+    return np.arange(sites, dtype=np.float64) - 0.5 * (sites - 1)
 
 
 def bond_positions(sites: int) -> Reals:
     """Positions x_j = j + 1/2 - (L-1)/2 of the bonds, shape (bond,), in lattice spacings."""
-    return np.arange(sites - 1) - 0.5 * (sites - 2)
+    return np.arange(sites - 1, dtype=np.float64) - 0.5 * (sites - 2)

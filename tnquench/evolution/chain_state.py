@@ -1,16 +1,18 @@
 """The state sigma as a matrix product of real tensors graded by charge.
 
-sigma = U sqrt(rho_0) U+ is Hermitian, so it has real coefficients in products of normalised Pauli matrices P/sqrt(2).
-Every bond index carries a charge; the charge of a site's local operator is the XOR of the charges on both sides, so it
-need not be stored: a site tensor is an array (multiplicity, left, right) in which the charges of the left and right
-index select the local operators `grading.members[charge]`.
+sigma = U sqrt(rho_0) U+ is Hermitian, so it has real coefficients in products of normalised Pauli matrices
+P/sqrt(2). Every bond index carries a charge; the charge of a site's local operator is the XOR of the charges
+on both sides, so it need not be stored: a site tensor is an array (multiplicity, left, right) in which the
+charges of the left and right index select the local operators `grading.members[charge]`.
 
-Representation: C. Karrasch, J. H. Bardarson, J. E. Moore, Phys. Rev. Lett. 108, 227206 (2012), written as an operator.
+Representation: C. Karrasch, J. H. Bardarson, J. E. Moore, Phys. Rev. Lett. 108, 227206 (2012), written as an
+operator.
 """
 
 from __future__ import annotations
 
 from dataclasses import dataclass
+from itertools import pairwise
 
 import numpy as np
 
@@ -24,8 +26,8 @@ class ChainState:
 
     grading : charges of the local operators
     tensors : one array (multiplicity, left, right) a site
-    bonds   : L + 1 arrays (sectors,): number of indices of each charge, ordered by charge, on the bond left of each
-              site and on the one right of the last; both ends hold a single neutral index
+    bonds   : L + 1 arrays (sectors,): number of indices of each charge, ordered by charge, on the bond left
+              of each site and on the one right of the last; both ends hold a single neutral index
     centre  : the site that carries the norm; tensors left (right) of it are left (right) isometries
     """
 
@@ -52,13 +54,16 @@ class ChainState:
     def copy(self) -> ChainState:
         """Return an independent copy."""
         return ChainState(
-            self.grading, [tensor.copy() for tensor in self.tensors], [sizes.copy() for sizes in self.bonds], self.centre
+            self.grading,
+            [tensor.copy() for tensor in self.tensors],
+            [sizes.copy() for sizes in self.bonds],
+            self.centre,
         )
 
     def sector_slices(self, bond: int) -> list[slice]:
         """Return the index range of each charge on `bond` (0..L, counted as in `bonds`)."""
         edges = np.concatenate(([0], np.cumsum(self.bonds[bond])))
-        return [slice(int(a), int(b)) for a, b in zip(edges[:-1], edges[1:], strict=True)]
+        return [slice(int(a), int(b)) for a, b in pairwise(edges)]
 
 
 def infinite_temperature(sites: int, grading: Grading) -> ChainState:
@@ -67,7 +72,9 @@ def infinite_temperature(sites: int, grading: Grading) -> ChainState:
     end[0] = 1
     identity = np.zeros((grading.multiplicity, 1, 1))
     identity[int(np.flatnonzero(grading.members[0] == 0)[0])] = 1.0
-    return ChainState(grading, [identity.copy() for _ in range(sites)], [end.copy() for _ in range(sites + 1)])
+    return ChainState(
+        grading, [identity.copy() for _ in range(sites)], [end.copy() for _ in range(sites + 1)]
+    )
 
 
 def move_centre(state: ChainState, site: int) -> None:
@@ -118,17 +125,20 @@ def _step_left(state: ChainState) -> None:
 
 
 def distance(first: ChainState, second: ChainState) -> float:
-    """Return the norm of the difference of two unit vectors, accurate to rounding even when they nearly agree.
+    """Return the norm of the difference of two unit vectors, accurate to rounding even when they nearly
+    agree.
 
-    The difference is written as one chain of block-diagonal tensors and its norm is found by orthogonalising from the
-    left, which avoids the loss of half the digits in 2 - 2 <first|second>.
+    The difference is written as one chain of block-diagonal tensors and its norm is found by orthogonalising
+    from the left, which avoids the loss of half the digits in 2 - 2 <first|second>.
     Raises ValueError if the chains differ in length or grading.
     """
     if first.sites != second.sites or first.grading.sectors != second.grading.sectors:
         message = "states of different chains have no distance"
         raise ValueError(message)
     sectors = first.grading.sectors
-    carried = [np.hstack([np.eye(1), -np.eye(1)]) if charge == 0 else np.zeros((0, 0)) for charge in range(sectors)]
+    carried = [
+        np.hstack([np.eye(1), -np.eye(1)]) if charge == 0 else np.zeros((0, 0)) for charge in range(sectors)
+    ]
     for site in range(first.sites):
         carried = _absorb_pair(first, second, site, carried)
     closing = carried[0]
@@ -144,12 +154,12 @@ def _absorb_pair(first: ChainState, second: ChainState, site: int, carried: list
     split = [int(size) for size in first.bonds[site]]
     left_a, left_b = first.sector_slices(site), second.sector_slices(site)
     right_a, right_b = first.sector_slices(site + 1), second.sector_slices(site + 1)
-    factors = []
+    factors: list[Reals] = []
     for ra, rb in zip(right_a, right_b, strict=True):
         stacked = [
             np.hstack([carry[:, :cut] @ a[copy, la, ra], carry[:, cut:] @ b[copy, lb, rb]])
             for carry, cut, la, lb in zip(carried, split, left_a, left_b, strict=True)
             for copy in range(a.shape[0])
         ]
-        factors.append(np.linalg.qr(np.vstack(stacked), mode="r"))
+        factors.append(np.asarray(np.linalg.qr(np.vstack(stacked), mode="r")))
     return factors

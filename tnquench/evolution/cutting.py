@@ -1,11 +1,11 @@
 """Cutting a bond: the largest singular values of a two-site tensor, and the weight that is truly lost.
 
-Three methods stand behind `cut`: `svd` (reference), `gram` (eigenvectors of the smaller Gram matrix) and `subspace`
-(warm-started subspace iteration that measures what it discards from norms). The last two resolve relative weights of
-about 1e-13 at best; for smaller targets the reference is used.
+Three methods stand behind `cut`: `svd` (reference), `gram` (eigenvectors of the smaller Gram matrix) and
+`subspace` (warm-started subspace iteration that measures what it discards from norms). The last two resolve
+relative weights of about 1e-13 at best; for smaller targets the reference is used.
 
-Sources: C. Eckart and G. Young, Psychometrika 1, 211 (1936); subspace iteration with QR in the spirit of J. Unfried,
-J. Hauschild and F. Pollmann, Phys. Rev. B 107, 155133 (2023).
+Sources: C. Eckart and G. Young, Psychometrika 1, 211 (1936); subspace iteration with QR in the spirit of J.
+Unfried, J. Hauschild and F. Pollmann, Phys. Rev. B 107, 155133 (2023).
 """
 
 from __future__ import annotations
@@ -22,7 +22,16 @@ METHODS = ("subspace", "gram", "svd")
 #: Below this relative weight Gram matrices and differences of norms drown in rounding (1e-16 a term).
 GRAM_FLOOR = 1e-12
 
-#: Share of the weight target that the subspace may leave outside itself; the rest goes to its smallest directions.
+#: Fewest singular values kept whatever the weight: below it a cut costs the same, and in a nearly uniform
+#: region a few values hold everything, so that errors of cuts at any weight would be alike and companions
+#: would not see them.
+BOND_FLOOR = 32
+
+#: Relative weight of a singular value that is rounding and never kept.
+NEGLIGIBLE = 1e-26
+
+#: Share of the weight target that the subspace may leave outside itself; the rest goes to its smallest
+#: directions.
 OUTSIDE_SHARE = 0.3
 
 #: Random directions added to the warm start: at least this many, and this fraction of its size.
@@ -52,12 +61,16 @@ class CutRule:
 
     weight_target : squared norm that one cut may lose, relative
     bond_ceiling  : most singular values kept; when it binds the lost weight exceeds the target
+    bond_floor    : fewest singular values kept (as long as they are not rounding), whatever the target: small
+                    bonds cost nothing, and cutting them leaves errors that no longer shrink smoothly with the
+                    weight
     method        : `subspace`, `gram` or `svd`
     random        : source of the directions that `subspace` adds to its warm start
     """
 
     weight_target: float
     bond_ceiling: int = 2**31
+    bond_floor: int = BOND_FLOOR
     method: str = "subspace"
     random: np.random.Generator = field(default_factory=lambda: np.random.default_rng(20120529))
 
@@ -69,7 +82,8 @@ class CutRule:
 
 @dataclass
 class _Spectrum:
-    """Singular directions of one block in descending order of weight: block = frame @ image up to what is outside.
+    """Singular directions of one block in descending order of weight: block = frame @ image up to what is
+    outside.
 
     frame : orthonormal columns; image : frame.T @ block; weights : squared singular values
     rotation : orthogonal matrix that turns the frame into singular directions; None if it holds them already
@@ -111,13 +125,16 @@ def cut(blocks: list[Reals], rule: CutRule, *, guess: list[Reals] | None = None)
 def _keep_largest(
     spectra: list[_Spectrum], rule: CutRule, *, total: float, outside: float, fallbacks: int
 ) -> Cut:
-    """Discard the smallest singular values of all charges together while the lost weight stays under the target."""
+    """Discard the smallest singular values of all charges together while the lost weight stays under the
+    target."""
     charges = np.concatenate([np.full(len(s.weights), charge) for charge, s in enumerate(spectra)])
     weights = np.concatenate([s.weights for s in spectra])
     order = np.argsort(weights, kind="stable")
     lost = outside + np.cumsum(weights[order])
     discard = int(np.searchsorted(lost, rule.weight_target * total, side="right"))
-    discard = min(max(discard, len(weights) - rule.bond_ceiling), len(weights) - 1)
+    discard = min(discard, len(weights) - rule.bond_floor)
+    negligible = int(np.searchsorted(weights[order], NEGLIGIBLE * total, side="right"))
+    discard = min(max(discard, negligible, len(weights) - rule.bond_ceiling), len(weights) - 1)
     kept = np.bincount(charges[order[discard:]].astype(np.int64), minlength=len(spectra))
     halves = [spectrum.largest(int(n)) for spectrum, n in zip(spectra, kept, strict=True)]
     left, right = [half[0] for half in halves], [half[1] for half in halves]
@@ -133,7 +150,9 @@ def _by_svd(blocks: list[Reals]) -> tuple[list[_Spectrum], int]:
     spectra, fallbacks = [], 0
     for block in blocks:
         if 0 in block.shape:
-            spectra.append(_Spectrum(np.zeros((block.shape[0], 0)), np.zeros((0, block.shape[1])), np.zeros(0)))
+            spectra.append(
+                _Spectrum(np.zeros((block.shape[0], 0)), np.zeros((0, block.shape[1])), np.zeros(0))
+            )
             continue
         try:
             u, s, v = svd(block, full_matrices=False, lapack_driver="gesdd")
@@ -151,7 +170,8 @@ def _by_gram(block: Reals) -> _Spectrum:
         weights, vectors = np.linalg.eigh(block @ block.T)
         return _Spectrum(vectors[:, ::-1], vectors[:, ::-1].T @ block, np.maximum(weights[::-1], 0.0))
     _, vectors = np.linalg.eigh(block.T @ block)
-    # an eigenvector of a tiny eigenvalue is mapped to a short, inaccurate vector: QR makes the set orthonormal again
+    # an eigenvector of a tiny eigenvalue is mapped to a short, inaccurate vector: QR makes the set
+    # orthonormal again
     mapped, _ = np.linalg.qr(block @ vectors[:, ::-1])
     image = mapped.T @ block
     return _Spectrum(mapped, image, np.square(image).sum(axis=1))
@@ -162,8 +182,9 @@ def _by_subspace(
 ) -> tuple[list[_Spectrum], float]:
     """Iterate a subspace until the weight outside it is a small share of the target.
 
-    Each round maps the rows of the current basis through the block, orthonormalises, and measures what the new basis
-    misses as a difference of norms. A round that misses too much is repeated from its own result with more random rows.
+    Each round maps the rows of the current basis through the block, orthonormalises, and measures what the
+    new basis misses as a difference of norms. A round that misses too much is repeated from its own result
+    with more random rows.
     """
     allowed = OUTSIDE_SHARE * rule.weight_target * total
     extra = EXTRA_FRACTION
@@ -172,7 +193,9 @@ def _by_subspace(
         basis = [_widen(rows, block, extra, rule.random) for rows, block in zip(basis, blocks, strict=True)]
         frames = [_frame(block, rows) for block, rows in zip(blocks, basis, strict=True)]
         outside = total - sum(float(np.vdot(image, image)) for _, image in frames)
-        complete = all(min(block.shape) == len(image) for block, (_, image) in zip(blocks, frames, strict=True))
+        complete = all(
+            min(block.shape) == len(image) for block, (_, image) in zip(blocks, frames, strict=True)
+        )
         if outside <= allowed or complete:
             break
         extra *= 2.0

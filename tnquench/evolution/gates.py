@@ -16,8 +16,8 @@ from tnquench.model.pauli import PHASE, Operator
 class Gate:
     """A charge-conserving linear map of two sites' operators.
 
-    blocks : for each pair (left charge, total charge) the matrix on the flattened (middle charge, copy of the left
-             site's operator, copy of the right site's operator), or None where the map is the identity
+    blocks : for each pair (left charge, total charge) the matrix on the flattened (middle charge, copy of the
+             left site's operator, copy of the right site's operator), or None where the map is the identity
     """
 
     blocks: dict[tuple[int, int], Reals | None]
@@ -36,7 +36,8 @@ def imaginary_time_gate(term: Operator, *, beta: float, first: int, grading: Gra
 
 
 def _multiplications(term: Operator, *, first: int) -> tuple[np.ndarray, np.ndarray]:
-    """Return the matrices, shape (16, 16), of multiplying two sites' Pauli products by `term` from left and right."""
+    """Return the matrices, shape (16, 16), of multiplying two sites' Pauli products by `term` from left and
+    right."""
     left = np.zeros((16, 16), dtype=np.complex128)
     right = np.zeros((16, 16), dtype=np.complex128)
     for string, coefficient in term.items():
@@ -73,7 +74,9 @@ def _graded(generator: np.ndarray, grading: Grading) -> Gate:
                 for q in grading.members[middle ^ left ^ total]
             ]
             block = matrix[np.ix_(order, order)]
-            blocks[left, total] = None if np.array_equal(block, np.eye(len(order))) else np.ascontiguousarray(block)
+            blocks[left, total] = (
+                None if np.array_equal(block, np.eye(len(order))) else np.ascontiguousarray(block)
+            )
             covered += float((block**2).sum()) if left == 0 else 0.0
     if abs(covered - float((matrix**2).sum())) > 1e-12 * covered:
         message = "gate breaks the grading"

@@ -1,13 +1,13 @@
 """Half layers of gates applied by a sweep of the orthogonality centre, and the ledger of what the cuts cost.
 
-The chain is in exact mixed canonical form at every cut, so each discarded weight is the true loss of squared norm and
-the angles arcsin sqrt(w) add up to a rigorous bound on the distance from the uncut state.
+The chain is in exact mixed canonical form at every cut, so each discarded weight is the true loss of squared
+norm and the angles arcsin sqrt(w) add up to a rigorous bound on the distance from the uncut state.
 """
 
 from __future__ import annotations
 
 from collections.abc import Mapping
-from dataclasses import dataclass, field
+from dataclasses import dataclass
 
 import numpy as np
 
@@ -24,7 +24,8 @@ class CutLedger:
 
     discarded_weight : sum of discarded weights of each bond, shape (bond,)
     angle            : sum of arcsin sqrt(w) of each bond, shape (bond,)
-    ceiling_cuts     : cuts of each bond at which the bond ceiling kept the weight above its target, shape (bond,)
+    ceiling_cuts     : cuts of each bond at which the bond ceiling kept the weight above its target, shape
+    (bond,)
     fallbacks        : singular value decompositions that needed the slower driver
     log_norm         : logarithm of the norm removed by non-unitary gates
     """
@@ -34,13 +35,12 @@ class CutLedger:
     ceiling_cuts: Reals
     fallbacks: int = 0
     log_norm: float = 0.0
-    largest_bond: int = 1
-    cuts: int = field(default=0)
+    cuts: int = 0
 
     @classmethod
     def empty(cls, sites: int) -> CutLedger:
         """Return a ledger without entries for a chain of so many sites."""
-        return cls(*(np.zeros(sites - 1) for _ in range(3)))
+        return cls(np.zeros(sites - 1), np.zeros(sites - 1), np.zeros(sites - 1))
 
     def enter(self, bond: int, result: Cut, rule: CutRule) -> None:
         """Add one cut."""
@@ -49,7 +49,6 @@ class CutLedger:
         self.ceiling_cuts[bond] += result.discarded_weight > rule.weight_target * (1.0 + 1e-9) + 1e-15
         self.fallbacks += result.fallbacks
         self.log_norm += float(np.log(result.norm))
-        self.largest_bond = max(self.largest_bond, sum(part.shape[0] for part in result.right))
         self.cuts += 1
 
 
@@ -75,7 +74,8 @@ def apply_layer(state: ChainState, gates: Mapping[int, Gate], rule: CutRule, led
 
 
 def joined_pair(state: ChainState, bond: int) -> Reals:
-    """Return the two-site tensor of sites `bond`, `bond + 1`: (middle charge, multiplicity, multiplicity, left, right)."""
+    """Return the two-site tensor of sites `bond`, `bond + 1`: (middle charge, multiplicity, multiplicity,
+    left, right)."""
     a, b = state.tensors[bond], state.tensors[bond + 1]
     pair = np.empty((state.grading.sectors, a.shape[0], b.shape[0], a.shape[1], b.shape[2]))
     for charge, block in enumerate(state.sector_slices(bond + 1)):
@@ -86,9 +86,7 @@ def joined_pair(state: ChainState, bond: int) -> Reals:
 def _gated_pair(state: ChainState, bond: int, gate: Gate) -> Reals:
     """Join two sites, apply the gate, and make sure that the result is made of numbers."""
     pair = joined_pair(state, bond)
-    apply_gate(
-        gate, pair, left_slices=state.sector_slices(bond), right_slices=state.sector_slices(bond + 2)
-    )
+    apply_gate(gate, pair, left_slices=state.sector_slices(bond), right_slices=state.sector_slices(bond + 2))
     if not np.isfinite(pair.flat[:: max(1, pair.size // 64)]).all():
         message = f"the state holds values that are not finite numbers at bond {bond}"
         raise StateError(message)
@@ -100,15 +98,19 @@ def _cut_rightwards(state: ChainState, bond: int, gate: Gate, rule: CutRule, led
     pair = _gated_pair(state, bond, gate)
     sectors, copies_left, copies_right, left, right = pair.shape
     blocks = [
-        pair[charge].transpose(0, 2, 1, 3).reshape(copies_left * left, copies_right * right) for charge in range(sectors)
+        pair[charge].transpose(0, 2, 1, 3).reshape(copies_left * left, copies_right * right)
+        for charge in range(sectors)
     ]
     old = state.tensors[bond + 1]
     guess = [
-        old[:, block, :].transpose(1, 0, 2).reshape(-1, copies_right * right) for block in state.sector_slices(bond + 1)
+        old[:, block, :].transpose(1, 0, 2).reshape(-1, copies_right * right)
+        for block in state.sector_slices(bond + 1)
     ]
     result = cut(blocks, rule, guess=guess)
     ledger.enter(bond, result, rule)
-    state.tensors[bond] = np.concatenate([part.reshape(copies_left, left, -1) for part in result.left], axis=2)
+    state.tensors[bond] = np.concatenate(
+        [part.reshape(copies_left, left, -1) for part in result.left], axis=2
+    )
     state.tensors[bond + 1] = np.concatenate(
         [part.reshape(-1, copies_right, right).transpose(1, 0, 2) for part in result.right], axis=1
     )
@@ -121,11 +123,13 @@ def _cut_leftwards(state: ChainState, bond: int, gate: Gate, rule: CutRule, ledg
     pair = _gated_pair(state, bond, gate)
     sectors, copies_left, copies_right, left, right = pair.shape
     blocks = [
-        pair[charge].transpose(1, 3, 0, 2).reshape(copies_right * right, copies_left * left) for charge in range(sectors)
+        pair[charge].transpose(1, 3, 0, 2).reshape(copies_right * right, copies_left * left)
+        for charge in range(sectors)
     ]
     old = state.tensors[bond]
     guess = [
-        old[:, :, block].transpose(2, 0, 1).reshape(-1, copies_left * left) for block in state.sector_slices(bond + 1)
+        old[:, :, block].transpose(2, 0, 1).reshape(-1, copies_left * left)
+        for block in state.sector_slices(bond + 1)
     ]
     result = cut(blocks, rule, guess=guess)
     ledger.enter(bond, result, rule)

@@ -7,6 +7,7 @@ from __future__ import annotations
 
 from collections.abc import Sequence
 from dataclasses import dataclass
+from math import log
 
 from tnquench.evolution.chain_state import ChainState, distance, infinite_temperature
 from tnquench.evolution.cutting import CutRule
@@ -19,12 +20,18 @@ from tnquench.model.pauli import Operator
 SCHEME = SCHEMES[4]
 FEWEST_STEPS, MOST_STEPS = 2, 512
 
+#: Error of a state as a fraction of its distance from the one with twice the step: 1/(2^order - 1) in the
+#: limit of small steps, here with a factor 2 to spare, and far more cautious while only one distance is
+#: known.
+LEAST_SHARE, SHARE_AT_FIRST = 2.0 / (2**SCHEME.order - 1), 0.25
+
 
 @dataclass(frozen=True)
 class Preparation:
     """The start and what is known of it.
 
-    state : unit vector proportional to exp(-K/2)
+    state : unit vector proportional to exp(-K/2); coarser : the same with steps twice as long
+    error_share : estimated error of the state as a fraction of its difference from the coarser one
     distance : estimated norm of its difference from the exact start; an expectation value moves by at most
                2 distance times the operator's norm, now and at any later time
     steps : imaginary-time steps taken; cuts : ledger of the final preparation
@@ -33,6 +40,8 @@ class Preparation:
     """
 
     state: ChainState
+    coarser: ChainState
+    error_share: float
     distance: float
     steps: int
     cuts: CutLedger
@@ -40,39 +49,38 @@ class Preparation:
     reached: bool
 
 
-def prepare(terms: Sequence[Operator], *, sites: int, grading: Grading, distance_target: float, rule: CutRule) -> Preparation:
+def prepare(
+    terms: Sequence[Operator], *, sites: int, grading: Grading, distance_target: float, rule: CutRule
+) -> Preparation:
     """Prepare the start, halving the step until the state is within `distance_target` of the exact one.
 
     terms : k_j with sum_j k_j = K, one operator a bond; distance_target : norm of the state's allowed error
     rule  : how bonds are cut on the way
-    The distance of the last two states measures the coarser one's error; the finer one's own Trotter error is smaller
-    by 2^order, but errors of the cuts do not shrink, so the estimate never falls below what the last halving changed
-    divided by 4. If halving no longer helps, the best state is returned with `reached` false.
+    The distance of the last two states measures the coarser one's error; the finer one's is smaller by
+    2^order while the Trotter error dominates, but errors of the cuts do not shrink, so the estimate takes the
+    ratio of the last two distances where that is larger (and a cautious share while there is only one). If
+    halving no longer helps, the last state is returned with `reached` false.
     """
-    steps = FEWEST_STEPS
-    state, ledger, log_norm = _imaginary_evolution(terms, sites, grading, steps, rule)
-    previous = float("inf")
+    steps, previous = FEWEST_STEPS, float("inf")
+    state, ledger = _imaginary_evolution(terms, sites, grading, steps, rule)
     while True:
         steps *= 2
-        finer, ledger, log_norm = _imaginary_evolution(terms, sites, grading, steps, rule)
-        apart = distance(state, finer)
-        estimate = apart / 4.0 if apart > previous / 2**SCHEME.order * 2.0 else apart / (2**SCHEME.order - 1)
-        state = finer
-        stalled = apart > 0.5 * previous
-        if estimate <= distance_target or stalled or 2 * steps > MOST_STEPS:
+        coarser, (state, ledger) = state, _imaginary_evolution(terms, sites, grading, steps, rule)
+        apart = distance(coarser, state)
+        share = SHARE_AT_FIRST if previous == float("inf") else min(max(LEAST_SHARE, apart / previous), 1.0)
+        reached = share * apart <= distance_target
+        if reached or apart > 0.5 * previous or 2 * steps > MOST_STEPS:
             break
         previous = apart
-    log_partition = 2.0 * log_norm + sites * _LOG_TWO
-    return Preparation(state, estimate, steps, ledger, log_partition, estimate <= distance_target)
-
-
-_LOG_TWO = 0.6931471805599453
+    log_partition = 2.0 * ledger.log_norm + sites * log(2.0)
+    return Preparation(state, coarser, share, share * apart, steps, ledger, log_partition, reached)
 
 
 def _imaginary_evolution(
     terms: Sequence[Operator], sites: int, grading: Grading, steps: int, rule: CutRule
-) -> tuple[ChainState, CutLedger, float]:
-    """Return exp(-K/2) normalised, its ledger, and the logarithm of its norm relative to the identity's."""
+) -> tuple[ChainState, CutLedger]:
+    """Return exp(-K/2) normalised, and its ledger with the logarithm of its norm relative to the
+    identity's."""
     state = infinite_temperature(sites, grading)
     ledger = CutLedger.empty(sites)
     known: dict[tuple[int, float], dict[int, Gate]] = {}
@@ -80,8 +88,10 @@ def _imaginary_evolution(
         key = (parity, round(fraction, 14))
         if key not in known:
             known[key] = {
-                bond: imaginary_time_gate(terms[bond], beta=0.25 * fraction / steps, first=bond, grading=grading)
+                bond: imaginary_time_gate(
+                    terms[bond], beta=0.25 * fraction / steps, first=bond, grading=grading
+                )
                 for bond in range(parity, sites - 1, 2)
             }
         apply_layer(state, known[key], rule, ledger)
-    return state, ledger, ledger.log_norm
+    return state, ledger

@@ -21,7 +21,8 @@ from tnquench.model.pauli import Operator
 class Moment:
     """The state at one requested time.
 
-    state : the evolving chain itself, not a copy: valid until the generator goes on; observers may move its centre
+    state : the evolving chain itself, not a copy: valid until the generator goes on; observers may move its
+    centre
     cuts  : ledger since the start of the real-time evolution
     """
 

@@ -34,17 +34,18 @@ SCHEMES: dict[int, TrotterScheme] = {
     4: TrotterScheme(
         4,
         _mclachlan(),
-        "R. I. McLachlan, SIAM J. Sci. Comput. 16, 151 (1995), five stages; recommended for chains by T. Barthel and "
-        "Y. Zhang, Ann. Phys. 418, 168165 (2020); coefficients from memory, order verified numerically",
+        "R. I. McLachlan, SIAM J. Sci. Comput. 16, 151 (1995), five stages; "
+        "coefficients from memory, order verified numerically",
     ),
 }
 
 
 def half_layers(scheme: TrotterScheme, steps: int) -> list[tuple[int, float]]:
-    """Return the half layers (parity of their bonds, fraction of a step) of `steps` steps, adjacent ones merged.
+    """Return the half layers (parity of their bonds, fraction of a step) of `steps` steps, adjacent ones
+    merged.
 
-    The last layer of a step and the first of the next act on the same bonds, so n steps of a scheme with m layers
-    need only n (m - 1) + 1 layers.
+    The last layer of a step and the first of the next act on the same bonds, so n steps of a scheme with m
+    layers need only n (m - 1) + 1 layers.
     """
     layers: list[tuple[int, float]] = []
     for _ in range(steps):

@@ -1,7 +1,7 @@
 """A spin chain as its bond terms in Pauli strings; every local observable follows from them.
 
-Currents are never written by hand: the continuity equations of `conventions` give K_j = i[h_{j-1}, h_j] for the
-energy and, since q_i + q_{i+1} commutes with h_i, J_i = -i[h_i, q_i] for the charge.
+Currents are never written by hand: the continuity equations of `conventions` give K_j = i[h_{j-1}, h_j] for
+the energy and, since q_i + q_{i+1} commutes with h_i, J_i = -i[h_i, q_i] for the charge.
 """
 
 from __future__ import annotations
@@ -13,7 +13,8 @@ from tnquench.model.pauli import Operator, X, Y, Z, add, commutator, scale, stri
 
 @dataclass(frozen=True)
 class Chain:
-    """Bond terms h_j, j = 0..L-2, with sum_j h_j = H, and the conserved charge's densities q_i, i = 0..L-1."""
+    """Bond terms h_j, j = 0..L-2, with sum_j h_j = H, and the conserved charge's densities q_i, i =
+    0..L-1."""
 
     sites: int
     bond_terms: tuple[Operator, ...]
@@ -71,13 +72,19 @@ def share_among_bonds(site_terms: tuple[Operator, ...]) -> tuple[Operator, ...]:
     )
 
 
-def start_terms(chain: Chain, *, beta: list[float], beta_charge: list[float] | None = None) -> tuple[Operator, ...]:
+def start_terms(
+    chain: Chain, *, beta: list[float], beta_charge: list[float] | None = None
+) -> tuple[Operator, ...]:
     """Return k_j with sum_j k_j = K of the start rho_0 = exp(-K)/Z, one operator a bond.
 
-    beta : inverse temperature of each bond (L - 1); beta_charge : product of inverse temperature and field (or
-    chemical potential) at each site (L), which lowers the energy: K = sum_j beta_j h_j - sum_i (beta h)_i q_i.
+    beta : inverse temperature of each bond (L - 1); beta_charge : product of inverse temperature and field
+    (or chemical potential) at each site (L), which lowers the energy: K = sum_j beta_j h_j - sum_i (beta h)_i
+    q_i.
     """
-    thermal = [scale(term, inverse_temperature) for term, inverse_temperature in zip(chain.bond_terms, beta, strict=True)]
+    thermal = [
+        scale(term, inverse_temperature)
+        for term, inverse_temperature in zip(chain.bond_terms, beta, strict=True)
+    ]
     if beta_charge is None:
         return tuple(thermal)
     fields = tuple(scale(charge, -value) for charge, value in zip(chain.charges, beta_charge, strict=True))

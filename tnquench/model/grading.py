@@ -1,8 +1,9 @@
 """The charge grading of the operator space, derived from the terms of H and of the start.
 
-Conjugation by global pi rotations multiplies every Pauli matrix by a sign, so the letters carry a Z2 x Z2 charge per
-qubit species, and the charge of a string is the XOR of its letters. A term of non-zero charge breaks some of these
-symmetries: what survives is the quotient of all charges by the span of the terms' charges.
+Conjugation by global pi rotations multiplies every Pauli matrix by a sign, so the letters carry a Z2 x Z2
+charge per qubit species, and the charge of a string is the XOR of its letters. A term of non-zero charge
+breaks some of these symmetries: what survives is the quotient of all charges by the span of the terms'
+charges.
 """
 
 from __future__ import annotations
@@ -22,7 +23,8 @@ class Grading:
     """Charges of the local operators of one site.
 
     sectors : number of charges, a power of two; charges combine by XOR and 0 is neutral
-    members : shape (sectors, multiplicity), the local operators (base-4 number of their letters) of each charge
+    members : shape (sectors, multiplicity), the local operators (base-4 number of their letters) of each
+    charge
     charge_of : shape (operators,), the charge of each local operator
     """
 
@@ -37,15 +39,16 @@ class Grading:
 
 
 def string_charge(term: PauliString, *, qubits_per_site: int = 1) -> int:
-    """Return the XOR over all sites of the local operators of a Pauli string: its charge before any quotient."""
+    """Return the XOR over all sites of the local operators of a Pauli string: its charge before any
+    quotient."""
     return reduce(lambda total, factor: total ^ (factor[1] << 2 * (factor[0] % qubits_per_site)), term, 0)
 
 
 def derive_grading(operators: Iterable[Operator], *, qubits_per_site: int = 1) -> Grading:
     """Return the finest grading under which every term of every operator is neutral.
 
-    operators : terms of H and of the start's exponent. With none breaking a symmetry a spin chain has four sectors of
-    one operator each; with a field along z two sectors of two.
+    operators : terms of H and of the start's exponent. With none breaking a symmetry a spin chain has four
+    sectors of one operator each; with a field along z two sectors of two.
     """
     broken: list[int] = []  # echelon basis of the span of the terms' charges, leading bits all different
     for operator in operators:
@@ -68,7 +71,8 @@ def derive_grading(operators: Iterable[Operator], *, qubits_per_site: int = 1) -
 
 
 def _reduce(charge: int, basis: list[int]) -> int:
-    """Return the representative of a charge modulo an echelon basis: zero in every leading bit of the basis."""
+    """Return the representative of a charge modulo an echelon basis: zero in every leading bit of the
+    basis."""
     for vector in basis:
         if charge >> (vector.bit_length() - 1) & 1:
             charge ^= vector

@@ -1,8 +1,8 @@
 """Operators as sums of Pauli strings, with their products and commutators.
 
-A letter is 0 (identity), 1 (X), 2 (Y) or 3 (Z), so that the letter of a product of two Pauli matrices is the bitwise
-XOR of their letters. A string is a sorted tuple of (qubit, letter) without identities; an operator maps strings to
-coefficients.
+A letter is 0 (identity), 1 (X), 2 (Y) or 3 (Z), so that the letter of a product of two Pauli matrices is the
+bitwise XOR of their letters. A string is a sorted tuple of (qubit, letter) without identities; an operator
+maps strings to coefficients.
 """
 
 from __future__ import annotations
@@ -74,13 +74,15 @@ def commutator(first: Operator, second: Operator) -> dict[PauliString, complex]:
 
 
 def support(operator: Operator) -> tuple[int, int]:
-    """Return the first and the last qubit on which the operator acts; (0, 0) for a multiple of the identity."""
+    """Return the first and the last qubit on which the operator acts; (0, 0) for a multiple of the
+    identity."""
     qubits = [qubit for term in operator for qubit, _ in term]
     return (min(qubits), max(qubits)) if qubits else (0, 0)
 
 
 def dense(operator: Operator, *, first: int, qubits: int) -> NDArray[np.complex128]:
-    """Return the matrix of the operator on qubits `first` .. `first + qubits - 1`, shape (2^qubits, 2^qubits).
+    """Return the matrix of the operator on qubits `first` .. `first + qubits - 1`, shape (2^qubits,
+    2^qubits).
 
     The first qubit is the most significant one. Raises ValueError if the operator acts outside the window.
     """

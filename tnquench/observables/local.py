@@ -1,8 +1,8 @@
 """Expectation values of local operators from the reduced operator table of a few neighbouring sites.
 
 For sigma = sum psi(p) P_p (P_p products of normalised Pauli matrices) an expectation value is
-<O> = Tr(sigma O sigma) = sum_{p,p'} psi(p') Tr(P_p' O P_p) psi(p). A Pauli string only permutes the P_p with a phase,
-and everything outside its window is contracted by orthonormality around the centre.
+<O> = Tr(sigma O sigma) = sum_{p,p'} psi(p') Tr(P_p' O P_p) psi(p). A Pauli string only permutes the P_p with
+a phase, and everything outside its window is contracted by orthonormality around the centre.
 """
 
 from __future__ import annotations
@@ -23,7 +23,8 @@ from tnquench.model.pauli import PHASE, Operator, support
 class LocalWindow:
     """All observables of one window of sites as one matrix on its flattened operator tables.
 
-    first, width : the sites; names : (observable, place) of each row; matrix : (rows, sum of squared table sizes)
+    first, width : the sites; names : (observable, place) of each row; matrix : (rows, sum of squared table
+    sizes)
     """
 
     first: int
@@ -50,11 +51,14 @@ class LocalObservables:
 
     def _window(self, first: int, rows: list[tuple[str, int, Operator]]) -> LocalWindow:
         """Tabulate the operators of one window."""
-        matrix = np.array([_flat_elements(operator, first, self.width, self.tables) for _, _, operator in rows])
+        matrix = np.array(
+            [_flat_elements(operator, first, self.width, self.tables) for _, _, operator in rows]
+        )
         return LocalWindow(first, self.width, tuple((name, place) for name, place, _ in rows), matrix)
 
     def measure(self, state: ChainState) -> tuple[dict[str, Reals], Reals]:
-        """Return name -> expectation values (place,), and the entanglement entropy of each bond (nats, shape (bond,)).
+        """Return name -> expectation values (place,), and the entanglement entropy of each bond (nats, shape
+        (bond,)).
 
         Moves the centre of the state through the chain to its other end; the state itself does not change.
         """
@@ -70,7 +74,9 @@ class LocalObservables:
                 entropies[site] = bond_entropy(state, site)
             if site in windows:
                 window = windows[site]
-                flat = np.concatenate([table.ravel() for table in reduced_tables(state, window.first, self.tables)])
+                flat = np.concatenate(
+                    [table.ravel() for table in reduced_tables(state, window.first, self.tables)]
+                )
                 for (name, place), value in zip(window.names, window.matrix @ flat, strict=True):
                     values[name][place] = value
         return values, entropies
@@ -106,9 +112,11 @@ def _flat_elements(operator: Operator, first: int, width: int, tables: Sequence[
 
 
 def reduced_tables(state: ChainState, first: int, tables: Sequence[Integers]) -> list[Reals]:
-    """Return for each charge c the matrix sum_{l,r} psi(p', l, r) psi(p, l, r) over operator products p of charge c.
+    """Return for each charge c the matrix sum_{l,r} psi(p', l, r) psi(p, l, r) over operator products p of
+    charge c.
 
-    The centre must lie inside the window of sites `first` .. `first + width - 1`; tables : from `operator_tuples`.
+    The centre must lie inside the window of sites `first` .. `first + width - 1`; tables : from
+    `operator_tuples`.
     """
     totals = [np.zeros((len(letters), len(letters))) for letters in tables]
     for charge, size in enumerate(state.bonds[first]):
@@ -121,8 +129,11 @@ def reduced_tables(state: ChainState, first: int, tables: Sequence[Integers]) ->
     return totals
 
 
-def _window_amplitudes(state: ChainState, first: int, width: int, charge: int) -> dict[tuple[int, ...], Reals]:
-    """Return psi(p, l, r) for all products p of local operators, l of one charge and r of the charge p leads to."""
+def _window_amplitudes(
+    state: ChainState, first: int, width: int, charge: int
+) -> dict[tuple[int, ...], Reals]:
+    """Return psi(p, l, r) for all products p of local operators, l of one charge and r of the charge p leads
+    to."""
     grading = state.grading
     rows = state.sector_slices(first)[charge]
     partial: dict[tuple[int, ...], tuple[int, Reals | None]] = {(): (charge, None)}
@@ -133,15 +144,21 @@ def _window_amplitudes(state: ChainState, first: int, width: int, charge: int) -
             for step, members in enumerate(grading.members):
                 for copy, local in enumerate(members.tolist()):
                     block = tensor[copy, into[middle] if amplitude is not None else rows, onto[middle ^ step]]
-                    grown[(*letters, local)] = (middle ^ step, block if amplitude is None else amplitude @ block)
+                    grown[(*letters, local)] = (
+                        middle ^ step,
+                        block if amplitude is None else amplitude @ block,
+                    )
         partial = grown
     return {letters: amplitude for letters, (_, amplitude) in partial.items() if amplitude is not None}
 
 
 def bond_entropy(state: ChainState, site: int) -> float:
-    """Return the von Neumann entropy (nats) of the unit vector sigma across the bond right of the centre `site`."""
+    """Return the von Neumann entropy (nats) of the unit vector sigma across the bond right of the centre
+    `site`."""
     tensor = state.tensors[site]
-    flat = [tensor[:, :, block].reshape(-1, block.stop - block.start) for block in state.sector_slices(site + 1)]
+    flat = [
+        tensor[:, :, block].reshape(-1, block.stop - block.start) for block in state.sector_slices(site + 1)
+    ]
     weights = np.concatenate([np.linalg.eigvalsh(part.T @ part) for part in flat])
     weights = weights[weights > 0.0]
     return float(-(weights * np.log(weights)).sum())

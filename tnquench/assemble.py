@@ -1,0 +1,198 @@
+"""From a config to the numbers that the kernels take: settings stop here."""
+
+from __future__ import annotations
+
+from collections.abc import Callable
+from math import sqrt
+from typing import Any
+
+import numpy as np
+from scipy.interpolate import PchipInterpolator
+
+from tnquench.bethe.strings import UnsupportedAnisotropy, supported_nu
+from tnquench.budget.assess import RunSettings
+from tnquench.budget.companions import coarser_steps, shorter_length
+from tnquench.config.rules import default_time_step
+from tnquench.config.schema import Config
+from tnquench.conventions import Reals, bond_positions, site_positions
+from tnquench.evolution.real_time import steps_between
+from tnquench.hydro.prediction import Prediction, predict_smooth, predict_step
+from tnquench.model import profiles
+from tnquench.model.chain import start_terms, xxz_chain
+from tnquench.observables.quench import PREPARATION_SHARE, Quench
+
+#: Error allowed in the start: this fraction of sqrt(discarded weight), the norm that one cut may lose.
+START_SHARE = 0.03
+
+#: The coarser companion needs a step to double: a main run takes at least so many in each interval.
+FEWEST_STEPS = 2
+
+_SHAPES: dict[str, Callable[..., Reals]] = {
+    "uniform": profiles.uniform,
+    "step": profiles.step,
+    "bump": profiles.bump,
+    "wave": profiles.wave,
+}
+
+
+def profile_values(profile: Any, positions: Reals) -> Reals:
+    """Return a profile of the config at every position of a chain; a table gives its central values to a
+    shorter one."""
+    if profile.shape == "table":
+        table = np.asarray(profile.values, dtype=np.float64)
+        cut = (len(table) - len(positions)) // 2
+        return table[cut : len(table) - cut]
+    return _SHAPES[profile.shape](positions, **profile.model_dump(exclude={"shape"}))
+
+
+def start_profiles(config: Config, *, sites: int) -> tuple[Reals, Reals | None]:
+    """Return beta on each bond and beta h on each site (None without a field) of a chain of `sites` sites."""
+    bonds = bond_positions(sites)
+    beta = profile_values(config.start.beta, bonds)
+    if config.start.joint == "separate":
+        beta = np.where(bonds == 0.0, 0.0, beta)
+    field = config.start.beta_field
+    return beta, None if field is None else profile_values(field, site_positions(sites))
+
+
+def build_quench(config: Config, *, weight: float, time_step: float, sites: int | None = None) -> Quench:
+    """Return the quench of a config at a given discarded weight and largest time step, on its own or another
+    length."""
+    sites = sites or config.chain.sites
+    chain = xxz_chain(sites=sites, anisotropy=config.chain.anisotropy, coupling=config.chain.coupling)
+    beta, field = start_profiles(config, sites=sites)
+    return Quench(
+        chain=chain,
+        start_terms=start_terms(
+            chain, beta=beta.tolist(), beta_charge=None if field is None else field.tolist()
+        ),
+        every=config.evolution.every,
+        samples=config.evolution.intervals,
+        steps=max(FEWEST_STEPS, steps_between(every=config.evolution.every, time_step=time_step)),
+        trotter_order=config.evolution.trotter_order,
+        discarded_weight=weight,
+        preparation_weight=PREPARATION_SHARE * weight,
+        preparation_distance=START_SHARE * sqrt(weight),
+        bond_ceiling=config.evolution.bond_ceiling,
+        cutting=config.evolution.cut,
+    )
+
+
+def build_shorter(config: Config, *, weight: float, time_step: float) -> Quench | None:
+    """Return the same quench on a shorter chain, or None if the chain is too short to shorten."""
+    sites = shorter_length(config.chain.sites)
+    return None if sites is None else build_quench(config, weight=weight, time_step=time_step, sites=sites)
+
+
+def build_prediction(config: Config) -> tuple[Prediction | None, str]:
+    """Return the Euler prediction on the run's points, or None and the reason why there is none."""
+    if "euler" not in config.hydrodynamics.levels:
+        return None, "no hydrodynamic level was asked for"
+    try:
+        supported_nu(config.chain.anisotropy)
+    except UnsupportedAnisotropy as refusal:
+        return None, str(refusal)
+    sharp = [_is_sharp(profile) for profile in (config.start.beta, config.start.beta_field)]
+    if any(sharp):
+        if not all(_is_flat_or_sharp(profile) for profile in (config.start.beta, config.start.beta_field)):
+            return None, "a sharp step beside a smooth profile has no prediction in this version"
+        return _step_prediction(config), ""
+    return _smooth_prediction(config), ""
+
+
+def _step_prediction(config: Config) -> Prediction:
+    """Predict two joined halves."""
+    sites = config.chain.sites
+    beta, field = start_profiles(config, sites=sites)
+    ends = {side: (float(beta[side]), 0.0 if field is None else float(field[side])) for side in (0, -1)}
+    centre_beta = _centre_value(config.start.beta)
+    if config.start.joint == "separate":
+        centre_beta = 0.0
+    return predict_step(
+        anisotropy=config.chain.anisotropy,
+        coupling=config.chain.coupling,
+        left=ends[0],
+        right=ends[-1],
+        middle=(
+            centre_beta,
+            0.0 if config.start.beta_field is None else _centre_value(config.start.beta_field),
+        ),
+        times=sample_times(config),
+        sites=site_positions(sites),
+        bonds=bond_positions(sites),
+    )
+
+
+def _smooth_prediction(config: Config) -> Prediction:
+    """Predict a smooth profile by characteristics."""
+    sites = config.chain.sites
+    field = config.start.beta_field
+    return predict_smooth(
+        anisotropy=config.chain.anisotropy,
+        coupling=config.chain.coupling,
+        beta=_smooth_function(config.start.beta, bond_positions(sites)),
+        beta_field=np.zeros_like if field is None else _smooth_function(field, site_positions(sites)),
+        times=sample_times(config),
+        sites=site_positions(sites),
+        bonds=bond_positions(sites),
+    )
+
+
+def sample_times(config: Config) -> Reals:
+    """Return the times of all samples, shape (time,)."""
+    return config.evolution.every * np.arange(config.evolution.intervals + 1, dtype=np.float64)
+
+
+def _centre_value(profile: Any) -> float:
+    """Return a profile's value at x = 0."""
+    return float(profile_values(profile, np.zeros(1))[0])
+
+
+def _is_sharp(profile: Any) -> bool:
+    """Return whether a profile jumps at x = 0."""
+    return (
+        profile is not None
+        and profile.shape == "step"
+        and profile.width == 0.0
+        and profile.left != profile.right
+    )
+
+
+def _is_flat_or_sharp(profile: Any) -> bool:
+    """Return whether a profile is constant on both sides of x = 0."""
+    return profile is None or profile.shape == "uniform" or (profile.shape == "step" and profile.width == 0.0)
+
+
+def _smooth_function(profile: Any, positions: Reals) -> Callable[[Reals], Reals]:
+    """Return a profile as a function of position; a table is interpolated monotonically and flat beyond its
+    ends."""
+    if profile.shape != "table":
+        return lambda x: profile_values(profile, np.asarray(x, dtype=np.float64))
+    if len(positions) == 1:
+        return lambda x: np.full(np.shape(x), float(profile.values[0]))
+    interpolate = PchipInterpolator(positions, np.asarray(profile.values, dtype=np.float64))
+    return lambda x: np.asarray(interpolate(np.clip(x, positions[0], positions[-1])))
+
+
+def default_step(config: Config) -> float:
+    """Return the config's time step, or the default one where an accuracy leaves it open."""
+    return config.evolution.time_step or default_time_step(
+        trotter_order=config.evolution.trotter_order,
+        coupling=config.chain.coupling,
+        anisotropy=config.chain.anisotropy,
+    )
+
+
+def budget_settings(config: Config, quench: Quench) -> RunSettings:
+    """Return what the budget must know of a main run.
+
+    Without a prediction the light cone is drawn at pi/2 J max(1, |D|): no less than the spinon velocity
+    (pi/2) J sin(g)/g <= (pi/2) J of the gapless chain (J. des Cloizeaux and J. J. Pearson, Phys. Rev. 128,
+    2131 (1962), at D = 1; J. D. Johnson, S. Krinsky and B. M. McCoy, Phys. Rev. A 8, 2526 (1973)).
+    """
+    return RunSettings(
+        step_ratio=quench.steps / coarser_steps(quench.steps),
+        trotter_order=quench.trotter_order,
+        resolve_at=config.budget.resolve_at,
+        fallback_velocity=config.chain.coupling * max(1.0, abs(config.chain.anisotropy)) * 0.5 * np.pi,
+    )

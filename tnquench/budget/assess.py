@@ -1,0 +1,121 @@
+"""The budget of a whole run: every observable's sources from the main run, its companions and the
+prediction."""
+
+from __future__ import annotations
+
+from collections.abc import Mapping
+from dataclasses import dataclass
+
+import numpy as np
+
+from tnquench.budget import sources
+from tnquench.budget.companions import COARSE, LOOSE, LOOSER, SHORT, WEIGHT_RATIO
+from tnquench.budget.verdict import ObservableBudget, judge_observable, light_cone_window
+from tnquench.conventions import OBSERVABLE_PLACES, Reals
+from tnquench.observables.quench import QuantumRecord
+
+
+@dataclass(frozen=True)
+class PredictedLevel:
+    """A prediction as the budget needs it: values, its own errors, and the light cone for the windows."""
+
+    fields: Mapping[str, Reals]
+    grid_error: Mapping[str, Reals]
+    strings_error: Mapping[str, Reals]
+    light_cone: tuple[float, float]
+
+
+@dataclass(frozen=True)
+class RunSettings:
+    """What the budget must know of the main run: ratio of the coarser to the main step, its order, k, |v| at
+    most."""
+
+    step_ratio: float
+    trotter_order: int
+    resolve_at: float
+    fallback_velocity: float
+
+
+def quantum_sources(
+    name: str, main: QuantumRecord, companions: Mapping[str, QuantumRecord], settings: RunSettings
+) -> dict[str, Reals]:
+    """Return the sources of error of the quantum side of one observable, each of shape (time, place).
+
+    With no companions at all truncation, step and length cannot be estimated and are nan.
+    """
+    values = main.fields[name]
+    found = {
+        "preparation": sources.preparation(start_error=main.start_error[name], shape=values.shape),
+        "arithmetic": sources.arithmetic(cuts=main.cuts, norm=main.norms[name], shape=values.shape),
+    }
+    if not companions:
+        unknown = np.full(values.shape, np.nan)
+        return found | {"truncation": unknown, "time_step": unknown, "length": unknown}
+    loose, looser = companions[LOOSE].fields[name], companions[LOOSER].fields[name]
+    found["truncation"] = sources.truncation(main=values, loose=loose, looser=looser, ratio=WEIGHT_RATIO)
+    found["time_step"] = sources.time_step(
+        fine=loose,
+        coarse=companions[COARSE].fields[name],
+        step_ratio=settings.step_ratio,
+        order=settings.trotter_order,
+    )
+    if SHORT in companions:
+        noise = sources.WIDENING * sources.local_scale(loose - values) + found["truncation"]
+        found["length"] = sources.length(long=loose, short=companions[SHORT].fields[name], noise=noise)
+    return found
+
+
+def quantum_error(
+    main: QuantumRecord, companions: Mapping[str, QuantumRecord], settings: RunSettings
+) -> float:
+    """Return the largest error that weight, step, start and rounding leave on any observable, anywhere and
+    ever.
+
+    The influence of the ends is left out: no weight or step can reduce it.
+    """
+    worst = 0.0
+    for name in main.fields:
+        found = quantum_sources(name, main, companions, settings)
+        total = sum(values for source, values in found.items() if source != "length")
+        worst = max(worst, float(np.max(total)))
+    return worst
+
+
+def assess(
+    main: QuantumRecord,
+    companions: Mapping[str, QuantumRecord],
+    predictions: Mapping[str, PredictedLevel],
+    *,
+    positions: Mapping[str, Reals],
+    settings: RunSettings,
+) -> dict[str, ObservableBudget]:
+    """Return the budget of every observable.
+
+    predictions : by level; positions : of the "site"s and "bond"s. Where several levels are judged the larger
+    error of the predictions counts. Without a prediction the light-cone window follows
+    settings.fallback_velocity.
+    """
+    cones = [level.light_cone for level in predictions.values()]
+    velocity = settings.fallback_velocity
+    cone = (min(c[0] for c in cones), max(c[1] for c in cones)) if cones else (-velocity, velocity)
+    budgets = {}
+    for name, place in OBSERVABLE_PLACES.items():
+        found = quantum_sources(name, main, companions, settings)
+        values = main.fields[name]
+        for level in predictions.values():
+            found["prediction_grid"] = np.maximum(found.get("prediction_grid", 0.0), level.grid_error[name])
+            found["strings"] = np.maximum(found.get("strings", 0.0), level.strings_error[name])
+            start = np.abs(values[0] - level.fields[name][0])
+            found["initial_gradient"] = np.broadcast_to(
+                np.maximum(found.get("initial_gradient", 0.0), start), values.shape
+            )
+        budgets[name] = judge_observable(
+            quantum=values,
+            sources=found,
+            bound=sources.truncation_bound(angle=main.angle, norm=main.norms[name], shape=values.shape),
+            predictions={level: prediction.fields[name] for level, prediction in predictions.items()},
+            window=light_cone_window(times=main.times, positions=positions[place], light_cone=cone),
+            times=main.times,
+            resolve_at=settings.resolve_at,
+        )
+    return budgets

@@ -1,0 +1,239 @@
+"""Cheap pilot runs: what a run will cost, and which weight and time step reach a given accuracy.
+
+Growth law used to extrapolate (measured on this engine, D = 0.5, beta 0.5 | 2, weights 1e-6 to 1e-10, t up to
+10): the cube root of the bond dimension grows linearly with time and with the logarithm of the discarded
+weight.
+"""
+
+from __future__ import annotations
+
+import time
+from collections.abc import Callable
+from contextlib import suppress
+from dataclasses import dataclass, replace
+from math import log10
+
+import numpy as np
+import psutil
+from scipy.optimize import nnls
+
+from tnquench.budget import sources
+from tnquench.budget.companions import coarser_steps
+from tnquench.conventions import Reals
+from tnquench.observables.quench import Progress, QuantumRecord, Quench, simulate
+
+#: Weights of the pilot runs, the looser first; they never go below ten times the weight of the run they stand
+#: for.
+FORECAST_WEIGHTS = (1e-6, 1e-7)
+ACCURACY_WEIGHTS = (1e-4, 1e-5, 1e-6)
+
+#: Shares of the requested accuracy given to truncation and to the time step.
+TRUNCATION_SHARE, STEP_SHARE = 0.5, 0.25
+
+#: Range of weights and, in units of the sampling interval, of time steps that the program chooses from.
+TIGHTEST_WEIGHT, LOOSEST_WEIGHT = 1e-15, 1e-5
+SHORTEST_STEP, LONGEST_STEP = 0.01, 0.5
+
+PILOT_BOND_FLOOR = 4
+
+
+@dataclass(frozen=True)
+class Forecast:
+    """Estimated cost of a run.
+
+    times (time,), bond_dimension (time,) : largest bond dimension at each sample of the main run
+    main_seconds, companion_seconds : processor time of the main run and of all its companions on one core
+    memory_bytes : peak of the main run; state_bytes : its tensors at the end
+    pilot_seconds, pilot_time : what the pilot took and the time it reached
+    """
+
+    times: Reals
+    bond_dimension: Reals
+    main_seconds: float
+    companion_seconds: float
+    memory_bytes: float
+    state_bytes: float
+    pilot_seconds: float
+    pilot_time: float
+
+
+class _TimeIsUpError(Exception):
+    """The pilot has used its time."""
+
+
+@dataclass
+class _Pilot:
+    """What a pilot run showed: dimension of each bond (bond,) at each sample, and every half layer's cost."""
+
+    times: list[float]
+    bonds: list[Reals]
+    layer_cubes: list[float]
+    layer_seconds: list[float]
+    preparation_seconds: float = 0.0
+
+
+def forecast_quench(quench: Quench, *, companions: dict[str, Quench], seconds: float = 15.0) -> Forecast:
+    """Estimate the cost of a quench and its companions from two short pilot runs of loose weight.
+
+    seconds : most that the second pilot may take; where it stops early its bonds are extrapolated in time
+    """
+    began = time.perf_counter()
+    weights = [
+        max(weight, ratio * quench.discarded_weight)
+        for weight, ratio in zip(FORECAST_WEIGHTS, (100, 10), strict=True)
+    ]
+    pilots = [
+        _pilot_run(replace(quench, discarded_weight=w, bond_floor=PILOT_BOND_FLOOR), seconds) for w in weights
+    ]
+    overhead, per_cube = _cost_law(pilots)
+    samples = quench.every * np.arange(quench.samples + 1, dtype=np.float64)
+
+    def cost(run: Quench) -> tuple[float, Reals]:
+        bonds = _extrapolate(pilots, weights, samples, run)
+        layers = run.steps * (10 if run.trotter_order == 4 else 2) + 1
+        cuts = layers * (run.chain.sites - 1) / 2
+        cubes = layers / 2 * np.power(0.5 * (bonds[1:] + bonds[:-1]), 3).sum()
+        return pilots[0].preparation_seconds + cuts * run.samples * overhead + per_cube * cubes, bonds
+
+    main, bonds = cost(quench)
+    largest = bonds.max(axis=1)
+    state = _state_bytes(bonds[-1])
+    return Forecast(
+        times=samples,
+        bond_dimension=largest,
+        main_seconds=main,
+        companion_seconds=sum(cost(run)[0] for run in companions.values()),
+        memory_bytes=_process_bytes() + state + WORKSPACE_ARRAYS * 8.0 * float(largest[-1]) ** 2,
+        state_bytes=state,
+        pilot_seconds=time.perf_counter() - began,
+        pilot_time=pilots[1].times[-1],
+    )
+
+
+#: Square matrices of the largest bond dimension held at once beside the state: the two-site tensor and its
+#: gated copy, blocks, guesses, frames, images and results of a cut (four sectors of a quarter of the size
+#: count as one each).
+WORKSPACE_ARRAYS = 24.0
+
+
+def _process_bytes() -> float:
+    """Return the memory this process holds now: interpreter and libraries."""
+    return float(psutil.Process().memory_info().rss)
+
+
+def _state_bytes(bonds: Reals) -> float:
+    """Return the bytes of a chain with these inner bond dimensions in the finest grading: one dense matrix a
+    site."""
+    ends = np.concatenate(([1.0], bonds, [1.0]))
+    return float(8.0 * (ends[:-1] * ends[1:]).sum())
+
+
+def _pilot_run(quench: Quench, seconds: float) -> _Pilot:
+    """Run a quench for at most so many seconds and keep its bonds and costs."""
+    pilot = _Pilot([], [], [], [])
+    began = time.perf_counter()
+
+    def watch(progress: Progress) -> None:
+        if not pilot.times:
+            pilot.preparation_seconds = time.perf_counter() - began - progress.layer_seconds
+        sizes = progress.bond_dimensions.astype(np.float64)
+        pilot.times.append(progress.time)
+        pilot.bonds.append(sizes)
+        pilot.layer_cubes.append(float((sizes**3).sum()) / 2.0)
+        pilot.layer_seconds.append(progress.layer_seconds)
+        if time.perf_counter() - began > seconds and len(pilot.times) > 8:
+            raise _TimeIsUpError
+
+    with suppress(_TimeIsUpError):
+        simulate(quench, report=watch)
+    return pilot
+
+
+def _cost_law(pilots: list[_Pilot]) -> tuple[float, float]:
+    """Fit seconds of a half layer = cuts * overhead + per_cube * sum of half its bonds' cubes; return both
+    constants."""
+    cubes = np.concatenate([pilot.layer_cubes for pilot in pilots])
+    seconds = np.concatenate([pilot.layer_seconds for pilot in pilots])
+    cuts = np.full(len(cubes), len(pilots[0].bonds[0]) / 2.0)
+    typical = seconds <= 10.0 * np.median(seconds)
+    (overhead, per_cube), _ = nnls(np.column_stack([cuts, cubes])[typical], seconds[typical])
+    return float(overhead), float(per_cube)
+
+
+def _extrapolate(pilots: list[_Pilot], weights: list[float], samples: Reals, run: Quench) -> Reals:
+    """Return the expected dimension of each bond at each sample, shape (time, bond), for the weight of
+    `run`."""
+    loose, tight = ([np.cbrt(_bonds_at(pilot, t)) for t in samples] for pilot in pilots)
+    decades = log10(weights[1] / run.discarded_weight) / max(log10(weights[0] / weights[1]), 1e-9)
+    cube_roots = np.array(
+        [b + max(decades, -1.0) * np.maximum(b - a, 0.0) for a, b in zip(loose, tight, strict=True)]
+    )
+    bonds = cube_roots**3
+    inner = np.arange(1, bonds.shape[1] + 1)
+    depth = np.minimum(np.minimum(inner, inner[::-1]), 15)
+    return np.asarray(np.minimum(np.minimum(np.maximum(bonds, run.bond_floor), run.bond_ceiling), 4.0**depth))
+
+
+def _bonds_at(pilot: _Pilot, moment: float) -> Reals:
+    """Return a pilot's bonds at a time; beyond its end the profile widens and its cube root grows
+    linearly."""
+    index = int(np.searchsorted(pilot.times, moment - 1e-9))
+    if index < len(pilot.times):
+        return pilot.bonds[index]
+    stretch = moment / pilot.times[-1]
+    last = pilot.bonds[-1]
+    middle = 0.5 * (len(last) - 1)
+    widened = np.interp(middle + (np.arange(len(last)) - middle) / stretch, np.arange(len(last)), last)
+    start = pilot.bonds[0]
+    return np.asarray((np.cbrt(start) + (np.cbrt(widened) - np.cbrt(start)) * stretch) ** 3)
+
+
+def choose_settings(
+    build: Callable[[float, float], Quench], *, accuracy: float, time_step: float, fixed_step: bool
+) -> tuple[float, float]:
+    """Choose discarded weight and time step for an accuracy on every observable, by pilot runs of loose
+    weight.
+
+    build : (weight, time step) -> quench; time_step : the pilots' step; fixed_step : keep it
+    Returns (weight, time step): truncation is to stay under half the accuracy, the step's error under a
+    quarter.
+    """
+    looser, loose, main = (simulate(build(weight, time_step)) for weight in ACCURACY_WEIGHTS)
+    weight = _weight_for(looser, loose, main, TRUNCATION_SHARE * accuracy)
+    if fixed_step:
+        return weight, time_step
+    quench = build(ACCURACY_WEIGHTS[-1], time_step)
+    steps = coarser_steps(quench.steps)
+    coarse = simulate(replace(quench, steps=steps))
+    error = max(
+        float(
+            sources.time_step(
+                fine=main.fields[name],
+                coarse=coarse.fields[name],
+                step_ratio=quench.steps / steps,
+                order=quench.trotter_order,
+            ).max()
+        )
+        for name in main.fields
+    )
+    wanted = quench.time_step * (STEP_SHARE * accuracy / max(error, 1e-300)) ** (1.0 / quench.trotter_order)
+    return weight, float(np.clip(wanted, SHORTEST_STEP * quench.every, LONGEST_STEP * quench.every))
+
+
+def _weight_for(looser: QuantumRecord, loose: QuantumRecord, main: QuantumRecord, allowed: float) -> float:
+    """Extrapolate the truncation error of three pilot runs to the weight at which it is as small as
+    allowed."""
+    ratio = ACCURACY_WEIGHTS[1] / ACCURACY_WEIGHTS[2]
+    weight = LOOSEST_WEIGHT
+    for name, values in main.fields.items():
+        triple = {"main": values, "loose": loose.fields[name], "looser": looser.fields[name]}
+        error = float(sources.truncation(**triple, ratio=ratio).max())
+        if error <= 1e-13:
+            continue
+        power = float(
+            sources.weight_power(triple["looser"] - triple["loose"], triple["loose"] - values, ratio=ratio)[
+                -1, 0
+            ]
+        )
+        weight = min(weight, ACCURACY_WEIGHTS[2] * (allowed / error) ** (1.0 / max(power, 0.4)))
+    return float(np.clip(weight, TIGHTEST_WEIGHT, LOOSEST_WEIGHT))

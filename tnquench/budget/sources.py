@@ -1,0 +1,113 @@
+"""The sources of numerical error of one observable, each an array of the observable's shape (time, place).
+
+Two runs that differ by truncation alone differ by a noise that is irregular in space and time; a single
+difference can vanish by chance where the error does not. Estimates are therefore local root mean squares over
+a small neighbourhood, widened by a factor that makes them cover nearly all points, as the tests against exact
+solutions check.
+"""
+
+from __future__ import annotations
+
+import numpy as np
+from scipy.ndimage import uniform_filter
+
+from tnquench.conventions import Reals
+
+#: Neighbourhood of a local root mean square: samples in time, places in space.
+NEIGHBOURHOOD = (3, 9)
+
+#: A normal error stays within so many standard deviations at 99 % of the points.
+WIDENING = 2.6
+
+#: Range in which the power of the discarded weight is believed; outside it the nearer end is used.
+LEAST_POWER, LARGEST_POWER = 0.25, 1.0
+
+#: Rounding unit of double precision.
+ROUNDING = float(np.finfo(np.float64).eps)
+
+
+def local_scale(difference: Reals) -> Reals:
+    """Return the root mean square of a difference (time, place) over the neighbourhood of each point.
+
+    The sample at t = 0 is left out of its neighbours' averages: no cut has been made there and it would
+    dilute them.
+    """
+    squares = np.square(difference)
+    scale = np.zeros_like(squares)
+    if len(squares) > 1:
+        scale[1:] = uniform_filter(squares[1:], size=NEIGHBOURHOOD, mode="nearest")
+    scale[0] = uniform_filter(squares[0], size=NEIGHBOURHOOD[1], mode="nearest")
+    return np.sqrt(np.maximum(scale, 0.0))
+
+
+def weight_power(looser: Reals, loose: Reals, *, ratio: float) -> Reals:
+    """Return the power p of the discarded weight with which an error grows, at each time, shape (time, 1).
+
+    looser, loose : differences (time, place) O(r^2 w) - O(r w) and O(r w) - O(w); for an error c w^p their
+    norms stand in the ratio r^p. Neighbouring samples are averaged; the result is kept between LEAST_POWER
+    and LARGEST_POWER.
+    """
+    wide = uniform_filter(np.square(looser).mean(axis=1), size=NEIGHBOURHOOD[0], mode="nearest")
+    narrow = uniform_filter(np.square(loose).mean(axis=1), size=NEIGHBOURHOOD[0], mode="nearest")
+    tiny = np.finfo(np.float64).tiny
+    power = 0.5 * np.log(np.maximum(wide, tiny) / np.maximum(narrow, tiny)) / np.log(ratio)
+    return np.asarray(np.clip(power, LEAST_POWER, LARGEST_POWER))[:, None]
+
+
+def truncation(*, main: Reals, loose: Reals, looser: Reals, ratio: float) -> Reals:
+    """Estimate the truncation error of the main run from runs at r and r^2 times its weight.
+
+    If the error is c w^p, then O(r w) - O(w) = c w^p (r^p - 1); the power p is fitted from both differences.
+    """
+    power = weight_power(looser - loose, loose - main, ratio=ratio)
+    return np.asarray(WIDENING * local_scale(loose - main) / (ratio**power - 1.0))
+
+
+def time_step(*, fine: Reals, coarse: Reals, step_ratio: float, order: int) -> Reals:
+    """Estimate the Trotter error of the main step from runs of equal weight at the main and a coarser step.
+
+    For an error c dt^n, O(rho dt) - O(dt) = c dt^n (rho^n - 1). The runs' different truncation noise is
+    contained in the difference, so this is an overestimate where truncation dominates.
+    """
+    return np.asarray(WIDENING * local_scale(coarse - fine) / (step_ratio**order - 1.0))
+
+
+def length(*, long: Reals, short: Reals, noise: Reals) -> Reals:
+    """Estimate the influence of the ends from a run of equal weight on a shorter chain with the same centre.
+
+    long : (time, place); short : (time, fewer places); noise : truncation error of these two runs at each
+    point of the long chain, below which a difference says nothing. A point of the long chain takes the
+    difference found in the short chain at the same distance from the end (the innermost one for points
+    further inside); that difference is the influence of the short chain's end, and so at least that of the
+    long chain's.
+    """
+    missing = (long.shape[1] - short.shape[1]) // 2
+    inner = slice(missing, missing + short.shape[1])
+    excess = np.maximum(np.abs(short - long[:, inner]) - np.sqrt(2.0) * noise[:, inner], 0.0)
+    depth = np.minimum(np.arange(long.shape[1]), np.arange(long.shape[1])[::-1])
+    from_left = np.arange(long.shape[1]) == depth
+    deepest = (short.shape[1] - 1) // 2
+    reach = np.minimum(depth, deepest)
+    return np.asarray(excess[:, np.where(from_left, reach, short.shape[1] - 1 - reach)])
+
+
+def preparation(*, start_error: float, shape: tuple[int, int]) -> Reals:
+    """Return the largest error of the observable (and of its current or density) in the start, for every
+    time."""
+    return np.full(shape, start_error)
+
+
+def arithmetic(*, cuts: Reals, norm: float, shape: tuple[int, int]) -> Reals:
+    """Return the rounding error as one rounding unit a cut, all of the same sign; cuts : made so far, shape
+    (time,)."""
+    return np.asarray(np.broadcast_to(ROUNDING * norm * (1.0 + cuts[:, None]), shape).copy())
+
+
+def truncation_bound(*, angle: Reals, norm: float, shape: tuple[int, int]) -> Reals:
+    """Return the rigorous bound 2 ||O|| sin(min(sum of arcsin sqrt(w), pi/2)) on the truncation error.
+
+    angle : sum over all cuts up to each time, shape (time,). Each cut in exact canonical form turns the unit
+    vector by arcsin sqrt(w) and angles between unit vectors obey the triangle inequality.
+    """
+    bound = 2.0 * norm * np.sin(np.minimum(angle, 0.5 * np.pi))
+    return np.asarray(np.broadcast_to(bound[:, None], shape).copy())

@@ -1,0 +1,123 @@
+"""The budget of one observable: all sources, their sum, the deviation from each prediction and the
+verdict."""
+
+from __future__ import annotations
+
+from collections.abc import Mapping
+from dataclasses import dataclass
+
+import numpy as np
+
+from tnquench.conventions import ERROR_SOURCES, PHYSICAL_SOURCES, Reals
+
+#: Kind of each source: an estimate from companions or refinement, or a bound that holds without them.
+SOURCE_KINDS: dict[str, str] = {
+    "truncation": "estimate",
+    "time_step": "estimate",
+    "preparation": "estimate",
+    "length": "estimate",
+    "arithmetic": "estimate",
+    "prediction_grid": "estimate",
+    "strings": "estimate",
+    "initial_gradient": "physics",
+}
+
+
+@dataclass(frozen=True)
+class LevelVerdict:
+    """The comparison with one hydrodynamic level.
+
+    deviation (time, place): quantum minus prediction; resolved (time, place): where it exceeds the numerical
+    error deviation_norm (time,): root mean square over the light-cone window; resolved_share (time,): share
+    of its points first_resolved_time: first sample with a resolved point, nan if there is none
+    """
+
+    deviation: Reals
+    resolved: np.ndarray
+    deviation_norm: Reals
+    resolved_share: Reals
+    first_resolved_time: float
+
+
+@dataclass(frozen=True)
+class ObservableBudget:
+    """Errors of one observable: error (source, time, place), their numerical sum and the rigorous truncation
+    bound.
+
+    numerical_norm (time,): root mean square over the light-cone window; dominant_source (time,): index of the
+    largest
+    """
+
+    error: Reals
+    numerical: Reals
+    bound: Reals
+    numerical_norm: Reals
+    dominant_source: np.ndarray
+    levels: dict[str, LevelVerdict]
+
+
+def light_cone_window(*, times: Reals, positions: Reals, light_cone: tuple[float, float]) -> np.ndarray:
+    """Return which points (time, place) the fastest excitations from the middle have reached, one lattice
+    spacing wider.
+
+    light_cone : leftmost and rightmost velocity; a window never has fewer than the points within one and a
+    half spacings of the middle.
+    """
+    left, right = light_cone
+    clock, place = times[:, None], positions[None, :]
+    return np.asarray((place >= left * clock - 1.5) & (place <= right * clock + 1.5))
+
+
+def window_norm(values: Reals, window: np.ndarray) -> Reals:
+    """Return the root mean square of values (time, place) over each time's window, shape (time,)."""
+    return np.asarray(np.sqrt((np.square(values) * window).sum(axis=1) / np.maximum(window.sum(axis=1), 1)))
+
+
+def judge_observable(
+    *,
+    quantum: Reals,
+    sources: Mapping[str, Reals],
+    bound: Reals,
+    predictions: Mapping[str, Reals],
+    window: np.ndarray,
+    times: Reals,
+    resolve_at: float,
+) -> ObservableBudget:
+    """Sum the sources of one observable and give the verdict on each prediction.
+
+    quantum, every source, bound, every prediction : (time, place); sources missing from the mapping count as
+    zero
+    window : (time, place) of bool; resolve_at : k, a deviation counts as resolved beyond k times the
+    numerical error
+    """
+    error = np.stack([np.broadcast_to(sources.get(name, 0.0), quantum.shape) for name in ERROR_SOURCES])
+    numerical_rows = [index for index, name in enumerate(ERROR_SOURCES) if name not in PHYSICAL_SOURCES]
+    numerical = error[numerical_rows].sum(axis=0)
+    norms = np.stack([window_norm(error[row], window) for row in numerical_rows])
+    return ObservableBudget(
+        error=error,
+        numerical=numerical,
+        bound=bound,
+        numerical_norm=window_norm(numerical, window),
+        dominant_source=np.array(numerical_rows)[norms.argmax(axis=0)],
+        levels={
+            level: _level_verdict(quantum - prediction, numerical, window, times, resolve_at)
+            for level, prediction in predictions.items()
+        },
+    )
+
+
+def _level_verdict(
+    deviation: Reals, numerical: Reals, window: np.ndarray, times: Reals, resolve_at: float
+) -> LevelVerdict:
+    """Compare a deviation with k times the numerical error, point by point."""
+    resolved = np.abs(deviation) > resolve_at * numerical
+    inside = resolved & window
+    seen = inside.any(axis=1)
+    return LevelVerdict(
+        deviation=deviation,
+        resolved=resolved,
+        deviation_norm=window_norm(deviation, window),
+        resolved_share=inside.sum(axis=1) / np.maximum(window.sum(axis=1), 1),
+        first_resolved_time=float(times[seen.argmax()]) if seen.any() else float("nan"),
+    )

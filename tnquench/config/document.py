@@ -1,0 +1,104 @@
+"""Writes settings: the effective config as TOML, and the reference page of every setting."""
+
+from __future__ import annotations
+
+from collections.abc import Iterator
+from textwrap import dedent
+
+from pydantic.fields import FieldInfo
+
+from tnquench.config.notation import written
+from tnquench.config.profile import PROFILE_UNIT, SHAPES
+from tnquench.config.schema import LATER, LATER_CHOICES, SECTIONS, Config
+from tnquench.config.setting import Section, note
+from tnquench.config.wording import allowed, alternatives
+
+_VALUES_A_LINE = 8
+
+_INTRODUCTION = """\
+    # Settings
+
+    A config is a TOML file. An unknown name is an error, and all problems of a config are reported at once.
+    hbar = k_B = lattice spacing = 1. Energies are in the unit in which the coupling is given, times in its
+    inverse: with `coupling = 1` these are J and 1/J, as the tables below write them. Another coupling
+    rescales no other number.
+    """
+
+
+def effective_toml(config: Config) -> str:
+    """Return every setting of `config`, defaults included, as TOML that loads back to an equal config.
+
+    A setting without a value (accuracy where a weight is given, say) is left out.
+    """
+    lines = [f"title = {written(config.title)}"]
+    for name in SECTIONS:
+        lines += ["", *_table(name, getattr(config, name))]
+    return "\n".join(lines) + "\n"
+
+
+def settings_page() -> str:
+    """Return the reference page of every setting, as Markdown made from the schema."""
+    parts = [dedent(_INTRODUCTION), *_section_page("Top of the file", Config)]
+    for name, section in SECTIONS.items():
+        parts += _section_page(f"[{name}]", section, header=f"[{name}]\n")
+        parts += _later(name)
+    parts.append(
+        "## Profiles: [start.beta] and [start.beta_field]\n\n"
+        "`beta` has one value a bond, in units of 1/J; `beta_field` has one value a site, a pure number. "
+        "Positions x count from the middle of the chain.\n"
+    )
+    for shape, schema in SHAPES.items():
+        parts += _section_page(f'shape = "{shape}"', schema, level=3, header="[start.beta]\n")
+    return "\n".join(parts)
+
+
+def _table(name: str, section: Section) -> Iterator[str]:
+    yield f"[{name}]"
+    values = {key: getattr(section, key) for key in type(section).model_fields}
+    for key, value in values.items():
+        if isinstance(value, tuple) and len(value) > _VALUES_A_LINE:
+            rows = [value[first : first + _VALUES_A_LINE] for first in range(0, len(value), _VALUES_A_LINE)]
+            yield f"{key} = ["
+            yield from (f"    {', '.join(written(entry) for entry in row)}," for row in rows)
+            yield "]"
+        elif value is not None and not isinstance(value, Section):
+            yield f"{key} = {written(value)}"
+    for key, value in values.items():
+        if isinstance(value, Section):
+            yield ""
+            yield from _table(f"{name}.{key}", value)
+
+
+def _section_page(heading: str, section: type[Section], *, level: int = 2, header: str = "") -> Iterator[str]:
+    yield f"{'#' * level} {heading}\n"
+    yield f"{' '.join((section.__doc__ or '').split())}\n"
+    yield "| setting | allowed | default | unit | meaning |\n|---|---|---|---|---|"
+    for key, field in section.model_fields.items():
+        if key not in SECTIONS:
+            cells = (f"`{key}`", str(allowed(field)), _default(field), _unit(field), field.description or "")
+            yield f"| {' | '.join(cell.replace('|', chr(92) + '|') for cell in cells)} |"
+    yield f"\n```toml\n{header}{section.EXAMPLE}\n```\n"
+
+
+def _later(section: str) -> Iterator[str]:
+    """Say which choices and settings of a section are not built yet."""
+    belongs = f"{section}."
+    choices = [
+        f'"{name}"' for key, names in LATER_CHOICES.items() if key.startswith(belongs) for name in names
+    ]
+    settings = [f"`{key.removeprefix(belongs)}`" for key in LATER if key.startswith(belongs)]
+    if choices or settings:
+        yield f"Not available in this version: {alternatives([*choices, *settings], last='and')}.\n"
+
+
+def _default(field: FieldInfo) -> str:
+    if rule := note(field, "default_rule"):
+        return str(rule)
+    if field.is_required():
+        return "must be given"
+    return "none" if field.default is None else f"`{written(field.default)}`"
+
+
+def _unit(field: FieldInfo) -> str:
+    unit = note(field, "unit")
+    return "that of the profile" if unit == PROFILE_UNIT else str(unit)

@@ -1,0 +1,142 @@
+"""Reads a config: TOML in, a checked `Config` or every problem at once out."""
+
+from __future__ import annotations
+
+import re
+import tomllib
+from collections.abc import Mapping, Sequence
+from pathlib import Path
+from typing import Any
+
+from pydantic import ValidationError
+from pydantic_core import ErrorDetails
+
+from tnquench.config.file_text import UnreadableFileError, read_text
+from tnquench.config.hints import nearest
+from tnquench.config.messages import problem_lines
+from tnquench.config.notation import shortened, shown
+from tnquench.config.rules import Unusable, conflicts
+from tnquench.config.schema import PROFILES, SECTIONS, Config
+from tnquench.config.table import read_table
+from tnquench.errors import InputError
+
+_POSITION = re.compile(r" \(at line (\d+), column (\d+)\)$| \(at end of document\)$")
+
+
+def load_config(path: str | Path) -> Config:
+    """Read the config in a TOML file.
+
+    path : the file; a table that it names is sought beside it or below
+    Returns the settings with all defaults filled in; a table file has become its values.
+    Raises InputError with one line per problem, all problems at once.
+    """
+    file = Path(path)
+    try:
+        text = read_text(file)
+    except (UnreadableFileError, ValueError) as error:
+        raise InputError(str(path), [f"{error}{_neighbour(file)}"]) from error
+    return read_config(text, subject=str(path), folder=file.parent)
+
+
+def read_config(text: str, *, subject: str, folder: Path | None = None) -> Config:
+    """Read a config from TOML text.
+
+    subject : what messages call it
+    folder  : where table files are sought; None refuses them
+    Returns and raises as `load_config`.
+    """
+    tables, problems = _with_table_files(_parsed(text, subject=subject), folder=folder)
+    errors: Sequence[ErrorDetails] = ()
+    try:
+        config = Config.model_validate(tables)
+    except ValidationError as error:
+        errors = [entry for entry in error.errors(include_url=False) if not _is_elsewhere(entry, tables)]
+    else:
+        if not problems:
+            return config
+    raise InputError(subject, [*problem_lines(errors), *problems, *conflicts(_usable(tables, errors))])
+
+
+def _parsed(text: str, *, subject: str) -> dict[str, Any]:
+    try:
+        return tomllib.loads(text)
+    except tomllib.TOMLDecodeError as error:
+        problem = _syntax_problem(str(error), text)
+    except RecursionError:
+        problem = "not a config: brackets nested too deeply"
+    except ValueError:  # a number with thousands of digits, a date that does not exist
+        problem = "not valid TOML: holds a number or a date that cannot be read"
+    raise InputError(subject, [problem])
+
+
+def _syntax_problem(message: str, text: str) -> str:
+    """Return a parser's complaint as line, column, complaint and the line itself."""
+    position = _POSITION.search(message)
+    complaint = message[: position.start()] if position else message
+    complaint = complaint[:1].lower() + complaint[1:]
+    if not position or position[1] is None:
+        return f"at the end of the file: not valid TOML ({complaint})"
+    lines = text.replace("\r\n", "\n").split("\n")
+    line = shortened(lines[int(position[1]) - 1].strip())
+    advice = '; text needs quotes, as in shape = "step"' if complaint == "invalid value" else ""
+    return f"line {position[1]}, column {position[2]}: not valid TOML ({complaint}{advice}): {shown(line)}"
+
+
+def _with_table_files(tables: dict[str, Any], *, folder: Path | None) -> tuple[dict[str, Any], list[str]]:
+    """Put the values of table files in their place; return the tables and what is wrong with the files."""
+    start, problems = tables.get("start"), []
+    if not isinstance(start, dict):
+        return tables, []
+    filled = dict(start)
+    for name in PROFILES:
+        profile: Any = start.get(name)
+        if not _names_file(profile):
+            continue
+        values, complaints = read_table(profile["file"], folder=folder)
+        place = f"[start.{name}] file = {shown(profile['file'])}"
+        problems += [f"{place}: {complaint}" for complaint in complaints]
+        if not complaints:
+            filled[name] = {**{key: profile[key] for key in profile if key != "file"}, "values": values}
+    return {**tables, "start": filled}, problems
+
+
+def _names_file(profile: object) -> bool:
+    if not isinstance(profile, dict) or profile.get("shape") != "table":
+        return False
+    return "values" not in profile and isinstance(profile.get("file"), str)
+
+
+def _is_elsewhere(error: ErrorDetails, tables: Mapping[str, Any]) -> bool:
+    """Whether `conflicts` tells of an error (of the whole config) or `read_table` (of an unread file)."""
+    location = error["loc"]
+    if not location:
+        return True
+    is_values = error["type"] == "missing" and location[0] == "start" and location[2:] == ("table", "values")
+    return is_values and "file" in tables["start"][location[1]]
+
+
+def _usable(tables: Mapping[str, Any], errors: Sequence[ErrorDetails]) -> dict[str, Any]:
+    """Return every setting by dotted name, with `Unusable` for those that are wrong or missing."""
+    wrong = {error["loc"][:2] for error in errors if error["loc"][0] != "start" or len(error["loc"]) == 2}
+    settings: dict[str, Any] = {}
+    for section, schema in SECTIONS.items():
+        table = tables.get(section, {})
+        for key, field in schema.model_fields.items():
+            if not isinstance(table, Mapping) or (section, key) in wrong:
+                value: Any = Unusable()
+            elif key in table:
+                value = table[key]
+            else:
+                value = Unusable() if field.is_required() else field.get_default()
+            settings[f"{section}.{key}"] = value
+    return settings
+
+
+def _neighbour(file: Path) -> str:
+    """Return a hint at a config of similar name beside a file that does not exist."""
+    try:
+        names = [] if file.exists() else [entry.name for entry in file.parent.glob("*.toml")]
+    except (OSError, ValueError):
+        return ""
+    meant = nearest(file.name, names)
+    return f"; did you mean {file.parent / meant}?" if meant else ""

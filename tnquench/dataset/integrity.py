@@ -1,0 +1,197 @@
+"""Is a dataset what it was when it was written, and all of it there?"""
+
+from __future__ import annotations
+
+import json
+from collections.abc import Iterator, Mapping
+from pathlib import Path
+
+import numpy as np
+
+from tnquench.dataset.contents import Contents, StoredVariable, digest_of_contents
+from tnquench.dataset.storage import DamagedFile, decode, locate, read_bytes
+from tnquench.dataset.variables import (
+    COORDINATES,
+    FORMAT_VERSION,
+    JSON_ATTRIBUTES,
+    LEVELS,
+    OBSERVABLES,
+    OWN_COORDINATES,
+    Variable,
+    attributes_of,
+    variables_of,
+)
+from tnquench.errors import InputError
+
+
+def digest_of(path: Path | str) -> str:
+    """Return the SHA-256 of all variables and attributes of a dataset but the stored digest, in hexadecimal.
+
+    path : the dataset or its folder
+    Raises InputError if the dataset is missing, unreadable or damaged.
+    """
+    return digest_of_contents(read_contents(Path(path)))
+
+
+def check_run(path: Path | str) -> list[str]:
+    """Return what is wrong with a dataset, one plain line a finding; empty when it is sound.
+
+    path : the dataset or its folder
+    Raises InputError only if there is no file to read.
+    """
+    image = read_bytes(Path(path))
+    try:
+        contents = decode(image)
+    except DamagedFile as damage:
+        return [str(damage)]
+    if complaint := version_complaint(contents):
+        return [complaint]
+    return list(_findings(contents))
+
+
+def read_contents(path: Path) -> Contents:
+    """Return the contents of a dataset (file or folder); raises InputError if they cannot be read."""
+    image = read_bytes(path)
+    try:
+        return decode(image)
+    except DamagedFile as damage:
+        raise InputError(str(locate(path)), [str(damage)]) from damage
+
+
+def version_complaint(contents: Contents) -> str:
+    """Return why the layout of `contents` cannot be understood, or nothing."""
+    version = contents.attributes.get("provenance", {}).get("format_version")
+    if version is None:
+        return "no format version in /provenance: not a dataset of this program"
+    if not isinstance(version, int) or version < 1:
+        return f"format version {version!r} in /provenance is not a positive integer"
+    if version > FORMAT_VERSION:
+        return f"format version {version} is newer than {FORMAT_VERSION}, the newest this program reads"
+    return ""
+
+
+def digest_complaint(contents: Contents) -> str:
+    """Return how `contents` differ from their stored digest, or nothing."""
+    stored = contents.attributes.get("provenance", {}).get("digest")
+    if stored is None:
+        return "no digest in /provenance"
+    found = digest_of_contents(contents)
+    if found == stored:
+        return ""
+    return f"altered since it was written: digest {found[:12]} where {str(stored)[:12]} is stored"
+
+
+def _findings(contents: Contents) -> Iterator[str]:
+    if complaint := digest_complaint(contents):
+        yield complaint
+    scales = contents.group("")
+    required = set(COORDINATES)
+    expected = {"provenance", "quantum", *(f"budget/{name}" for name in OBSERVABLES)}
+    if contents.attributes.get("", {}).get("content") == "prediction":
+        required, expected = required - {"source"}, {"provenance"}
+    yield from _presence_findings("", scales, COORDINATES, required=required)
+    for name, scale in scales.items():
+        yield from _order_findings(name, scale)
+    groups = contents.groups()
+    for group in groups:
+        if group != "provenance":
+            yield from _group_findings(contents, group)
+        yield from _attribute_findings(contents, group)
+    for group in sorted(expected - set(groups)):
+        yield f"missing group {group}"
+    if not _levels(contents):
+        yield f"missing group hydrodynamics/{LEVELS[0]}"
+
+
+def _levels(contents: Contents) -> list[str]:
+    return [level for level in LEVELS if contents.group(f"hydrodynamics/{level}")]
+
+
+def _group_findings(contents: Contents, group: str) -> Iterator[str]:
+    """Compare the variables of one group with its table and with the scales of the root."""
+    found, scales = contents.group(group), contents.group("")
+    own = {name: found[name] for name in OWN_COORDINATES if name in found}
+    try:
+        table = variables_of(group, own_places=bool(own))
+    except ValueError:
+        yield f"unknown group {group}"
+        return
+    absent = tuple(f"{level}_" for level in LEVELS if level not in _levels(contents))
+    required = {name for name in table if not name.startswith(absent)}
+    yield from _presence_findings(group, found, {**COORDINATES, **table}, required=required)
+    for name, variable in found.items():
+        yield from _shape_findings(f"{group}/{name}", variable, {**scales, **own})
+        if name in scales and not np.array_equal(variable.values, scales[name].values):
+            yield f"{group}/{name} differs from the scale {name}"
+
+
+def _attribute_findings(contents: Contents, group: str) -> Iterator[str]:
+    source = contents.variables.get("source")
+    found = contents.attributes.get(group, {})
+    for name in attributes_of(group, sources=[] if source is None else source.values.ravel().tolist()):
+        if name not in found:
+            yield f"missing attribute {name} of {group}"
+    for name, value in found.items():
+        if name in JSON_ATTRIBUTES and not _is_json(value):
+            yield f"attribute {name} of {group} is not JSON text"
+
+
+def _presence_findings(
+    group: str, found: Mapping[str, StoredVariable], table: Mapping[str, Variable], *, required: set[str]
+) -> Iterator[str]:
+    """Compare the variables of one group with the rows of its table."""
+    place = f"{group}/" if group else ""
+    for name in sorted(required - set(found)):
+        yield f"missing variable {place}{name}"
+    for name, variable in found.items():
+        if name in table:
+            yield from _value_findings(f"{place}{name}", variable, table[name])
+        else:
+            yield f"unknown variable {place}{name}"
+
+
+def _value_findings(path: str, variable: StoredVariable, row: Variable) -> Iterator[str]:
+    values = variable.values
+    if variable.dims != row.dims:
+        yield f"{path} has dimensions {_listed(variable.dims)}, expected {_listed(row.dims)}"
+    kind = "U" if row.dtype == "str" else np.dtype(row.dtype).kind
+    if values.dtype.kind != kind:
+        yield f"{path} holds {values.dtype.name}, expected {row.dtype}"
+        return
+    if variable.attributes.get("units") != row.units:
+        yield f"{path} has units {variable.attributes.get('units')!r}, expected {row.units!r}"
+    if kind == "f" and (bad := int(np.count_nonzero(~np.isfinite(values)))):
+        yield f"{path} holds {bad} values that are not finite numbers"
+    meanings = str(variable.attributes.get("flag_meanings", "")).split()
+    if meanings and values.size and not (values.min() >= 0 and values.max() < len(meanings)):
+        yield f"{path} holds values outside 0..{len(meanings) - 1}"
+
+
+def _shape_findings(
+    path: str, variable: StoredVariable, scales: Mapping[str, StoredVariable]
+) -> Iterator[str]:
+    sizes = tuple(scales[dim].values.size if dim in scales else None for dim in variable.dims)
+    if variable.values.shape != sizes:
+        yield f"{path} has shape {variable.values.shape}, its dimensions have sizes {sizes}"
+
+
+def _order_findings(name: str, scale: StoredVariable) -> Iterator[str]:
+    values = scale.values.ravel()
+    if values.size == 0:
+        yield f"{name} is empty"
+    elif values.dtype.kind == "f" and not np.all(np.diff(values) > 0):
+        yield f"{name} does not increase everywhere"
+    elif np.unique(values).size < values.size:
+        yield f"{name} repeats a value"
+
+
+def _is_json(value: object) -> bool:
+    try:
+        json.loads(str(value))
+    except json.JSONDecodeError:
+        return False
+    return True
+
+
+def _listed(dims: tuple[str, ...]) -> str:
+    return f"({', '.join(dims)})"

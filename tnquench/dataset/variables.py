@@ -1,0 +1,157 @@
+"""The table of everything a dataset may hold: dimensions, units and meaning of each variable, group by group.
+
+Groups are named by their path in the file, without a leading slash: "quantum", "hydrodynamics/euler",
+"budget/energy_density", "companions/weight_10". A group's variables depend on nothing but that name.
+"""
+
+from __future__ import annotations
+
+from collections.abc import Iterable
+from dataclasses import dataclass, replace
+
+from tnquench.conventions import OBSERVABLE_PLACES
+
+#: Version of the layout below; a reader refuses a file whose version is larger.
+FORMAT_VERSION = 1
+
+#: Name of the dataset in its folder.
+FILE_NAME = "run.h5"
+
+#: Hydrodynamic theories a dataset may hold.
+LEVELS: tuple[str, ...] = ("euler", "diffusive")
+
+#: Companion runs on a chain of another length carry their own places, under these names.
+OWN_PLACES: dict[str, str] = {"site": "site_length", "bond": "bond_length"}
+
+
+@dataclass(frozen=True)
+class Variable:
+    """One row of the table: dimensions, units, meaning, element type and the names of its integer values."""
+
+    dims: tuple[str, ...]
+    units: str
+    long_name: str
+    dtype: str = "float64"
+    #: Meanings of the values 0, 1, 2..., without blanks; empty where a value is a number.
+    flags: tuple[str, ...] = ()
+
+
+#: Dimension scales of the root group.
+COORDINATES: dict[str, Variable] = {
+    "time": Variable(("time",), "1/coupling", "time since the start"),
+    "site": Variable(("site",), "lattice spacing", "position of the site, the middle of the chain at zero"),
+    "bond": Variable(("bond",), "lattice spacing", "position of the bond, the middle of the chain at zero"),
+    "source": Variable(("source",), "1", "source of error", "str"),
+}
+
+#: Dimension scales of a companion run whose chain has another length.
+OWN_COORDINATES: dict[str, Variable] = {
+    own: replace(
+        COORDINATES[place], dims=(own,), long_name=f"{COORDINATES[place].long_name}, companion chain"
+    )
+    for place, own in OWN_PLACES.items()
+}
+
+#: Units and names of the four local observables.
+OBSERVABLES: dict[str, Variable] = {
+    name: Variable(("time", OBSERVABLE_PLACES[name]), units, long_name)
+    for name, units, long_name in (
+        ("energy_density", "coupling", "energy density"),
+        ("energy_current", "coupling^2", "energy current"),
+        ("charge_density", "1", "charge density"),
+        ("charge_current", "coupling", "charge current"),
+    )
+}
+
+_QUANTUM: dict[str, Variable] = OBSERVABLES | {
+    "bond_dimension": Variable(("time", "bond"), "1", "bond dimension", "int64"),
+    "operator_entanglement": Variable(("time", "bond"), "nats", "entropy of entanglement of the state"),
+    "discarded_weight": Variable(("time", "bond"), "1", "discarded weight, summed since the start"),
+    "total_energy": Variable(("time",), "coupling", "total energy"),
+    "total_charge": Variable(("time",), "1", "total charge"),
+}
+
+_ON_OWN_PLACES: dict[str, Variable] = OWN_COORDINATES | {
+    name: replace(row, dims=tuple(OWN_PLACES.get(dim, dim) for dim in row.dims))
+    for name, row in OBSERVABLES.items()
+}
+
+#: What `/provenance` must say; the writer adds the last two.
+PROVENANCE: tuple[str, ...] = (
+    "config_toml",
+    "config_file",
+    "title",
+    "versions",
+    "machine",
+    "wall_seconds",
+    "cpu_seconds",
+    "created",
+    "events",
+    "preparation",
+    "format_version",
+    "digest",
+)
+
+#: Attributes that hold a list or a mapping as JSON text, decoded when a run is opened.
+JSON_ATTRIBUTES: frozenset[str] = frozenset({"versions", "events", "preparation", "references"})
+
+
+def variables_of(group: str, *, own_places: bool = False) -> dict[str, Variable]:
+    """Return the variables that group `group` may hold, by name, copies of the root's scales left out.
+
+    own_places : the group is a companion run on a chain of another length, with positions of its own
+    Raises ValueError for a group that the layout does not know.
+    """
+    head, _, tail = group.partition("/")
+    if group == "quantum":
+        return _QUANTUM
+    if head == "hydrodynamics" and tail in LEVELS:
+        return _prediction_variables(tail)
+    if head == "budget" and tail in OBSERVABLES:
+        return _budget_variables(tail)
+    if head == "companions" and tail and "/" not in tail:
+        return _ON_OWN_PLACES if own_places else OBSERVABLES
+    message = f"no such group in a dataset: {group!r}"
+    raise ValueError(message)
+
+
+def attributes_of(group: str, *, sources: Iterable[str]) -> tuple[str, ...]:
+    """Return the attributes that group `group` must carry; `sources` are the names on the source scale."""
+    head = group.partition("/")[0]
+    required: dict[str, tuple[str, ...]] = {
+        "provenance": PROVENANCE,
+        "hydrodynamics": ("light_cone_left", "light_cone_right", "method", "references"),
+        "budget": (*(f"kind_{source}" for source in sources), "first_resolved_time", "resolve_at"),
+        "companions": ("discarded_weight", "time_step", "sites", "seconds"),
+    }
+    return required.get(head, ())
+
+
+def _prediction_variables(level: str) -> dict[str, Variable]:
+    table: dict[str, Variable] = {}
+    for name, observable in OBSERVABLES.items():
+        said = f"{observable.long_name}, {level} hydrodynamics"
+        table[name] = replace(observable, long_name=said)
+        table[f"{name}_grid_error"] = replace(observable, long_name=f"error of the grids: {said}")
+        table[f"{name}_strings_error"] = replace(observable, long_name=f"error of the strings: {said}")
+    return table
+
+
+def _budget_variables(name: str) -> dict[str, Variable]:
+    observable = OBSERVABLES[name]
+    dims, units, said = observable.dims, observable.units, observable.long_name
+    table = {
+        "error": Variable(("source", *dims), units, f"error of the {said} by source"),
+        "bound": Variable(dims, units, f"rigorous bound on the truncation error of the {said}"),
+        "numerical": Variable(dims, units, f"summed numerical error of the {said}"),
+        "numerical_norm": Variable(("time",), units, f"numerical error of the {said}, norm"),
+        "dominant_source": Variable(("time",), "1", f"largest source of error of the {said}", "int64"),
+    }
+    for level in LEVELS:
+        deviation = f"{said}, quantum minus {level} hydrodynamics"
+        table[f"{level}_deviation"] = Variable(dims, units, deviation)
+        table[f"{level}_resolved"] = Variable(
+            dims, "1", f"verdict on the {deviation}", "int8", ("unresolved", "resolved")
+        )
+        table[f"{level}_deviation_norm"] = Variable(("time",), units, f"{deviation}, norm")
+    return table

@@ -1,0 +1,161 @@
+"""The Euler prediction of a run: densities and currents on its places and times, each with its error."""
+
+from __future__ import annotations
+
+from collections.abc import Callable
+from dataclasses import dataclass
+
+import numpy as np
+
+from tnquench.conventions import OBSERVABLE_PLACES, Reals
+from tnquench.errors import InputError
+from tnquench.hydro.joined import join_halves, light_cone_of_halves
+from tnquench.hydro.mesh import OBSERVABLES, RapidityMesh, rapidity_mesh, uniform_averages
+from tnquench.hydro.refinement import Refined, refine
+from tnquench.hydro.smooth import LEVELS as SMOOTH_LEVELS
+from tnquench.hydro.smooth import SmoothStart, initial_light_cone, smooth_averages
+from tnquench.hydro.thermal_states import State, thermal_on_mesh
+
+#: Smooth nodes a string and mesh spacing, in crossing angles, of successive refinements of joined halves.
+STEP_LEVELS: tuple[tuple[int, float], ...] = ((32, 0.11), (48, 0.085), (64, 0.07), (96, 0.055))
+
+#: Rays x/t that agree to this many decimals are one ray.
+RAY_DECIMALS = 12
+
+STEP_REFERENCES = ("castro_alvaredo_2016", "bertini_2016", "takahashi_1972", "takahashi_1999")
+SMOOTH_REFERENCES = ("doyon_2018", *STEP_REFERENCES)
+
+
+@dataclass(frozen=True, eq=False)
+class Prediction:
+    """Euler-scale densities and currents of a run.
+
+    fields        : observable -> (time, place), on the sites or bonds that OBSERVABLE_PLACES names
+    grid_error    : same shapes; change under the last refinement of rapidities (and positions)
+    strings_error : same shapes; zero, because the strings at these anisotropies are finite in number
+    light_cone    : velocities (negative, positive) of its edges
+    method        : "joined halves (self-similar)" | "characteristics" | "uniform"
+    references    : keys of the report's references
+    """
+
+    fields: dict[str, Reals]
+    grid_error: dict[str, Reals]
+    strings_error: dict[str, Reals]
+    light_cone: tuple[float, float]
+    method: str
+    references: tuple[str, ...]
+
+
+def predict_step(
+    *,
+    anisotropy: float,
+    coupling: float,
+    left: State,
+    right: State,
+    middle: State,
+    times: Reals,
+    sites: Reals,
+    bonds: Reals,
+) -> Prediction:
+    """Predict two joined halves, each uniform and in equilibrium.
+
+    left, right, middle : (beta, beta_field) for x < 0, for x > 0, and at x = 0 when t = 0
+    times : (time,) in 1/J, not negative; sites, bonds : (site,), (bond,) positions, symmetric about 0
+    At t = 0 values are those of the local thermal state. The light cone's left edge is the least velocity of the
+    left state, its right edge the greatest of the right state: beyond them nothing changes.
+    Raises UnsupportedAnisotropy (a ValueError), ConvergenceError, and InputError where light reaches the ends,
+    because the solution is that of an infinite chain.
+    """
+
+    def mesh_at(level: int) -> RapidityMesh:
+        nodes, spacing = STEP_LEVELS[level]
+        return rapidity_mesh(anisotropy=anisotropy, coupling=coupling, nodes=nodes, spacing=spacing)
+
+    def solve(level: int, rays: Reals) -> Reals:
+        mesh, result = mesh_at(level), np.empty((rays.size, len(OBSERVABLES)))
+        at_joint = np.isnan(rays)
+        result[at_joint] = uniform_averages(mesh, thermal_on_mesh(mesh, middle))
+        halves = thermal_on_mesh(mesh, left), thermal_on_mesh(mesh, right)
+        result[~at_joint] = join_halves(mesh, *halves, rays=rays[~at_joint])
+        return result
+
+    mesh = mesh_at(-2)
+    edges = light_cone_of_halves(mesh, thermal_on_mesh(mesh, left), thermal_on_mesh(mesh, right))
+    uniform = left == right
+    if not uniform:
+        _refuse_reflection(edges, times, sites)
+    rays = _rays(np.concatenate([sites, bonds]), times, uniform=uniform)
+    distinct, index = np.unique(rays, return_inverse=True)
+    refined = refine(solve, distinct, levels=len(STEP_LEVELS))
+    values, errors = (each[index.reshape(rays.shape)] for each in (refined.values, refined.errors))
+    method = "uniform" if uniform else "joined halves (self-similar)"
+    return _prediction(Refined(values, errors), sites.size, edges, method, STEP_REFERENCES)
+
+
+def predict_smooth(
+    *,
+    anisotropy: float,
+    coupling: float,
+    beta: Callable[[Reals], Reals],
+    beta_field: Callable[[Reals], Reals],
+    times: Reals,
+    sites: Reals,
+    bonds: Reals,
+) -> Prediction:
+    """Predict a smooth profile between reflecting ends half a lattice spacing beyond the first and last site.
+
+    beta, beta_field : functions of position (any shape) in the chain
+    times : (time,) in 1/J, not negative, ascending; sites, bonds : (site,), (bond,) positions, symmetric about 0
+    The light cone holds the extreme velocities of the initial profile.
+    Raises UnsupportedAnisotropy (a ValueError) and ConvergenceError.
+    """
+    start = SmoothStart(anisotropy, coupling, beta, beta_field, wall=float(sites[-1]) + 0.5)
+    if start.is_uniform:
+        state = start.ranges[0][0], start.ranges[1][0]
+        return predict_step(
+            anisotropy=anisotropy, coupling=coupling, left=state, right=state, middle=state,
+            times=times, sites=sites, bonds=bonds,
+        )  # fmt: skip
+    places = np.concatenate([sites, bonds])
+    refined = refine(
+        lambda level, some: smooth_averages(start, SMOOTH_LEVELS[level], some, places),
+        times,
+        levels=len(SMOOTH_LEVELS),
+    )
+    return _prediction(refined, sites.size, initial_light_cone(start), "characteristics", SMOOTH_REFERENCES)
+
+
+def _rays(places: Reals, times: Reals, *, uniform: bool) -> Reals:
+    """Return x/t (time, place); at t = 0 infinite, and not a number at the joint."""
+    if uniform:
+        rays = np.full((times.size, places.size), np.inf)
+        rays[np.ix_(times == 0.0, places == 0.0)] = np.nan
+        return rays
+    with np.errstate(divide="ignore", invalid="ignore"):
+        return np.asarray((places / times[:, None]).round(RAY_DECIMALS))
+
+
+def _refuse_reflection(edges: tuple[float, float], times: Reals, sites: Reals) -> None:
+    wall = float(sites[-1]) + 0.5
+    arrival = wall / max(-edges[0], edges[1])
+    if times.max(initial=0.0) > arrival:
+        problem = (
+            f"[evolution] until = {times.max():g}: light (velocities {edges[0]:.4g}, {edges[1]:.4g}) reaches the ends "
+            f"at t = {arrival:.4g}, where the solution for two infinite halves ends; stop before, or give the step a "
+            "width"
+        )
+        raise InputError("prediction of two joined halves", [problem])
+
+
+def _prediction(
+    refined: Refined, site_count: int, light_cone: tuple[float, float], method: str, references: tuple[str, ...]
+) -> Prediction:
+    """Sort values (time, site or bond, observable) into the observables' places."""
+    fields, errors = {}, {}
+    for index, name in enumerate(OBSERVABLES):
+        part = slice(None, site_count) if OBSERVABLE_PLACES[name] == "site" else slice(site_count, None)
+        fields[name], errors[name] = refined.values[:, part, index].copy(), refined.errors[:, part, index].copy()
+    for each in (fields, errors):
+        each["energy_current"][:, [0, -1]] = 0.0  # no bond beyond the end sites to carry energy
+    exact = {name: np.zeros_like(values) for name, values in fields.items()}
+    return Prediction(fields, errors, exact, light_cone, method, references)

@@ -1,0 +1,121 @@
+"""Light-cone maps: position across, time upwards."""
+
+from __future__ import annotations
+
+from functools import partial
+
+import numpy as np
+from matplotlib.axes import Axes
+from matplotlib.colors import Colormap, Normalize, SymLogNorm
+from matplotlib.figure import FigureBase
+from matplotlib.ticker import MaxNLocator
+
+from tnquench.conventions import Reals
+from tnquench.report.canvas import DIVERGING, EDGE, HEAT, INK, UNRESOLVED, Panel, Plate, axes_at
+from tnquench.report.comparison import Comparison
+from tnquench.report.scales import linear, span, symmetric_decades, typeset
+from tnquench.report.wording import LEVEL_NAMES, MINUS, OBSERVABLE_NAMES, plain
+
+SIZE = (3.72, 3.15)
+X_LABEL = "position x (lattice spacings)"
+T_LABEL = "time t (1/J)"
+
+
+def map_plate(field: Comparison) -> Plate:
+    """Return the maps of the quantum side, the prediction and their difference, as far as they exist."""
+    said = OBSERVABLE_NAMES[field.name]
+    theory = LEVEL_NAMES.get(field.level, field.level)
+    sides = {"quantum": field.quantum, "prediction": field.prediction}
+    shown = {side: values for side, values in sides.items() if values is not None}
+    scale = span(np.concatenate([values.ravel() for values in shown.values()]))
+    titles = {"quantum": f"Quantum chain: {said}", "prediction": f"{theory}: {said}"}
+    panels = [
+        _panel(field, side, titles[side], partial(_draw_field, field, values, titles[side], scale))
+        for side, values in shown.items()
+    ]
+    if field.deviation is not None:
+        title = f"Deviation: quantum {MINUS} {theory}"
+        panels.append(
+            _panel(field, "deviation", title, partial(_draw_deviation, field, field.deviation, title))
+        )
+    return Plate(f"{field.name}_maps", said, "", tuple(panels), columns=3)
+
+
+def map_note(field: Comparison) -> str:
+    """Return how to read the maps of a run, the same for all its observables."""
+    said = []
+    if field.quantum is not None and field.prediction is not None:
+        said.append("Chain and prediction share one colour scale.")
+    if field.light_cone is not None:
+        left, right = (plain(float(f"{velocity:.4g}")) for velocity in field.light_cone)
+        said.append(f"Dashed: the light cone x = v t of the prediction, v = {left} J and {right} J.")
+    if field.resolved is not None:
+        said.append(
+            f"Grey: unresolved, |deviation| at most {plain(field.resolve_at)} times the numerical error."
+        )
+    return " ".join(said)
+
+
+def _panel(field: Comparison, side: str, title: str, draw: partial[None]) -> Panel:
+    description = f"Map over position and time. {title}, {OBSERVABLE_NAMES[field.name]}"
+    return Panel(f"{field.name}_map_{side}", description, draw, *SIZE)
+
+
+def _draw_field(
+    field: Comparison, values: Reals, title: str, scale: tuple[float, float], figure: FigureBase
+) -> None:
+    axes = _mesh(figure, field, values, title, HEAT, Normalize(*scale))
+    _light_cone(axes, field, EDGE)
+
+
+def _draw_deviation(field: Comparison, deviation: Reals, title: str, figure: FigureBase) -> None:
+    shown = deviation if field.resolved is None else np.where(field.resolved, deviation, np.nan)
+    axes = _mesh(figure, field, shown, title, DIVERGING, _deviation_scale(field, deviation))
+    axes.set_facecolor(UNRESOLVED)
+    _light_cone(axes, field, INK)
+
+
+def _deviation_scale(field: Comparison, deviation: Reals) -> Normalize:
+    """Return a symmetric scale; logarithmic where the deviation spans more than a decade above the noise."""
+    later = deviation[field.times > 0] if np.any(field.times > 0) else deviation
+    largest = float(np.max(np.abs(later))) or 1e-16
+    noise = 0.0 if field.numerical is None else field.resolve_at * float(np.median(field.numerical))
+    threshold = 10.0 ** np.floor(np.log10(np.clip(noise, largest / 300, largest)))
+    if threshold > largest / 10:
+        return Normalize(-largest, largest)
+    return SymLogNorm(threshold, linscale=0.6, vmin=-largest, vmax=largest, base=10)
+
+
+def _mesh(
+    figure: FigureBase, field: Comparison, values: Reals, title: str, colours: Colormap, scale: Normalize
+) -> Axes:
+    """Draw an array (time, place) as coloured cells with its colour bar, and return the axes."""
+    axes = axes_at(figure, SIZE, left=0.55, right=0.78, bottom=0.5, top=0.32)
+    image = axes.pcolormesh(
+        field.positions, field.times, values, cmap=colours, norm=scale, shading="nearest", rasterized=True
+    )
+    axes.set(title=title, xlabel=X_LABEL, ylabel=T_LABEL)
+    axes.set_ylim(float(field.times[0]), float(field.times[-1]))
+    axes.set_xlim(float(field.positions[0]), float(field.positions[-1]))
+    axes.yaxis.set_major_locator(MaxNLocator(6))
+    bar_axes = axes_at(figure, SIZE, left=SIZE[0] - 0.7, right=0.59, bottom=0.5, top=0.32)
+    bar = figure.colorbar(image, cax=bar_axes)
+    bar.outline.set_linewidth(0.5)
+    lowest, highest = float(scale.vmin or 0.0), float(scale.vmax or 0.0)
+    unit = typeset(field.unit)
+    if isinstance(scale, SymLogNorm):
+        symmetric_decades(bar_axes.yaxis, threshold=float(scale.linthresh), largest=highest, most=4)
+    else:
+        unit = linear(bar_axes.yaxis, max(abs(lowest), abs(highest)), field.unit)
+    bar_axes.set_title(unit, fontsize=9, loc="center", pad=5)
+    bar_axes.tick_params(labelsize=8.5, direction="out", length=2.5)
+    return axes
+
+
+def _light_cone(axes: Axes, field: Comparison, colour: str) -> None:
+    """Draw x = v t for both edges."""
+    if field.light_cone is None:
+        return
+    last = float(field.times[-1])
+    for velocity in field.light_cone:
+        axes.plot([0, velocity * last], [0, last], "--", color=colour, lw=1.0)

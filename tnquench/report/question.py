@@ -1,0 +1,118 @@
+"""What was asked: one compact line each for chain, start, evolution, prediction and errors."""
+
+from __future__ import annotations
+
+import tomllib
+from collections.abc import Mapping
+from typing import Any
+
+from tnquench.dataset.reader import Run
+from tnquench.report.wording import LEVEL_NAMES, plain
+
+Table = Mapping[str, Any]
+
+ORDERS = {2: "second", 4: "fourth"}
+
+
+def settings_of(run: Run) -> dict[str, Any]:
+    """Return the effective config stored in the run as nested tables; empty if it cannot be read."""
+    try:
+        return tomllib.loads(str(run.provenance.get("config_toml", "")))
+    except tomllib.TOMLDecodeError:
+        return {}
+
+
+def is_step(settings: Table) -> bool:
+    """Whether the start joins two halves at x = 0."""
+    start = settings.get("start", {})
+    shapes = [start.get(name, {}).get("shape") for name in ("beta", "beta_field")]
+    return "step" in shapes and all(shape in ("step", "uniform", None) for shape in shapes)
+
+
+def question(run: Run, settings: Table) -> list[tuple[str, str]]:
+    """Return pairs of a heading and a line of text."""
+    lines = [("Chain", _chain(settings.get("chain", {}))), ("Start", _start(settings.get("start", {})))]
+    if len(run.quantum):
+        lines.append(("Evolution", _evolution(settings.get("evolution", {}), run)))
+    lines.append(("Prediction", _prediction(run)))
+    if run.budget:
+        lines.append(("Errors", _budget(run)))
+    return lines
+
+
+def _chain(chain: Table) -> str:
+    model = str(chain.get("model", "xxz"))
+    sites = f"{chain.get('sites', '?')} sites, open ends"
+    if model != "xxz":
+        return f"{model}, {sites}"
+    anisotropy, coupling = float(chain.get("anisotropy", float("nan"))), float(chain.get("coupling", 1.0))
+    hamiltonian = "spin-1/2 XXZ, H = J Σ (SˣSˣ + SʸSʸ + D SᶻSᶻ)"
+    return f"{hamiltonian}, D = {plain(anisotropy)}, J = {plain(coupling)}; {sites}"
+
+
+def _start(start: Table) -> str:
+    parts = [f"inverse temperature β (1/J): {_profile(start.get('beta', {}))}"]
+    if "beta_field" in start:
+        parts.append(f"field βh: {_profile(start['beta_field'])}")
+    if start.get("joint") == "separate":
+        parts.append("halves separate (no bond at x = 0 in the start)")
+    return "; ".join(parts)
+
+
+def _profile(profile: Table) -> str:
+    shape = profile.get("shape")
+    values = {key: plain(value) for key, value in profile.items() if isinstance(value, int | float)}
+    if shape == "step" and {"left", "right"} <= set(values):
+        width = f", joined over a width {values['width']}" if profile.get("width") else ""
+        return f"{values['left']} on the left, {values['right']} on the right of x = 0{width}"
+    if shape == "bump" and {"base", "height", "width"} <= set(values):
+        return f"{values['base']} plus a Gaussian of height {values['height']} and width {values['width']}"
+    if shape == "wave" and {"base", "height", "length"} <= set(values):
+        return f"{values['base']} plus a wave of amplitude {values['height']} and length {values['length']}"
+    if shape == "uniform" and "value" in values:
+        return f"{values['value']} everywhere"
+    table = profile.get("values")
+    if isinstance(table, list) and table:
+        return f"a table of {len(table)} values from {plain(min(table))} to {plain(max(table))}"
+    return f"{shape or 'not stated'}"
+
+
+def _evolution(evolution: Table, run: Run) -> str:
+    parts = [f"to t = {plain(float(run.coordinates['time'].values[-1]))}/J"]
+    if "every" in evolution:
+        parts[0] += f", measured every {plain(evolution['every'])}/J"
+    if "accuracy" in evolution:
+        parts.append(f"accuracy {plain(evolution['accuracy'])} J asked")
+    if "discarded_weight" in evolution:
+        parts.append(f"discarded weight {plain(evolution['discarded_weight'])} a cut")
+    order = f"{ORDERS.get(evolution.get('trotter_order', 4), '')}-order Trotter steps"
+    if "time_step" in evolution:
+        order += f" of at most {plain(evolution['time_step'])}/J"
+    parts.append(order)
+    if "bond_ceiling" in evolution:
+        parts.append(f"bond dimension up to {evolution['bond_ceiling']}")
+    return "; ".join(parts)
+
+
+def _prediction(run: Run) -> str:
+    if not run.hydrodynamics:
+        return "none: no hydrodynamic prediction was computed for this chain"
+    said = [
+        f"{LEVEL_NAMES.get(level, level)}, {theory.attrs.get('method', '')}"
+        for level, theory in run.hydrodynamics.items()
+    ]
+    return "; ".join(part.rstrip(", ") for part in said)
+
+
+def _budget(run: Run) -> str:
+    if not run.companions:
+        return "not estimated (no companion runs); rigorous bound on truncation only"
+    said = (
+        f"measured from {len(run.companions)} cheaper companion run{'s' if len(run.companions) > 1 else ''}"
+    )
+    thresholds = [
+        float(budget.attrs["resolve_at"]) for budget in run.budget.values() if "resolve_at" in budget.attrs
+    ]
+    if run.hydrodynamics and thresholds:
+        said += f"; resolved where |deviation| exceeds {plain(thresholds[0])} times the numerical error"
+    return said

@@ -1,0 +1,205 @@
+"""Tables of the report: the summary by observable, the events, the provenance."""
+
+from __future__ import annotations
+
+from collections.abc import Callable, Mapping
+from dataclasses import dataclass
+from typing import Any
+
+import numpy as np
+
+from tnquench.conventions import Reals
+from tnquench.dataset.reader import Run
+from tnquench.report.comparison import Comparison
+from tnquench.report.verdict import first_resolved, largest
+from tnquench.report.wording import DASH, OBSERVABLE_NAMES, SOURCE_NAMES, duration, plain, quantity
+
+NOT_KNOWN = DASH
+
+
+@dataclass(frozen=True)
+class Cell:
+    """A cell of the summary: its text, and what stands small below it."""
+
+    text: str
+    below: str = ""
+
+
+@dataclass(frozen=True)
+class Summary:
+    """The summary: headings, and by observable one cell a heading."""
+
+    headings: tuple[str, ...]
+    rows: tuple[tuple[str, tuple[Cell, ...]], ...]
+
+
+@dataclass(frozen=True)
+class _Points:
+    """Where a row is evaluated: (time, place) of the largest value, overall and at the last time."""
+
+    overall: tuple[int, int]
+    last: tuple[int, int]
+
+
+Column = Callable[[Comparison, _Points], Cell]
+
+
+def summary(fields: list[Comparison]) -> Summary:
+    """Return what the run says on each observable, over the points inside the light cone after the start.
+
+    fields : the observables of one run; columns that the run cannot fill are left out
+    """
+    columns = _columns(fields)
+    return Summary(
+        tuple(columns),
+        tuple((OBSERVABLE_NAMES[field.name], _cells(field, list(columns.values()))) for field in fields),
+    )
+
+
+def _columns(fields: list[Comparison]) -> dict[str, Column]:
+    compared = any(field.deviation is not None for field in fields)
+    estimated = any(field.numerical is not None for field in fields)
+    bounded = any(field.bound is not None for field in fields)
+    found: dict[str, Column] = {}
+    if compared:
+        found["Largest deviation"] = lambda field, at: Cell(
+            _quantity(field, field.deviation, at.overall, 2), _where(field, at.overall)
+        )
+    if estimated:
+        heading = "Numerical error there" if compared else "Largest numerical error"
+        found[heading] = lambda field, at: Cell(
+            _quantity(field, field.numerical, at.overall, 1), "" if compared else _where(field, at.overall)
+        )
+    if bounded:
+        heading = "Rigorous bound there" if compared or estimated else "Largest rigorous bound"
+        found[heading] = lambda field, at: Cell(_quantity(field, field.bound, at.overall, 1))
+    if compared:
+        found["Largest deviation at the last time"] = lambda field, at: Cell(
+            _quantity(field, field.deviation, at.last, 2),
+            f"± {_quantity(field, field.numerical, at.last, 1)}" if estimated else _where(field, at.last),
+        )
+    if compared and estimated:
+        found["First resolved"] = lambda field, _: Cell(_first(field))
+        found["Resolved points"] = lambda field, _: Cell(_share(field, field.resolved))
+    elif compared and bounded:
+        found["Points beyond the bound"] = lambda field, _: Cell(_share(field, _beyond(field)))
+    if estimated:
+        found["Dominant error source"] = lambda field, at: Cell(_dominant(field, at.overall[0]))
+    return found
+
+
+def _cells(field: Comparison, columns: list[Column]) -> tuple[Cell, ...]:
+    size = next(
+        (values for values in (field.deviation, field.numerical, field.bound) if values is not None), None
+    )
+    if size is None:
+        return tuple(Cell(NOT_KNOWN) for _ in columns)
+    among = field.judged if field.judged.any() else field.window
+    last = largest(size[-1:], field.window[-1:])[1]
+    points = _Points(overall=largest(size, among), last=(field.times.size - 1, last))
+    return tuple(column(field, points) for column in columns)
+
+
+def _quantity(field: Comparison, values: Reals | None, at: tuple[int, int], digits: int) -> str:
+    return NOT_KNOWN if values is None else quantity(float(values[at]), field.unit, digits=digits)
+
+
+def _where(field: Comparison, at: tuple[int, int]) -> str:
+    return f"x = {plain(float(field.positions[at[1]]))}, t = {plain(float(field.times[at[0]]))}"
+
+
+def _first(field: Comparison) -> str:
+    if field.resolved is None:
+        return NOT_KNOWN
+    first = first_resolved(field)
+    return "never" if first is None else f"t = {plain(first)}"
+
+
+def _share(field: Comparison, chosen: Any) -> str:
+    points = int(np.count_nonzero(field.judged))
+    if chosen is None or points == 0:
+        return NOT_KNOWN
+    return f"{np.count_nonzero(chosen & field.judged) / points:.0%}"
+
+
+def _beyond(field: Comparison) -> Any:
+    if field.deviation is None or field.bound is None:
+        return None
+    return np.abs(field.deviation) > field.bound
+
+
+def _dominant(field: Comparison, time: int) -> str:
+    if not field.dominant:
+        return NOT_KNOWN
+    return SOURCE_NAMES.get(field.dominant[time], field.dominant[time])
+
+
+def provenance_rows(run: Run) -> list[tuple[str, list[str]]]:
+    """Return pairs of heading and lines: machine, times, versions, preparation, companions, digest."""
+    said = run.provenance
+    rows = [
+        ("Written", [str(said.get("created", NOT_KNOWN))]),
+        ("Machine", [_listed(said.get("machine", NOT_KNOWN))]),
+        (
+            "Time",
+            [
+                f"{_seconds(said, 'wall_seconds')} on the clock, {_seconds(said, 'cpu_seconds')} of "
+                "processor time"
+            ],
+        ),
+        ("Versions", [_listed(said.get("versions", {}))]),
+        ("Preparation", [_listed(said.get("preparation", {}))]),
+        ("Companion runs", _companions(run)),
+        ("Config file", [str(said.get("config_file", NOT_KNOWN))]),
+        ("Dataset", [f"{run.path.name}, format {said.get('format_version', NOT_KNOWN)}"]),
+        ("SHA-256", [str(said.get("digest", NOT_KNOWN))]),
+    ]
+    return [(heading, lines) for heading, lines in rows if any(lines)]
+
+
+def event_rows(run: Run) -> list[tuple[str, str, str]]:
+    """Return time, kind and detail of each event of the run."""
+    events = run.provenance.get("events") or []
+    return [
+        (
+            _moment(event.get("time")),
+            str(event.get("kind", "")).replace("_", " "),
+            str(event.get("detail", "")),
+        )
+        for event in events
+        if isinstance(event, Mapping)
+    ]
+
+
+def _moment(time: object) -> str:
+    return plain(float(time)) if isinstance(time, int | float) else NOT_KNOWN
+
+
+def _seconds(said: Mapping[str, Any], name: str) -> str:
+    value = said.get(name)
+    return duration(float(value)) if isinstance(value, int | float) else "unknown time"
+
+
+def _listed(value: object) -> str:
+    """Return a mapping as one line of names and values, a text as it stands."""
+    if isinstance(value, Mapping):
+        return ", ".join(f"{str(name).replace('_', ' ')} {_listed(inner)}" for name, inner in value.items())
+    if isinstance(value, list | tuple):
+        return ", ".join(_listed(inner) for inner in value)
+    if isinstance(value, float):
+        return plain(float(f"{value:.3g}"))
+    return str(value)
+
+
+def _companions(run: Run) -> list[str]:
+    lines = []
+    for companion in run.companions.values():
+        said = companion.attrs
+        weight, step = (
+            plain(float(said.get("discarded_weight", np.nan))),
+            plain(float(said.get("time_step", np.nan))),
+        )
+        lines.append(
+            f"weight {weight}, step {step}/J, {said.get('sites', '?')} sites: {_seconds(said, 'seconds')}"
+        )
+    return lines
