@@ -27,6 +27,10 @@ COMPANION_WEIGHTS = {"weight_10": 1e-7, "weight_100": 1e-6, "step_2": 1e-7, "len
 #: Made-up size of each source of error relative to a made-up unit growing with time.
 SOURCE_SIZES = dict(zip(ERROR_SOURCES, (1.0, 0.3, 0.02, 0.01, 1e-8, 0.1, 0.0, 2.0), strict=True))
 
+#: Variables of a budget that only companion runs, and only a prediction, can give.
+MEASURED_ONLY = ("error", "numerical", "numerical_norm", "dominant_source", "euler_resolved")
+PREDICTED_ONLY = ("euler_deviation", "euler_deviation_norm", "euler_resolved")
+
 CONFIG_TOML = """\
 title = "Synthetic numbers for format tests"
 [chain]
@@ -45,27 +49,33 @@ time_step = 0.2
 """
 
 
-def write_synthetic_run(folder: Path, *, sites: int = 32, times: int = 21, companions: bool = True) -> Path:
-    """Write a full made-up dataset to `folder`/run.h5 and return its path."""
-    return write_run(folder, **synthetic_pieces(sites=sites, times=times, companions=companions))
+def write_synthetic_run(folder: Path, **choices: Any) -> Path:
+    """Write a made-up dataset to `folder`/run.h5 and return its path; `choices` as of `synthetic_pieces`."""
+    return write_run(folder, **synthetic_pieces(**choices))
 
 
-def synthetic_pieces(*, sites: int = 32, times: int = 21, companions: bool = True) -> dict[str, Any]:
-    """Return the keyword arguments of `write_run` for a full made-up dataset."""
+def synthetic_pieces(
+    *, sites: int = 32, times: int = 21, companions: bool = True, prediction: bool = True
+) -> dict[str, Any]:
+    """Return the keyword arguments of `write_run` for a made-up dataset.
+
+    Without companions the budget has no measured errors and no verdict, without a prediction no deviation.
+    """
     time: Reals = 0.5 * np.arange(times, dtype=np.float64)
     places: dict[str, Reals] = {"site": site_positions(sites), "bond": bond_positions(sites)}
-    prediction = {name: front(name, time, places[place]) for name, place in OBSERVABLE_PLACES.items()}
+    predicted = {name: front(name, time, places[place]) for name, place in OBSERVABLE_PLACES.items()}
     quantum: dict[str, Reals] = {
-        name: prediction[name] + wiggle(name, time, places[place])
-        for name, place in OBSERVABLE_PLACES.items()
+        name: predicted[name] + wiggle(name, time, places[place]) for name, place in OBSERVABLE_PLACES.items()
     }
-    groups: dict[str, dict[str, Any]] = {
-        "quantum": quantum | growth(time, places["bond"], quantum),
-        "hydrodynamics/euler": prediction | prediction_errors(prediction),
-    }
-    attributes: dict[str, dict[str, Any]] = {"hydrodynamics/euler": prediction_attributes()}
+    groups: dict[str, dict[str, Any]] = {"quantum": quantum | growth(time, places["bond"], quantum)}
+    attributes: dict[str, dict[str, Any]] = {}
+    if prediction:
+        groups["hydrodynamics/euler"] = predicted | prediction_errors(predicted)
+        attributes["hydrodynamics/euler"] = prediction_attributes()
+    left_out = (() if companions else MEASURED_ONLY) + (() if prediction else PREDICTED_ONLY)
     for name in OBSERVABLE_PLACES:
-        groups[f"budget/{name}"] = budget(quantum[name] - prediction[name], time)
+        rows = budget(quantum[name] - predicted[name], time)
+        groups[f"budget/{name}"] = {row: values for row, values in rows.items() if row not in left_out}
         attributes[f"budget/{name}"] = budget_attributes()
     for name, weight in COMPANION_WEIGHTS.items() if companions else ():
         groups[f"companions/{name}"] = companion(name, time, sites)

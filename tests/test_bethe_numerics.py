@@ -10,8 +10,7 @@ from itertools import pairwise
 import numpy as np
 import pytest
 
-from tests.bethe_cases import ALL, SOME, root_of_unity
-from tests.test_bethe import free_fermions
+from tests.bethe_cases import ALL, SOME, free_fermions, root_of_unity
 from tnquench.bethe import states as states_module
 from tnquench.bethe.correlations import covariance_matrix, entropy_density
 from tnquench.bethe.equilibrium import KEYS, equilibrium, string_thermodynamics
@@ -27,6 +26,7 @@ from tnquench.bethe.states import (
     thermal_filling,
 )
 from tnquench.bethe.strings import UnsupportedAnisotropy, phase_derivative, supported_nu
+from tnquench.errors import ConvergenceError
 
 
 @pytest.mark.parametrize("beta_field", [0.0, 0.7, -2.0])

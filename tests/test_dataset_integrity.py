@@ -38,10 +38,16 @@ def test_a_sound_run_has_no_findings(sound: Path) -> None:
     assert check_run(sound.parent) == []
 
 
-def test_a_run_without_companions_is_sound(tmp_path: Path) -> None:
-    path = write_synthetic_run(tmp_path, sites=6, times=3, companions=False)
+@pytest.mark.parametrize("companions", [True, False])
+@pytest.mark.parametrize("prediction", [True, False])
+def test_a_run_may_lack_companions_or_prediction(tmp_path: Path, companions: bool, prediction: bool) -> None:
+    path = write_synthetic_run(tmp_path, sites=6, times=3, companions=companions, prediction=prediction)
     assert check_run(path) == []
-    assert open_run(path).companions == {}
+    run = open_run(path)
+    assert bool(run.companions) == companions
+    assert bool(run.hydrodynamics) == prediction
+    assert ("error" in run.budget["energy_density"]) == companions
+    assert ("euler_deviation" in run.budget["energy_density"]) == prediction
 
 
 def test_the_digest_depends_on_the_contents_alone(tmp_path: Path) -> None:
@@ -151,6 +157,8 @@ FAULTS: dict[str, tuple[Callable[[h5py.File], None], str]] = {
     ),
     "group": (delete("budget/charge_current"), "missing group budget/charge_current"),
     "quantum": (delete("quantum"), "missing group quantum"),
+    "companions": (delete("companions"), "missing group companions, from which"),
+    "measured": (delete("budget/energy_density/error"), "missing variable budget/energy_density/error"),
     "prediction": (delete("hydrodynamics"), "missing group hydrodynamics/euler"),
     "attribute": (drop_attribute("provenance", "machine"), "missing attribute machine of provenance"),
     "kind": (

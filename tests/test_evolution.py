@@ -57,7 +57,9 @@ def test_three_cutting_methods_agree_to_rounding(shape: tuple[int, int], weight:
     tolerance = 100.0 * np.finfo(float).eps / weight
     blocks = decaying_blocks(*shape)
     rule = {method: CutRule(weight, bond_floor=1, method=method) for method in METHODS}
-    results = {method: cut(blocks, rule[method], guess=guess_for(blocks, held=28, noise=0.0)) for method in METHODS}
+    results = {
+        method: cut(blocks, rule[method], guess=guess_for(blocks, held=28, noise=0.0)) for method in METHODS
+    }
     reference = results["svd"]
     for method, result in results.items():
         assert [part.shape for part in result.right] == [part.shape for part in reference.right], method
@@ -73,7 +75,9 @@ def test_subspace_from_a_short_warm_start_keeps_hardly_more(weight: float) -> No
     sizes = {
         method: sum(
             len(part)
-            for part in cut(blocks, CutRule(weight, bond_floor=1, method=method), guess=guess_for(blocks)).right
+            for part in cut(
+                blocks, CutRule(weight, bond_floor=1, method=method), guess=guess_for(blocks)
+            ).right
         )
         for method in ("svd", "subspace")
     }
@@ -155,7 +159,9 @@ def test_trotter_order_on_dense_matrices(order: int) -> None:
     assert orders[-1] == pytest.approx(order, abs=0.1)
 
 
-def prepared(sites: int, *, weight: float = 1e-14, left: float = 0.5, right: float = 2.0) -> tuple[Chain, ChainState]:
+def prepared(
+    sites: int, *, weight: float = 1e-14, left: float = 0.5, right: float = 2.0
+) -> tuple[Chain, ChainState]:
     chain = xxz_chain(sites=sites, anisotropy=0.5)
     terms = start_terms(chain, beta=step(bond_positions(sites), left=left, right=right).tolist())
     grading = derive_grading((*chain.bond_terms, *terms))

@@ -84,6 +84,8 @@ def test_no_ring_inside_a_folder() -> None:
     }
     settled: set[str] = set()
     while len(settled) < len(graph):
-        ready = {name for name, needs in graph.items() if name not in settled and needs & set(graph) <= settled}
+        ready = {
+            name for name, needs in graph.items() if name not in settled and needs & set(graph) <= settled
+        }
         assert ready, f"these modules import each other in a ring: {sorted(set(graph) - settled)}"
         settled |= ready

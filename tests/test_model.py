@@ -47,7 +47,9 @@ def test_operator_norm_of_a_bond_is_the_singlet_energy() -> None:
 
 def test_site_terms_keep_their_sum_when_shared_among_bonds() -> None:
     chain = xxz_chain(sites=4, anisotropy=1.0)
-    fields = tuple(scale(charge, weight) for charge, weight in zip(chain.charges, (1.0, -2.0, 3.0, 0.5), strict=True))
+    fields = tuple(
+        scale(charge, weight) for charge, weight in zip(chain.charges, (1.0, -2.0, 3.0, 0.5), strict=True)
+    )
     shared = share_among_bonds(fields)
     assert dict(add(*shared)) == pytest.approx(dict(add(*fields)))
     assert dict(shared[0]) == pytest.approx({string((0, Z)): 0.5, string((1, Z)): -0.5})

@@ -9,7 +9,7 @@ from dataclasses import dataclass
 import numpy as np
 
 from tnquench.budget import sources
-from tnquench.budget.companions import COARSE, LOOSE, LOOSER, SHORT, WEIGHT_RATIO
+from tnquench.budget.companions import COARSE, LOOSE, LOOSER, SHORT
 from tnquench.budget.verdict import ObservableBudget, judge_observable, light_cone_window
 from tnquench.conventions import OBSERVABLE_PLACES, Reals
 from tnquench.observables.quench import QuantumRecord
@@ -51,8 +51,12 @@ def quantum_sources(
     if not companions:
         unknown = np.full(values.shape, np.nan)
         return found | {"truncation": unknown, "time_step": unknown, "length": unknown}
-    loose, looser = companions[LOOSE].fields[name], companions[LOOSER].fields[name]
-    found["truncation"] = sources.truncation(main=values, loose=loose, looser=looser, ratio=WEIGHT_RATIO)
+    loose = companions[LOOSE].fields[name]
+    found["truncation"] = sources.truncation(
+        main=_truncated(main, name),
+        loose=_truncated(companions[LOOSE], name),
+        looser=_truncated(companions[LOOSER], name),
+    )
     found["time_step"] = sources.time_step(
         fine=loose,
         coarse=companions[COARSE].fields[name],
@@ -63,6 +67,11 @@ def quantum_sources(
         noise = sources.WIDENING * sources.local_scale(loose - values) + found["truncation"]
         found["length"] = sources.length(long=loose, short=companions[SHORT].fields[name], noise=noise)
     return found
+
+
+def _truncated(record: QuantumRecord, name: str) -> sources.TruncatedRun:
+    """Return one observable of a run with the weights its cuts have lost."""
+    return sources.TruncatedRun(record.fields[name], record.discarded_weight)
 
 
 def quantum_error(

@@ -1,7 +1,7 @@
 """Companion runs: the main run again at looser settings, each cheaper than the main run.
 
-With w the main weight, runs at (r w), (r^2 w), (r w, twice the step) and (r w, a shorter chain) isolate each
-source of error by differences at otherwise equal settings.
+With w the main weight, runs at (r w), (r^2 w), (r w, at least twice the step) and (r w, a shorter chain)
+isolate each source of error by differences at otherwise equal settings.
 """
 
 from __future__ import annotations
@@ -37,17 +37,28 @@ def companion_quenches(main: Quench, *, shorter: Quench | None) -> dict[str, Que
 
     shorter : the main run on a shorter chain, or None to leave the influence of the ends unestimated
     """
-    loose = replace(main, discarded_weight=WEIGHT_RATIO * main.discarded_weight)
+    loose, looser = loosened(main, times=1), loosened(main, times=2)
     runs = {
         LOOSE: loose,
-        LOOSER: replace(main, discarded_weight=WEIGHT_RATIO**2 * main.discarded_weight),
+        LOOSER: looser,
         COARSE: replace(loose, steps=coarser_steps(main.steps)),
     }
     if shorter is not None:
-        runs[SHORT] = replace(shorter, discarded_weight=loose.discarded_weight)
+        runs[SHORT] = loosened(shorter, times=1)
     return runs
 
 
+def loosened(quench: Quench, *, times: int) -> Quench:
+    """Return a quench with r^times its weight and half its bond floor as often: where the floor binds rather
+    than the weight, runs that differ by the weight alone would be identical and show no error at all.
+    """
+    return replace(
+        quench,
+        discarded_weight=WEIGHT_RATIO**times * quench.discarded_weight,
+        bond_floor=max(1, quench.bond_floor // 2**times),
+    )
+
+
 def coarser_steps(steps: int) -> int:
-    """Return about half as many steps, at least one fewer; a main run has at least two in each interval."""
-    return (steps + 1) // 2
+    """Return at most half as many steps, at least one; a main run has at least two in each interval."""
+    return max(1, steps // 2)

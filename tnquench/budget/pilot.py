@@ -34,7 +34,11 @@ TRUNCATION_SHARE, STEP_SHARE = 0.5, 0.25
 TIGHTEST_WEIGHT, LOOSEST_WEIGHT = 1e-15, 1e-5
 SHORTEST_STEP, LONGEST_STEP = 0.01, 0.5
 
-PILOT_BOND_FLOOR = 4
+#: Smallest bonds of the pilots: low, so that the weight rather than the floor decides what they lose.
+PILOT_BOND_FLOOR = 8
+
+#: Errors of observables below this are rounding.
+NEGLIGIBLE_ERROR = 1e-13
 
 
 @dataclass(frozen=True)
@@ -198,11 +202,14 @@ def choose_settings(
     Returns (weight, time step): truncation is to stay under half the accuracy, the step's error under a
     quarter.
     """
-    looser, loose, main = (simulate(build(weight, time_step)) for weight in ACCURACY_WEIGHTS)
+    looser, loose, main = (
+        simulate(replace(build(weight, time_step), bond_floor=PILOT_BOND_FLOOR))
+        for weight in ACCURACY_WEIGHTS
+    )
     weight = _weight_for(looser, loose, main, TRUNCATION_SHARE * accuracy)
     if fixed_step:
         return weight, time_step
-    quench = build(ACCURACY_WEIGHTS[-1], time_step)
+    quench = replace(build(ACCURACY_WEIGHTS[-1], time_step), bond_floor=PILOT_BOND_FLOOR)
     steps = coarser_steps(quench.steps)
     coarse = simulate(replace(quench, steps=steps))
     error = max(
@@ -223,17 +230,14 @@ def choose_settings(
 def _weight_for(looser: QuantumRecord, loose: QuantumRecord, main: QuantumRecord, allowed: float) -> float:
     """Extrapolate the truncation error of three pilot runs to the weight at which it is as small as
     allowed."""
-    ratio = ACCURACY_WEIGHTS[1] / ACCURACY_WEIGHTS[2]
     weight = LOOSEST_WEIGHT
-    for name, values in main.fields.items():
-        triple = {"main": values, "loose": loose.fields[name], "looser": looser.fields[name]}
-        error = float(sources.truncation(**triple, ratio=ratio).max())
-        if error <= 1e-13:
-            continue
-        power = float(
-            sources.weight_power(triple["looser"] - triple["loose"], triple["loose"] - values, ratio=ratio)[
-                -1, 0
-            ]
-        )
-        weight = min(weight, ACCURACY_WEIGHTS[2] * (allowed / error) ** (1.0 / max(power, 0.4)))
+    for name in main.fields:
+        runs = {
+            key: sources.TruncatedRun(record.fields[name], record.discarded_weight)
+            for key, record in (("main", main), ("loose", loose), ("looser", looser))
+        }
+        error = float(sources.truncation(**runs).max())
+        if error > NEGLIGIBLE_ERROR:
+            power = float(sources.weight_power(**runs)[-1, 0])
+            weight = min(weight, ACCURACY_WEIGHTS[2] * (allowed / error) ** (1.0 / power))
     return float(np.clip(weight, TIGHTEST_WEIGHT, LOOSEST_WEIGHT))

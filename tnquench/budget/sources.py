@@ -8,19 +8,27 @@ solutions check.
 
 from __future__ import annotations
 
+from dataclasses import dataclass
+
 import numpy as np
 from scipy.ndimage import uniform_filter
 
 from tnquench.conventions import Reals
 
 #: Neighbourhood of a local root mean square: samples in time, places in space.
-NEIGHBOURHOOD = (3, 9)
+NEIGHBOURHOOD = (3, 5)
 
 #: A normal error stays within so many standard deviations at 99 % of the points.
 WIDENING = 2.6
 
-#: Range in which the power of the discarded weight is believed; outside it the nearer end is used.
-LEAST_POWER, LARGEST_POWER = 0.25, 1.0
+#: Range of the power of the discarded weight. A cut moves an observable that straddles it by at most 2 ||O||
+#: sqrt(w), so 1/2 is the least power; steeper fits come from companions so loose that their errors saturate,
+#: and were found to claim too little (free chains, weights 1e-6 to 1e-8, bond floor binding).
+LEAST_POWER, LARGEST_POWER = 0.5, 0.6
+
+#: Range in which a local ratio of lost weights is believed, and the weight below which a loss is rounding.
+LEAST_RATIO, LARGEST_RATIO = 3.0, 1e6
+SMALLEST_WEIGHT = 1e-24
 
 #: Rounding unit of double precision.
 ROUNDING = float(np.finfo(np.float64).eps)
@@ -40,27 +48,53 @@ def local_scale(difference: Reals) -> Reals:
     return np.sqrt(np.maximum(scale, 0.0))
 
 
-def weight_power(looser: Reals, loose: Reals, *, ratio: float) -> Reals:
-    """Return the power p of the discarded weight with which an error grows, at each time, shape (time, 1).
+@dataclass(frozen=True)
+class TruncatedRun:
+    """One observable of a run and what its cuts lost: values (time, place), discarded weight (time, bond) so
+    far."""
 
-    looser, loose : differences (time, place) O(r^2 w) - O(r w) and O(r w) - O(w); for an error c w^p their
-    norms stand in the ratio r^p. Neighbouring samples are averaged; the result is kept between LEAST_POWER
-    and LARGEST_POWER.
+    values: Reals
+    discarded_weight: Reals
+
+    def local_weight(self) -> Reals:
+        """Return the weight lost around each place, averaged over its neighbourhood, shape (time, place)."""
+        lost = np.maximum(self.discarded_weight, SMALLEST_WEIGHT)
+        if self.values.shape[1] > lost.shape[1]:  # sites: the mean of the bonds on both sides
+            padded = np.pad(lost, ((0, 0), (1, 1)), mode="edge")
+            lost = 0.5 * (padded[:, 1:] + padded[:, :-1])
+        return np.asarray(uniform_filter(lost, size=(1, NEIGHBOURHOOD[1]), mode="nearest"))
+
+
+def weight_power(*, main: TruncatedRun, loose: TruncatedRun, looser: TruncatedRun) -> Reals:
+    """Return the power p of the discarded weight with which the error grows, at each time, shape (time, 1).
+
+    If an error is c W^p of the weight W truly lost, successive differences stand nearly in the ratio of
+    successive weights to the power p. Neighbouring samples are averaged; p is kept between LEAST_POWER and
+    LARGEST_POWER.
     """
-    wide = uniform_filter(np.square(looser).mean(axis=1), size=NEIGHBOURHOOD[0], mode="nearest")
-    narrow = uniform_filter(np.square(loose).mean(axis=1), size=NEIGHBOURHOOD[0], mode="nearest")
+    wide, narrow = (
+        uniform_filter(np.square(a.values - b.values).mean(axis=1), size=NEIGHBOURHOOD[0], mode="nearest")
+        for a, b in ((looser, loose), (loose, main))
+    )
     tiny = np.finfo(np.float64).tiny
-    power = 0.5 * np.log(np.maximum(wide, tiny) / np.maximum(narrow, tiny)) / np.log(ratio)
+    growth = np.log(np.maximum(wide, tiny) / np.maximum(narrow, tiny))
+    weights = np.maximum(looser.discarded_weight.sum(axis=1), tiny) / np.maximum(
+        main.discarded_weight.sum(axis=1), tiny
+    )
+    power = growth / np.maximum(np.log(weights), 1e-3)
     return np.asarray(np.clip(power, LEAST_POWER, LARGEST_POWER))[:, None]
 
 
-def truncation(*, main: Reals, loose: Reals, looser: Reals, ratio: float) -> Reals:
-    """Estimate the truncation error of the main run from runs at r and r^2 times its weight.
+def truncation(*, main: TruncatedRun, loose: TruncatedRun, looser: TruncatedRun) -> Reals:
+    """Estimate the truncation error of the main run from two runs that cut more.
 
-    If the error is c w^p, then O(r w) - O(w) = c w^p (r^p - 1); the power p is fitted from both differences.
+    If the error is c W^p of the weight W lost around a point, O(loose) - O(main) = c W^p (rho^p - 1) with rho
+    the local ratio of the lost weights; it is far above the ratio of the weights asked for where the bond
+    floor binds.
     """
-    power = weight_power(looser - loose, loose - main, ratio=ratio)
-    return np.asarray(WIDENING * local_scale(loose - main) / (ratio**power - 1.0))
+    power = weight_power(main=main, loose=loose, looser=looser)
+    ratio = np.clip(loose.local_weight() / main.local_weight(), LEAST_RATIO, LARGEST_RATIO)
+    return np.asarray(WIDENING * local_scale(loose.values - main.values) / (ratio**power - 1.0))
 
 
 def time_step(*, fine: Reals, coarse: Reals, step_ratio: float, order: int) -> Reals:

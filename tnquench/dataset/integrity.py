@@ -15,6 +15,7 @@ from tnquench.dataset.variables import (
     FORMAT_VERSION,
     JSON_ATTRIBUTES,
     LEVELS,
+    MEASURED,
     OBSERVABLES,
     OWN_COORDINATES,
     Variable,
@@ -85,26 +86,47 @@ def _findings(contents: Contents) -> Iterator[str]:
     if complaint := digest_complaint(contents):
         yield complaint
     scales = contents.group("")
-    required = set(COORDINATES)
-    expected = {"provenance", "quantum", *(f"budget/{name}" for name in OBSERVABLES)}
-    if contents.attributes.get("", {}).get("content") == "prediction":
-        required, expected = required - {"source"}, {"provenance"}
+    alone = _is_prediction_alone(contents)
+    required = set(COORDINATES) - ({"source"} if alone else set())
     yield from _presence_findings("", scales, COORDINATES, required=required)
     for name, scale in scales.items():
         yield from _order_findings(name, scale)
-    groups = contents.groups()
-    for group in groups:
+    for group in contents.groups():
         if group != "provenance":
             yield from _group_findings(contents, group)
         yield from _attribute_findings(contents, group)
+    yield from _missing_groups(contents)
+
+
+def _is_prediction_alone(contents: Contents) -> bool:
+    return contents.attributes.get("", {}).get("content") == "prediction"
+
+
+def _missing_groups(contents: Contents) -> Iterator[str]:
+    """Compare the groups with what the file says of itself; a run may lack companions or a prediction."""
+    groups, levels = contents.groups(), _levels(contents)
+    if _is_prediction_alone(contents):
+        expected = {f"hydrodynamics/{level}" for level in levels or LEVELS[:1]}
+    else:
+        expected = {"quantum", *(f"budget/{name}" for name in OBSERVABLES)}
+        expected |= {f"hydrodynamics/{level}" for level in levels}
     for group in sorted(expected - set(groups)):
         yield f"missing group {group}"
-    if not _levels(contents):
-        yield f"missing group hydrodynamics/{LEVELS[0]}"
+    if _is_measured(contents) and not any(group.startswith("companions/") for group in groups):
+        yield "missing group companions, from which the errors of the budget were measured"
 
 
 def _levels(contents: Contents) -> list[str]:
-    return [level for level in LEVELS if contents.group(f"hydrodynamics/{level}")]
+    """Return the theories that the file predicts or judges."""
+    judged = {f"budget/{name}/{level}_deviation": level for name in OBSERVABLES for level in LEVELS}
+    named = {judged[path] for path in contents.variables if path in judged}
+    return [level for level in LEVELS if level in named or contents.group(f"hydrodynamics/{level}")]
+
+
+def _is_measured(contents: Contents) -> bool:
+    """Were the errors measured by companion runs?"""
+    measured = {f"budget/{name}/{variable}" for name in OBSERVABLES for variable in MEASURED}
+    return any(path in measured or path.startswith("companions/") for path in contents.variables)
 
 
 def _group_findings(contents: Contents, group: str) -> Iterator[str]:
@@ -116,13 +138,21 @@ def _group_findings(contents: Contents, group: str) -> Iterator[str]:
     except ValueError:
         yield f"unknown group {group}"
         return
-    absent = tuple(f"{level}_" for level in LEVELS if level not in _levels(contents))
-    required = {name for name in table if not name.startswith(absent)}
+    required = _required(contents, table)
     yield from _presence_findings(group, found, {**COORDINATES, **table}, required=required)
     for name, variable in found.items():
         yield from _shape_findings(f"{group}/{name}", variable, {**scales, **own})
         if name in scales and not np.array_equal(variable.values, scales[name].values):
             yield f"{group}/{name} differs from the scale {name}"
+
+
+def _required(contents: Contents, table: Mapping[str, Variable]) -> set[str]:
+    """Return the variables of a group that this file must have."""
+    absent = tuple(f"{level}_" for level in LEVELS if level not in _levels(contents))
+    required = {name for name in table if not name.startswith(absent)}
+    if _is_measured(contents):
+        return required
+    return {name for name in required if name not in MEASURED and not name.endswith("_resolved")}
 
 
 def _attribute_findings(contents: Contents, group: str) -> Iterator[str]:

@@ -24,6 +24,9 @@ LEVELS: tuple[str, ...] = ("euler", "diffusive")
 OWN_PLACES: dict[str, str] = {"site": "site_length", "bond": "bond_length"}
 
 
+RMS = "root mean square in the light cone"
+
+
 @dataclass(frozen=True)
 class Variable:
     """One row of the table: dimensions, units, meaning, element type and the names of its integer values."""
@@ -93,7 +96,10 @@ PROVENANCE: tuple[str, ...] = (
 )
 
 #: Attributes that hold a list or a mapping as JSON text, decoded when a run is opened.
-JSON_ATTRIBUTES: frozenset[str] = frozenset({"versions", "events", "preparation", "references"})
+JSON_ATTRIBUTES: frozenset[str] = frozenset({"versions", "events", "preparation", "references", "main_run"})
+
+#: Variables of a budget that exist only where companion runs measured the errors; so do the verdicts.
+MEASURED: frozenset[str] = frozenset({"error", "numerical", "numerical_norm", "dominant_source"})
 
 
 def variables_of(group: str, *, own_places: bool = False) -> dict[str, Variable]:
@@ -144,7 +150,7 @@ def _budget_variables(name: str) -> dict[str, Variable]:
         "error": Variable(("source", *dims), units, f"error of the {said} by source"),
         "bound": Variable(dims, units, f"rigorous bound on the truncation error of the {said}"),
         "numerical": Variable(dims, units, f"summed numerical error of the {said}"),
-        "numerical_norm": Variable(("time",), units, f"numerical error of the {said}, norm"),
+        "numerical_norm": Variable(("time",), units, f"numerical error of the {said}, {RMS}"),
         "dominant_source": Variable(("time",), "1", f"largest source of error of the {said}", "int64"),
     }
     for level in LEVELS:
@@ -153,5 +159,5 @@ def _budget_variables(name: str) -> dict[str, Variable]:
         table[f"{level}_resolved"] = Variable(
             dims, "1", f"verdict on the {deviation}", "int8", ("unresolved", "resolved")
         )
-        table[f"{level}_deviation_norm"] = Variable(("time",), units, f"{deviation}, norm")
+        table[f"{level}_deviation_norm"] = Variable(("time",), units, f"{deviation}, {RMS}")
     return table

@@ -2,8 +2,8 @@
 
 A filling keeps its value along dx/dt = v_eff, so theta(x, t) = theta_0(u), where the origin u(x, t) of the
 characteristic conserves the number of states to its left: with P(x, t) the integral of p'_dressed from a flat
-left end to x, P(u, 0) = P(x, t) - t e'_dressed(left end). In x this is a Volterra equation, solved by iteration
-at each time on its own. Source: B. Doyon, H. Spohn and T. Yoshimura, Nucl. Phys. B 926, 570 (2018).
+left end to x, P(u, 0) = P(x, t) - t e'_dressed(left end). In x this is a Volterra equation, solved by
+iteration at each time on its own. Source: B. Doyon, H. Spohn and T. Yoshimura, Nucl. Phys. B 926, 570 (2018).
 """
 
 from __future__ import annotations
@@ -33,38 +33,45 @@ ITERATIONS = 200
 
 @dataclass(frozen=True, eq=False)
 class Medium:
-    """What fillings are made of: the mesh, the thermal states of the profile, a state to dress them around."""
+    """What fillings are made of: mesh, profile, its thermal states, and a state to dress them around."""
 
     mesh: RapidityMesh
     states: ThermalStates
     profile: UnfoldedProfile
     reference: Reference
 
-    def dressed(self, origins: Reals, slopes: Reals) -> tuple[Reals, Reals, float]:
-        """Return one iterate of the dressed slopes, their averages, and the relative change of the slopes.
+    def dressed(self, origins: Reals, slopes: Reals) -> tuple[Reals, float]:
+        """Return one iterate of the dressed slopes, and its change relative to their largest value.
 
         origins : (position, string, node) where each quasiparticle was at t = 0
-        slopes  : (position, 2, string, node) e', p' over the window; averages (position, observable)
+        slopes  : (position, 2, string, node) e', p' over the window
         """
-        improved, means = np.empty(slopes.shape), np.empty((slopes.shape[0], 4))
-        for start in range(0, slopes.shape[0], POSITIONS_TOGETHER):
-            rows = slice(start, start + POSITIONS_TOGETHER)
-            filling = self.states.filling(*self.profile.parameters(origins[rows] @ self.mesh.spread))
-            change = filling - self.reference.filling
+        improved = np.empty(slopes.shape)
+        for rows in _batches(slopes.shape[0]):
+            change = self._filling(origins[rows]) - self.reference.filling
             improved[rows] = redress(self.mesh, self.reference, change=change, slopes=slopes[rows])
-            means[rows] = averages(self.mesh, filling, improved[rows])
-        return improved, means, float(np.max(np.abs(improved - slopes)) / np.max(np.abs(improved)))
+        return improved, float(np.max(np.abs(improved - slopes)) / np.max(np.abs(improved)))
+
+    def averages(self, origins: Reals, slopes: Reals) -> Reals:
+        """Return averages (position, observable)."""
+        parts = [averages(self.mesh, self._filling(origins[r]), slopes[r]) for r in _batches(slopes.shape[0])]
+        return np.concatenate(parts)
+
+    def _filling(self, origins: Reals) -> Reals:
+        return self.states.filling(*self.profile.parameters(origins @ self.mesh.spread))
+
+
+def _batches(count: int) -> list[slice]:
+    return [slice(begin, begin + POSITIONS_TOGETHER) for begin in range(0, count, POSITIONS_TOGETHER)]
 
 
 @dataclass(frozen=True, eq=False)
 class Moment:
-    """The profile at one time: origins (position, string, node), dressed slopes (position, 2, string, node)
-    and averages (position, observable)."""
+    """One time: origins (position, string, node) and dressed slopes (position, 2, string, node)."""
 
     time: float
     origins: Reals
     slopes: Reals
-    averages: Reals
 
 
 @dataclass(frozen=True, eq=False)
@@ -72,7 +79,7 @@ class Flow:
     """Everything about a profile that does not depend on time.
 
     positions : (position,) equidistant from a left end that stays flat until the last time, up to the right
-                wall; `start` is the state there at t = 0
+                wall; `start` is their state at t = 0
     integral  : (position, position) cumulative integral
     count     : states from the left at t = 0, on positions wherever a characteristic can come from
     """
@@ -85,7 +92,12 @@ class Flow:
 
 
 def prepare_flow(
-    mesh: RapidityMesh, states: ThermalStates, profile: UnfoldedProfile, *, spacing: float, light_travel: float
+    mesh: RapidityMesh,
+    states: ThermalStates,
+    profile: UnfoldedProfile,
+    *,
+    spacing: float,
+    light_travel: float,
 ) -> Flow:
     """Return the flow on positions at most `spacing` apart, with its state at t = 0 solved.
 
@@ -97,19 +109,20 @@ def prepare_flow(
     middle = (np.full(mesh.shape, 0.5 * sum(span)) for span in (states.beta_range, states.field_range))
     reference = reference_state(mesh, states.filling(*middle))
     medium = Medium(mesh, states, profile, reference)
-    start = _local_equilibrium(medium, positions)
+    start = local_equilibrium(medium, positions)
     count = state_count(positions, start.slopes[:, 1])
-    inside = Moment(0.0, start.origins[:kept], start.slopes[:kept], start.averages[:kept])
+    inside = Moment(0.0, start.origins[:kept], start.slopes[:kept])
     return Flow(medium, positions[:kept], cumulative_integral(positions[:kept]), inside, count)
 
 
-def _local_equilibrium(medium: Medium, positions: Reals) -> Moment:
+def local_equilibrium(medium: Medium, positions: Reals) -> Moment:
+    """Return the state at t = 0 of any positions (position,)."""
     origins = np.tile(positions[:, None, None], (1, medium.mesh.model.strings, medium.mesh.model.nodes))
     slopes, change = np.repeat(medium.reference.slopes[None], positions.size, axis=0), np.inf
     for _ in range(ITERATIONS):
-        slopes, means, change = medium.dressed(origins, slopes)
+        slopes, change = medium.dressed(origins, slopes)
         if change < CHANGE_TARGET:
-            return Moment(0.0, origins, slopes, means)
+            return Moment(0.0, origins, slopes)
     what = f"initial profile at D = {medium.mesh.model.anisotropy:.6g}"
     raise ConvergenceError(what, residual=change)
 
@@ -128,12 +141,12 @@ def flow_to(flow: Flow, time: float, *, earlier: Moment) -> Moment:
     entered = time * flow.start.slopes[0, 0]
     shift = np.inf
     for _ in range(ITERATIONS):
-        slopes, means, change = flow.medium.dressed(origins, slopes)
+        slopes, change = flow.medium.dressed(origins, slopes)
         counted, density = flow.count.at(origins)
         correction = (np.tensordot(flow.integral, slopes[:, 1], axes=1) - entered - counted) / density
         shift = float(np.max(np.abs(correction)))
         if shift < ORIGIN_TARGET and change < CHANGE_TARGET:
-            return Moment(time, origins, slopes, means)
+            return Moment(time, origins, slopes)
         origins = origins + correction
     what = f"characteristics at D = {flow.medium.mesh.model.anisotropy:.6g}, t = {time:g}"
     raise ConvergenceError(what, residual=shift)

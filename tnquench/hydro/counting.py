@@ -14,7 +14,7 @@ SPLINE_DEGREE = 5
 
 
 def cumulative_integral(positions: Reals) -> Reals:
-    """Return the (position, position) matrix that integrates values from the first position, by quintic spline."""
+    """Return the (position, position) matrix of the integral from the first position, by quintic spline."""
     spline = make_interp_spline(positions, np.eye(positions.size), k=SPLINE_DEGREE)
     return np.asarray(spline.antiderivative()(positions))
 
@@ -37,7 +37,7 @@ class StateCount:
     gradients: Reals
 
     def at(self, x: Reals) -> tuple[Reals, Reals]:
-        """Return P and its density at x (any, string, node): quintic Hermite inside, linear beyond the ends."""
+        """Return P and its density at x (any, string, node): quintic inside, linear beyond the ends."""
         first, spacing = self.positions[0], self.positions[1] - self.positions[0]
         inside = np.clip(x, first, self.positions[-1])
         cell = np.minimum(((inside - first) / spacing).astype(np.int64), self.positions.size - 2)
@@ -57,4 +57,5 @@ class StateCount:
 def state_count(positions: Reals, densities: Reals) -> StateCount:
     """Return the count of `densities` (position, string, node) at equidistant positions."""
     spline = make_interp_spline(positions, densities, k=SPLINE_DEGREE)
-    return StateCount(positions, spline.antiderivative()(positions), densities, spline.derivative()(positions))
+    values, gradients = spline.antiderivative()(positions), spline.derivative()(positions)
+    return StateCount(positions, values, densities, gradients)

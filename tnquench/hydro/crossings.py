@@ -35,7 +35,7 @@ class Crossings:
 
 
 def velocities(mesh: RapidityMesh, slopes: Reals) -> Reals:
-    """Return v_eff = e'_dressed / p'_dressed on the mesh, (state, string, point), from (state, 2, string, node)."""
+    """Return v_eff = e'_dressed / p'_dressed, (state, string, point), of slopes (state, 2, string, node)."""
     energy, momentum = np.moveaxis(slopes @ mesh.spread, 1, 0)
     return np.asarray(energy / momentum)
 
@@ -43,7 +43,7 @@ def velocities(mesh: RapidityMesh, slopes: Reals) -> Reals:
 def find_crossings(mesh: RapidityMesh, slopes: Reals, rays: Reals) -> tuple[Crossings, Reals]:
     """Return all crossings v_eff = ray of each state, and the side (ray, string) of the leftmost rapidity.
 
-    Extrema between mesh points are sampled too, so that a pair of crossings on both sides of one is not missed.
+    Extrema between mesh points are sampled too, so that no pair of crossings on both sides of one is missed.
     slopes : (ray, 2, string, node) dressed e', p' of the state on each ray; rays : (ray,) velocities x/t
     """
     sampled = velocities(mesh, slopes).reshape(-1, mesh.rapidities.size)
@@ -76,7 +76,7 @@ def side_weights(mesh: RapidityMesh, crossings: Crossings, leftmost: Reals) -> R
 
 
 def extreme_velocities(mesh: RapidityMesh, slopes: Reals) -> tuple[float, float]:
-    """Return the least and greatest effective velocity of states (state, 2, string, node) over all strings."""
+    """Return the least and greatest effective velocity of states with slopes (state, 2, string, node)."""
     sampled = velocities(mesh, slopes).reshape(-1, mesh.rapidities.size)
     everything = np.append(sampled.ravel(), _extrema(mesh, slopes, sampled)[3])
     return float(everything.min()), float(everything.max())

@@ -1,7 +1,7 @@
 """Two joined halves at Euler scale: one stationary state on each ray x/t.
 
-Sources: O. A. Castro-Alvaredo, B. Doyon and T. Yoshimura, Phys. Rev. X 6, 041065 (2016); B. Bertini, M. Collura,
-J. De Nardis and M. Fagotti, Phys. Rev. Lett. 117, 207201 (2016).
+Sources: O. A. Castro-Alvaredo, B. Doyon and T. Yoshimura, Phys. Rev. X 6, 041065 (2016); B. Bertini,
+M. Collura, J. De Nardis and M. Fagotti, Phys. Rev. Lett. 117, 207201 (2016).
 """
 
 from __future__ import annotations
@@ -11,7 +11,16 @@ import numpy as np
 from tnquench.conventions import Reals
 from tnquench.errors import ConvergenceError
 from tnquench.hydro.crossings import extreme_velocities, find_crossings, side_weights
-from tnquench.hydro.mesh import OBSERVABLES, RapidityMesh, Reference, averages, dressed_slopes, redress, reference_state, uniform_averages
+from tnquench.hydro.mesh import (
+    OBSERVABLES,
+    RapidityMesh,
+    Reference,
+    averages,
+    dressed_slopes,
+    redress,
+    reference_state,
+    uniform_averages,
+)
 
 #: Rays solved together around one reference state.
 RAYS_TOGETHER = 48
@@ -23,7 +32,7 @@ ITERATIONS = 100
 
 
 def light_cone_of_halves(mesh: RapidityMesh, left: Reals, right: Reals) -> tuple[float, float]:
-    """Return the velocities of the cone's edges: the least of the left state, the greatest of the right state."""
+    """Return the velocities of the cone's edges: the left state's least, the right state's greatest."""
     slopes = dressed_slopes(mesh, left), dressed_slopes(mesh, right)
     return extreme_velocities(mesh, slopes[0][None])[0], extreme_velocities(mesh, slopes[1][None])[1]
 
@@ -46,7 +55,7 @@ def join_halves(mesh: RapidityMesh, left: Reals, right: Reals, *, rays: Reals) -
         chosen = inside[start : start + RAYS_TOGETHER]
         weights = _sides(mesh, slopes[None], rays[chosen[chosen.size // 2]][None])[0]
         reference = reference_state(mesh, right + (left - right) * weights)
-        fillings, all_slopes = _solve(mesh, reference, left=left, right=right, rays=rays[chosen])
+        fillings, all_slopes = states_on_rays(mesh, reference, left=left, right=right, rays=rays[chosen])
         result[chosen] = averages(mesh, fillings, all_slopes)
         slopes = all_slopes[-1]
     return result
@@ -56,10 +65,13 @@ def _sides(mesh: RapidityMesh, slopes: Reals, rays: Reals) -> Reals:
     return side_weights(mesh, *find_crossings(mesh, slopes, rays))
 
 
-def _solve(
+def states_on_rays(
     mesh: RapidityMesh, reference: Reference, *, left: Reals, right: Reals, rays: Reals
 ) -> tuple[Reals, Reals]:
-    """Return fillings (ray, string, point) and dressed slopes (ray, 2, string, node) on neighbouring rays."""
+    """Return fillings (ray, string, point) and dressed slopes (ray, 2, string, node) on rays inside the cone.
+
+    reference : a state near those on the rays, around which they are dressed
+    """
     slopes = np.repeat(reference.slopes[None], rays.size, axis=0)
     residual = np.inf
     for _ in range(ITERATIONS):

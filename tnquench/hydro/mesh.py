@@ -1,9 +1,10 @@
 """States whose filling functions are rough in rapidity: dressing and averages on a fine uniform mesh.
 
-The dressed derivatives e' and p' stay smooth even where the filling jumps or oscillates, because the scattering
-kernel smooths. They are therefore kept at the Gauss-Legendre nodes of `BetheModel`, divided by the window
-1/cosh(lambda)^2 so that they stay finite at infinite rapidity, while fillings live on a uniform rapidity mesh, where
-the trapezoidal rule converges exponentially (L. N. Trefethen and J. A. C. Weideman, SIAM Review 56, 385 (2014)).
+The dressed derivatives e' and p' stay smooth even where the filling jumps or oscillates, because the
+scattering kernel smooths. They are therefore kept at the Gauss-Legendre nodes of `BetheModel`, divided by
+the window 1/cosh(lambda)^2 so that they stay finite at infinite rapidity, while fillings live on a uniform
+rapidity mesh, where the trapezoidal rule converges exponentially (L. N. Trefethen and J. A. C. Weideman,
+SIAM Review 56, 385 (2014)).
 """
 
 from __future__ import annotations
@@ -34,8 +35,8 @@ class RapidityMesh:
     rapidities : (point,), ascending with distance `spacing`
     spread     : (node, point) interpolation from nodes to mesh
     window     : (point,) 1/cosh^2
-    kernel     : (string*point, string*node); (theta * f) @ kernel is the convolution integral of T (sigma theta f)
-                 for f on the mesh, both f and the result divided by the window
+    kernel     : (string*point, string*node); (theta f) @ kernel is the convolution of T with sigma theta f,
+                 f on the mesh, both f and the result divided by the window
     slopes     : (2, string, node) bare e' and p' divided by the window
     measure    : (string, point) sigma window spacing / 2 pi, the weight of theta q f in an average
     energy     : (string, point) bare energy
@@ -60,7 +61,7 @@ class RapidityMesh:
 
 @lru_cache(maxsize=8)
 def rapidity_mesh(*, anisotropy: float, coupling: float, nodes: int, spacing: float) -> RapidityMesh:
-    """Return the mesh of about `spacing` crossing angles between rapidities over `nodes` smooth nodes a string.
+    """Return the mesh with rapidities at most `spacing` crossing angles apart, over `nodes` nodes a string.
 
     Raises UnsupportedAnisotropy where the strings are not finite in number. Cached.
     """
@@ -90,7 +91,7 @@ def rapidity_mesh(*, anisotropy: float, coupling: float, nodes: int, spacing: fl
 
 
 def _mesh_kernel(model: BetheModel, rapidities: Reals, weights: Reals) -> Reals:
-    """Return T_ab(lambda_node - mu_point) sigma_b weights / window(node), shape (string*point, string*node)."""
+    """Return T_ab(lambda_node - mu_point) sigma_b weights / window(node), (string*point, string*node)."""
     table = string_table(model.strings)
     distance = model.rapidities[None, :] - rapidities[:, None]
     scale = weights[:, None] * np.cosh(model.rapidities) ** 2
@@ -156,10 +157,10 @@ def redress(mesh: RapidityMesh, reference: Reference, *, change: Reals, slopes: 
 
 
 def averages(mesh: RapidityMesh, filling: Reals, slopes: Reals) -> Reals:
-    """Return the mean densities and currents of many states, shape (state, observable) in the order OBSERVABLES.
+    """Return the mean densities and currents of states, (state, observable) in the order OBSERVABLES.
 
-    Densities integrate q theta sigma p'_dressed / 2 pi and currents q theta sigma e'_dressed / 2 pi, with q = e over
-    the ferromagnet for the energy and -n for the charge S^z.
+    Densities integrate q theta sigma p'_dressed / 2 pi, currents q theta sigma e'_dressed / 2 pi, with q = e
+    above the ferromagnet for the energy and q = -n for the charge S^z.
     filling : (state, string, point); slopes : (state, 2, string, node) dressed e', p' over the window
     Source: Castro-Alvaredo, Doyon and Yoshimura (2016); Bertini, Collura, De Nardis and Fagotti (2016).
     """
@@ -179,4 +180,4 @@ def averages(mesh: RapidityMesh, filling: Reals, slopes: Reals) -> Reals:
 
 def uniform_averages(mesh: RapidityMesh, filling: Reals) -> Reals:
     """Return the averages (observable,) of one uniform state, filling (string, point)."""
-    return averages(mesh, filling[None], dressed_slopes(mesh, filling)[None])[0]
+    return np.asarray(averages(mesh, filling[None], dressed_slopes(mesh, filling)[None])[0])

@@ -19,6 +19,10 @@ from tnquench.hydro.thermal_states import State, thermal_on_mesh
 #: Smooth nodes a string and mesh spacing, in crossing angles, of successive refinements of joined halves.
 STEP_LEVELS: tuple[tuple[int, float], ...] = ((32, 0.11), (48, 0.085), (64, 0.07), (96, 0.055))
 
+#: Error at which refinement stops.
+STEP_TARGET = 1e-8
+SMOOTH_TARGET = 1e-6
+
 #: Rays x/t that agree to this many decimals are one ray.
 RAY_DECIMALS = 12
 
@@ -61,10 +65,10 @@ def predict_step(
 
     left, right, middle : (beta, beta_field) for x < 0, for x > 0, and at x = 0 when t = 0
     times : (time,) in 1/J, not negative; sites, bonds : (site,), (bond,) positions, symmetric about 0
-    At t = 0 values are those of the local thermal state. The light cone's left edge is the least velocity of the
-    left state, its right edge the greatest of the right state: beyond them nothing changes.
-    Raises UnsupportedAnisotropy (a ValueError), ConvergenceError, and InputError where light reaches the ends,
-    because the solution is that of an infinite chain.
+    At t = 0 values are those of the local thermal state. The light cone's left edge is the least velocity of
+    the left state, its right edge the greatest of the right state: beyond them nothing changes.
+    Raises UnsupportedAnisotropy (a ValueError), ConvergenceError, and InputError where light reaches the
+    ends, because the solution is that of an infinite chain.
     """
 
     def mesh_at(level: int) -> RapidityMesh:
@@ -86,7 +90,7 @@ def predict_step(
         _refuse_reflection(edges, times, sites)
     rays = _rays(np.concatenate([sites, bonds]), times, uniform=uniform)
     distinct, index = np.unique(rays, return_inverse=True)
-    refined = refine(solve, distinct, levels=len(STEP_LEVELS))
+    refined = refine(solve, distinct, levels=len(STEP_LEVELS), target=STEP_TARGET)
     values, errors = (each[index.reshape(rays.shape)] for each in (refined.values, refined.errors))
     method = "uniform" if uniform else "joined halves (self-similar)"
     return _prediction(Refined(values, errors), sites.size, edges, method, STEP_REFERENCES)
@@ -105,7 +109,7 @@ def predict_smooth(
     """Predict a smooth profile between reflecting ends half a lattice spacing beyond the first and last site.
 
     beta, beta_field : functions of position (any shape) in the chain
-    times : (time,) in 1/J, not negative, ascending; sites, bonds : (site,), (bond,) positions, symmetric about 0
+    times : (time,) in 1/J, not negative, ascending; sites, bonds : (site,), (bond,) positions, symmetric
     The light cone holds the extreme velocities of the initial profile.
     Raises UnsupportedAnisotropy (a ValueError) and ConvergenceError.
     """
@@ -121,6 +125,7 @@ def predict_smooth(
         lambda level, some: smooth_averages(start, SMOOTH_LEVELS[level], some, places),
         times,
         levels=len(SMOOTH_LEVELS),
+        target=SMOOTH_TARGET,
     )
     return _prediction(refined, sites.size, initial_light_cone(start), "characteristics", SMOOTH_REFERENCES)
 
@@ -140,21 +145,23 @@ def _refuse_reflection(edges: tuple[float, float], times: Reals, sites: Reals) -
     arrival = wall / max(-edges[0], edges[1])
     if times.max(initial=0.0) > arrival:
         problem = (
-            f"[evolution] until = {times.max():g}: light (velocities {edges[0]:.4g}, {edges[1]:.4g}) reaches the ends "
-            f"at t = {arrival:.4g}, where the solution for two infinite halves ends; stop before, or give the step a "
-            "width"
+            f"[evolution] until = {times.max():g}: light (velocities {edges[0]:.4g}, {edges[1]:.4g}) reaches "
+            f"the ends at t = {arrival:.4g}; the solution for two joined halves is that of an infinite "
+            "chain. Stop earlier, take more sites, or give the step a width"
         )
-        raise InputError("prediction of two joined halves", [problem])
+        subject = "prediction"
+        raise InputError(subject, [problem])
 
 
 def _prediction(
-    refined: Refined, site_count: int, light_cone: tuple[float, float], method: str, references: tuple[str, ...]
+    refined: Refined, sites: int, light_cone: tuple[float, float], method: str, references: tuple[str, ...]
 ) -> Prediction:
     """Sort values (time, site or bond, observable) into the observables' places."""
     fields, errors = {}, {}
     for index, name in enumerate(OBSERVABLES):
-        part = slice(None, site_count) if OBSERVABLE_PLACES[name] == "site" else slice(site_count, None)
-        fields[name], errors[name] = refined.values[:, part, index].copy(), refined.errors[:, part, index].copy()
+        part = slice(None, sites) if OBSERVABLE_PLACES[name] == "site" else slice(sites, None)
+        fields[name] = refined.values[:, part, index].copy()
+        errors[name] = refined.errors[:, part, index].copy()
     for each in (fields, errors):
         each["energy_current"][:, [0, -1]] = 0.0  # no bond beyond the end sites to carry energy
     exact = {name: np.zeros_like(values) for name, values in fields.items()}

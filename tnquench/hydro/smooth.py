@@ -12,7 +12,7 @@ from tnquench.bethe.model import xxz_model
 from tnquench.bethe.states import effective_velocity, thermal_filling
 from tnquench.bethe.strings import supported_nu
 from tnquench.conventions import Reals
-from tnquench.hydro.characteristics import Flow, flow_to, prepare_flow
+from tnquench.hydro.characteristics import Flow, flow_to, local_equilibrium, prepare_flow
 from tnquench.hydro.counting import resample
 from tnquench.hydro.crossings import extreme_velocities
 from tnquench.hydro.mesh import OBSERVABLES, rapidity_mesh
@@ -91,8 +91,8 @@ class SmoothStart:
         """Smallest length, half range over steepest slope, of the two parameters."""
         spacing = 2.0 * self.wall / (self.samples.shape[1] - 1)
         steepest = np.abs(np.diff(self.samples, axis=1)).max(axis=1) / spacing
-        half_range = 0.5 * np.ptp(self.samples, axis=1)
-        return float(min(half / slope for half, slope in zip(half_range, steepest, strict=True) if slope > 0.0))
+        varying = steepest > 0.0
+        return float(np.min(0.5 * np.ptp(self.samples, axis=1)[varying] / steepest[varying]))
 
     @cached_property
     def velocity_survey(self) -> tuple[float, float]:
@@ -116,13 +116,17 @@ def initial_light_cone(start: SmoothStart) -> tuple[float, float]:
 
 
 def smooth_averages(start: SmoothStart, level: SmoothLevel, times: Reals, places: Reals) -> Reals:
-    """Return averages (time, place, observable) of a smooth profile at ascending times and places in the chain."""
+    """Return averages (time, place, observable) of a smooth profile at ascending times."""
     flow = _flow(start, level, until=float(times[-1]))
     moment, result = flow.start, np.empty((times.size, places.size, len(OBSERVABLES)))
     for index, time in enumerate(times):
-        if time > 0.0:
+        if time == 0.0:
+            here = local_equilibrium(flow.medium, places)
+            result[index] = flow.medium.averages(here.origins, here.slopes)
+        else:
             moment = flow_to(flow, float(time), earlier=moment)
-        result[index] = resample(flow.positions, moment.averages, places)
+            means = flow.medium.averages(moment.origins, moment.slopes)
+            result[index] = resample(flow.positions, means, places)
     return result
 
 

@@ -77,13 +77,16 @@ def _sufficient_points(
 
 
 def _expand(
-    mesh: RapidityMesh, beta_range: tuple[float, float], field_range: tuple[float, float], orders: tuple[int, int]
+    mesh: RapidityMesh,
+    beta_range: tuple[float, float],
+    field_range: tuple[float, float],
+    orders: tuple[int, int],
 ) -> Reals:
-    """Return the Chebyshev coefficients (beta order, field order, string, point) from that many thermal states."""
-    betas, fields = (_chebyshev_points(*span, count) for span, count in zip((beta_range, field_range), orders, strict=True))
-    values = np.array([[thermal_on_mesh(mesh, (b, f)) for f in fields] for b in betas])
+    """Return Chebyshev coefficients (beta order, field order, string, point) from as many thermal states."""
+    betas, fields = _chebyshev_points(*beta_range, orders[0]), _chebyshev_points(*field_range, orders[1])
+    values = np.array([[thermal_on_mesh(mesh, (beta, field)) for field in fields] for beta in betas])
     to_beta, to_field = (_chebyshev_transform(count) for count in orders)
-    return np.einsum("ib,jf,bfsp->ijsp", to_beta, to_field, values, optimize=True)
+    return np.asarray(np.einsum("ib,jf,bfsp->ijsp", to_beta, to_field, values, optimize=True))
 
 
 def _chebyshev_points(least: float, greatest: float, count: int) -> Reals:
@@ -108,8 +111,12 @@ def _unit(values: Reals, span: tuple[float, float]) -> Reals:
 def _clenshaw(coefficients: Sequence[Reals] | Reals, unit: Reals) -> Reals:
     """Return the Chebyshev sum of coefficients (order, ...) at `unit`, by Clenshaw's recurrence."""
     if len(coefficients) == 1:
-        return np.asarray(coefficients[0])
-    first, second = coefficients[-1], np.zeros_like(unit)
+        return np.broadcast_to(coefficients[0], unit.shape)
+    twice = 2.0 * unit
+    first, second = np.broadcast_to(coefficients[-1], unit.shape), np.zeros_like(unit)
     for coefficient in coefficients[-2:0:-1]:
-        first, second = coefficient + 2.0 * unit * first - second, first
+        following = twice * first
+        following -= second
+        following += coefficient
+        first, second = following, first
     return np.asarray(coefficients[0] + unit * first - second)

@@ -14,24 +14,26 @@ from tnquench.conventions import OBSERVABLE_PLACES, PHYSICAL_SOURCES, Reals
 from tnquench.dataset.reader import Run
 from tnquench.dataset.variables import LEVELS
 from tnquench.report.question import is_step, settings_of
+from tnquench.report.units import Units, units_of
 
 Verdicts = NDArray[np.bool_]
 
-#: A field that stays below this everywhere, in units of the coupling, vanishes by symmetry: it is rounding.
-NOTHING = 1e-10
-
-#: Units of the dataset as a physicist writes them.
-UNITS: dict[str, str] = {"coupling": "J", "coupling^2": "J²", "1/coupling": "1/J", "1": "", "nats": "nats"}
+#: A field of the chain that stays below this everywhere vanishes by symmetry: it is rounding. A prediction
+#: carries the errors of its grids, so that more is allowed there.
+NOTHING, NOTHING_PREDICTED = 1e-10, 1e-8
+#: A place where the field moves by less than this fraction of its whole range is left out of profiles.
+STILL = 2e-3
 
 
 @dataclass(frozen=True)
 class Comparison:
     """Everything known about one observable; what the run did not compute is None.
 
-    times (time,) in 1/J and positions (place,) in lattice spacings span the arrays below, all of shape
+    times (time,) and positions (place,) in lattice spacings span the arrays below, all of shape
     (time, place) and in `unit` unless said otherwise.
     deviation : quantum minus prediction; resolved : the verdict on it
-    numerical : summed numerical error, None where no companion runs measured it; errors : the same by source
+    numerical : summed numerical error, None where no companion runs measured it; errors : the same by source,
+    each an estimate or a bound as kinds says
     bound : rigorous, on truncation alone
     deviation_norm, numerical_norm (time,) : norms over the light-cone window; dominant : one source a time
     light_cone : leftmost and rightmost velocity of the prediction; joined : the start joins halves at x = 0
@@ -39,6 +41,7 @@ class Comparison:
 
     name: str
     unit: str
+    units: Units
     level: str
     times: Reals
     positions: Reals
@@ -49,6 +52,7 @@ class Comparison:
     bound: Reals | None
     resolved: Verdicts | None
     errors: Mapping[str, Reals]
+    kinds: Mapping[str, str]
     deviation_norm: Reals | None
     numerical_norm: Reals | None
     dominant: tuple[str, ...]
@@ -65,8 +69,18 @@ class Comparison:
     @property
     def vanishes(self) -> bool:
         """Whether the field is zero by symmetry in the chain and in the prediction."""
-        sides = [side for side in (self.quantum, self.prediction) if side is not None]
-        return all(float(np.max(np.abs(side), initial=0.0)) < NOTHING for side in sides)
+        limits = ((self.quantum, NOTHING), (self.prediction, NOTHING_PREDICTED))
+        return all(side is None or float(np.max(np.abs(side))) < limit for side, limit in limits)
+
+    @property
+    def stretch(self) -> Verdicts:
+        """Places where anything moves, with a margin, (place,); all of them where nothing does."""
+        moved = np.max(np.abs(self.known - self.known[0]), axis=0)
+        x = self.positions[moved > STILL * float(np.ptp(self.known))]
+        if x.size == 0:
+            return np.ones(self.positions.size, dtype=np.bool_)
+        margin = 2.0 + 0.1 * float(np.ptp(x))
+        return np.asarray((self.positions >= x[0] - margin) & (self.positions <= x[-1] + margin))
 
     @property
     def window(self) -> Verdicts:
@@ -81,7 +95,8 @@ class Comparison:
     @property
     def judged(self) -> Verdicts:
         """Points the verdict is about: inside the light cone and after the start, (time, place)."""
-        return self.window & (self.times[:, None] > 0)
+        later = self.times > 0
+        return self.window & later[:, None] if later.any() else self.window
 
     def norm(self, values: Reals) -> Reals:
         """Return the root mean square over the light-cone window, (time,), of an array (time, place)."""
@@ -94,11 +109,14 @@ def compare(run: Run, name: str) -> Comparison:
     theory = run.hydrodynamics.get(level, xarray.Dataset())
     budget = run.budget.get(name, xarray.Dataset())
     estimated = bool(run.companions)
+    settings = settings_of(run)
+    units = units_of(settings)
     cone = (theory.attrs.get("light_cone_left"), theory.attrs.get("light_cone_right"))
     field = run.quantum if name in run.quantum else theory
     return Comparison(
         name=name,
-        unit=UNITS.get(str(field[name].attrs.get("units")), "") if name in field else "",
+        unit=units.symbol(str(field[name].attrs.get("units"))) if name in field else "",
+        units=units,
         level=level,
         times=_reals(run.coordinates, "time"),
         positions=_reals(run.coordinates, OBSERVABLE_PLACES[name]),
@@ -109,12 +127,13 @@ def compare(run: Run, name: str) -> Comparison:
         bound=_values(budget, "bound"),
         resolved=_verdicts(budget, f"{level}_resolved") if estimated else None,
         errors=_errors(budget) if estimated else {},
+        kinds={str(key)[5:]: str(kind) for key, kind in budget.attrs.items() if str(key).startswith("kind_")},
         deviation_norm=_values(budget, f"{level}_deviation_norm"),
         numerical_norm=_values(budget, "numerical_norm") if estimated else None,
         dominant=_dominant(budget) if estimated else (),
         resolve_at=float(budget.attrs.get("resolve_at", np.nan)),
         light_cone=(float(cone[0]), float(cone[1])) if cone[0] is not None and cone[1] is not None else None,
-        joined=is_step(settings_of(run)),
+        joined=is_step(settings),
     )
 
 

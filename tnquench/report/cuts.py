@@ -12,7 +12,7 @@ from tnquench.conventions import Integers, Reals
 from tnquench.report.canvas import FAINT, INK, PREDICTION, QUANTUM, Panel, Plate, axes_at
 from tnquench.report.comparison import Comparison
 from tnquench.report.maps import X_LABEL
-from tnquench.report.scales import linear, span, symmetric_decades, typeset
+from tnquench.report.scales import linear, reach, span, symmetric_decades, typeset
 from tnquench.report.wording import LEVEL_NAMES, OBSERVABLE_NAMES, TIMES, labelled, plain
 
 SIZE = (5.6, 4.2)
@@ -20,8 +20,6 @@ LEFT, RIGHT, BOTTOM, TOP = 0.78, 0.12, 0.5, 0.34
 LOWER, GAP = 1.3, 0.16  # height of the lower axes, and the space above it
 #: Cuts are taken nearest to these fractions of the last time.
 FRACTIONS = (0.1, 0.35, 0.65, 1.0)
-#: A place where the field moves by less than this fraction of its whole range lies outside the picture.
-STILL = 2e-3
 
 
 def cut_times(times: Reals) -> Integers:
@@ -36,10 +34,11 @@ def cut_times(times: Reals) -> Integers:
 def cut_plate(field: Comparison) -> Plate:
     """Return the profile cuts of one observable."""
     said = OBSERVABLE_NAMES[field.name]
+    instants = [field.units.instant(float(time)) for time in field.times]
     panels = tuple(
         Panel(
             f"{field.name}_cut_{number}",
-            f"Profile of the {said} at t = {plain(float(field.times[index]))}/J, its deviation and error",
+            f"Profile of the {said} at {instants[index]}, its deviation and error",
             partial(_draw_cut, field, int(index)),
             *SIZE,
         )
@@ -66,7 +65,7 @@ def _draw_cut(field: Comparison, index: int, figure: FigureBase) -> None:
     bottom = BOTTOM + (LOWER + GAP if below else 0.0)
     upper = axes_at(figure, SIZE, left=LEFT, right=RIGHT, bottom=bottom, top=TOP)
     _values(upper, field, index)
-    upper.set_title(f"t = {plain(float(field.times[index]))}/J")
+    upper.set_title(field.units.instant(float(field.times[index])))
     handles, names = upper.get_legend_handles_labels()
     if below:
         upper.tick_params(labelbottom=False)
@@ -103,8 +102,8 @@ def _values(axes: Axes, field: Comparison, index: int) -> None:
     if field.prediction is not None:
         theory = LEVEL_NAMES.get(field.level, field.level)
         axes.plot(x, field.prediction[index], color=PREDICTION, label=theory, zorder=2)
-    axes.set_xlim(*_reach(field))
-    low, high = span(field.known, margin=0.06)
+    axes.set_xlim(*reach(x[field.stretch]))
+    low, high = span(field.known[:, field.stretch], margin=0.06)
     axes.set_ylim(low, high)
     unit = linear(axes.yaxis, max(abs(low), abs(high)), field.unit)
     axes.set_ylabel(labelled(OBSERVABLE_NAMES[field.name], unit))
@@ -133,16 +132,17 @@ def _difference(axes: Axes, field: Comparison, index: int) -> None:
                 zorder=2,
             )
             axes.plot(x, -threshold, ":", color=QUANTUM, lw=1.1, zorder=2)
-    axes.set_xlim(*_reach(field))
+    axes.set_xlim(*reach(x[field.stretch]))
     unit = _stretch(axes, field, index)
     axes.set_ylabel(labelled("deviation" if field.deviation is not None else "error", unit))
 
 
 def _stretch(axes: Axes, field: Comparison, index: int) -> str:
     """Make the scale symmetric, logarithmic where the deviation dwarfs the error; return the printed unit."""
-    error = 0.0 if field.numerical is None else float(np.max(field.numerical[index]))
+    shown = field.stretch & field.window[index]
+    error = 0.0 if field.numerical is None else float(np.max(field.numerical[index, shown]))
     threshold = error * (field.resolve_at if field.deviation is not None else 1.0)
-    deviation = 0.0 if field.deviation is None else float(np.max(np.abs(field.deviation[index])))
+    deviation = 0.0 if field.deviation is None else float(np.max(np.abs(field.deviation[index, shown])))
     largest = max(deviation, threshold, 1e-15)
     if 0 < threshold < largest / 5:
         axes.set_yscale("symlog", linthresh=threshold, linscale=0.8)
@@ -151,14 +151,3 @@ def _stretch(axes: Axes, field: Comparison, index: int) -> str:
         return typeset(field.unit)
     axes.set_ylim(-1.25 * largest, 1.25 * largest)
     return linear(axes.yaxis, largest, field.unit, ticks=5)
-
-
-def _reach(field: Comparison) -> tuple[float, float]:
-    """Return the stretch of the chain where anything moves, with a margin; else the whole chain."""
-    moved = np.max(np.abs(field.known - field.known[0]), axis=0)
-    x = field.positions[moved > STILL * float(np.ptp(field.known))]
-    first, last = float(field.positions[0]), float(field.positions[-1])
-    if x.size == 0:
-        return first, last
-    margin = 2.0 + 0.1 * float(np.ptp(x))
-    return max(first, float(x[0]) - margin), min(last, float(x[-1]) + margin)

@@ -12,8 +12,10 @@ from tnquench.report.canvas import Plate
 from tnquench.report.comparison import Comparison, compare
 from tnquench.report.cuts import cut_note, cut_plate
 from tnquench.report.maps import map_note, map_plate
+from tnquench.report.question import settings_of
 from tnquench.report.sources import budget_plate, start_plate
 from tnquench.report.traces import conservation_plate, growth_plate
+from tnquench.report.units import units_of
 
 
 @dataclass(frozen=True)
@@ -53,9 +55,10 @@ def chapters(run: Run, fields: list[Comparison]) -> list[Chapter]:
     if budgeted:
         found.append(_alone("budget", budget_plate(budgeted)))
     if len(run.quantum):
+        units = units_of(settings_of(run))
         found += [
-            _alone("growth", growth_plate(run.quantum)),
-            _alone("conservation", conservation_plate(run.quantum)),
+            _alone("growth", growth_plate(run.quantum, units)),
+            _alone("conservation", conservation_plate(run.quantum, units)),
         ]
     return found
 

@@ -13,12 +13,11 @@ from matplotlib.ticker import MaxNLocator
 from tnquench.conventions import Reals
 from tnquench.report.canvas import DIVERGING, EDGE, HEAT, INK, UNRESOLVED, Panel, Plate, axes_at
 from tnquench.report.comparison import Comparison
-from tnquench.report.scales import linear, span, symmetric_decades, typeset
+from tnquench.report.scales import linear, reach, span, symmetric_decades, typeset
 from tnquench.report.wording import LEVEL_NAMES, MINUS, OBSERVABLE_NAMES, plain
 
 SIZE = (3.72, 3.15)
 X_LABEL = "position x (lattice spacings)"
-T_LABEL = "time t (1/J)"
 
 
 def map_plate(field: Comparison) -> Plate:
@@ -27,7 +26,7 @@ def map_plate(field: Comparison) -> Plate:
     theory = LEVEL_NAMES.get(field.level, field.level)
     sides = {"quantum": field.quantum, "prediction": field.prediction}
     shown = {side: values for side, values in sides.items() if values is not None}
-    scale = span(np.concatenate([values.ravel() for values in shown.values()]))
+    scale = span(np.concatenate([values[:, field.stretch].ravel() for values in shown.values()]))
     titles = {"quantum": f"Quantum chain: {said}", "prediction": f"{theory}: {said}"}
     panels = [
         _panel(field, side, titles[side], partial(_draw_field, field, values, titles[side], scale))
@@ -48,7 +47,8 @@ def map_note(field: Comparison) -> str:
         said.append("Chain and prediction share one colour scale.")
     if field.light_cone is not None:
         left, right = (plain(float(f"{velocity:.4g}")) for velocity in field.light_cone)
-        said.append(f"Dashed: the light cone x = v t of the prediction, v = {left} J and {right} J.")
+        unit = f" {field.units.symbol('coupling')}".rstrip()
+        said.append(f"Dashed: the light cone x = v t of the prediction, v = {left}{unit} and {right}{unit}.")
     if field.resolved is not None:
         said.append(
             f"Grey: unresolved, |deviation| at most {plain(field.resolve_at)} times the numerical error."
@@ -77,8 +77,7 @@ def _draw_deviation(field: Comparison, deviation: Reals, title: str, figure: Fig
 
 def _deviation_scale(field: Comparison, deviation: Reals) -> Normalize:
     """Return a symmetric scale; logarithmic where the deviation spans more than a decade above the noise."""
-    later = deviation[field.times > 0] if np.any(field.times > 0) else deviation
-    largest = float(np.max(np.abs(later))) or 1e-16
+    largest = float(np.max(np.abs(deviation[field.judged]))) or 1e-16
     noise = 0.0 if field.numerical is None else field.resolve_at * float(np.median(field.numerical))
     threshold = 10.0 ** np.floor(np.log10(np.clip(noise, largest / 300, largest)))
     if threshold > largest / 10:
@@ -94,14 +93,18 @@ def _mesh(
     image = axes.pcolormesh(
         field.positions, field.times, values, cmap=colours, norm=scale, shading="nearest", rasterized=True
     )
-    axes.set(title=title, xlabel=X_LABEL, ylabel=T_LABEL)
+    axes.set(title=title, xlabel=X_LABEL, ylabel=field.units.time_label)
     axes.set_ylim(float(field.times[0]), float(field.times[-1]))
-    axes.set_xlim(float(field.positions[0]), float(field.positions[-1]))
+    axes.set_xlim(*reach(field.positions))
     axes.yaxis.set_major_locator(MaxNLocator(6))
     bar_axes = axes_at(figure, SIZE, left=SIZE[0] - 0.7, right=0.59, bottom=0.5, top=0.32)
-    bar = figure.colorbar(image, cax=bar_axes)
-    bar.outline.set_linewidth(0.5)
     lowest, highest = float(scale.vmin or 0.0), float(scale.vmax or 0.0)
+    below, above = bool(np.any(values < lowest)), bool(np.any(values > highest))
+    beyond = {(False, False): "neither", (True, False): "min", (False, True): "max"}.get(
+        (below, above), "both"
+    )
+    bar = figure.colorbar(image, cax=bar_axes, extend=beyond, extendfrac=0.03)
+    bar.outline.set_linewidth(0.5)
     unit = typeset(field.unit)
     if isinstance(scale, SymLogNorm):
         symmetric_decades(bar_axes.yaxis, threshold=float(scale.linthresh), largest=highest, most=4)

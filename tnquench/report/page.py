@@ -14,9 +14,11 @@ from tnquench.dataset.reader import Run, open_run
 from tnquench.errors import InputError
 from tnquench.report.canvas import Panel, render
 from tnquench.report.figures import Chapter, chapters, comparisons
-from tnquench.report.question import question, settings_of
+from tnquench.report.provenance import event_remarks, event_rows, provenance_rows
+from tnquench.report.question import question, settings_of, subject
 from tnquench.report.references import CUT_KEYS, EULER_KEYS, QUANTUM_KEYS, TROTTER_KEYS, citations
-from tnquench.report.tables import event_rows, provenance_rows, summary
+from tnquench.report.tables import summary
+from tnquench.report.units import units_of
 from tnquench.report.verdict import headline, remarks
 from tnquench.report.wording import unbroken
 
@@ -60,16 +62,17 @@ def render_page(run: Run, figures: Path) -> str:
     return environment.get_template("page.html").render(
         title=run.provenance.get("title") or "Untitled",
         question=[(heading, unbroken(text)) for heading, text in question(run, settings)],
-        verdict=unbroken(headline(drawn)),
-        remarks=remarks(zero, [kind for _, kind, _ in events]),
+        verdict=unbroken(headline(drawn, about=subject(settings))),
+        remarks=[*remarks(zero), *event_remarks(events)],
         summary=summary(drawn),
         estimated=bool(run.companions),
         compared=any(field.deviation is not None for field in drawn),
         windowed=any(field.light_cone is not None for field in drawn),
         chapters=[_chapter(chapter, figures) for chapter in chapters(run, drawn)],
         events=events,
+        time_unit=units_of(settings).symbol("1/coupling"),
         config=str(run.provenance.get("config_toml", "")),
-        provenance=provenance_rows(run),
+        provenance=provenance_rows(run, units_of(settings)),
         references=_references(run, settings),
         style=Markup(environment.get_template("page.css").render()),
     )

@@ -7,7 +7,8 @@ from collections.abc import Mapping
 from typing import Any
 
 from tnquench.dataset.reader import Run
-from tnquench.report.wording import LEVEL_NAMES, plain
+from tnquench.report.units import Units, units_of
+from tnquench.report.wording import LEVEL_NAMES, labelled, plain
 
 Table = Mapping[str, Any]
 
@@ -29,11 +30,22 @@ def is_step(settings: Table) -> bool:
     return "step" in shapes and all(shape in ("step", "uniform", None) for shape in shapes)
 
 
+def subject(settings: Table) -> str:
+    """Return the observable a run is about: the charge density where only the field varies, else energy."""
+    start = settings.get("start", {})
+    only_field = start.get("beta", {}).get("shape") == "uniform" and "beta_field" in start
+    return "charge_density" if only_field else "energy_density"
+
+
 def question(run: Run, settings: Table) -> list[tuple[str, str]]:
     """Return pairs of a heading and a line of text."""
-    lines = [("Chain", _chain(settings.get("chain", {}))), ("Start", _start(settings.get("start", {})))]
+    units = units_of(settings)
+    lines = [
+        ("Chain", _chain(settings.get("chain", {}))),
+        ("Start", _start(settings.get("start", {}), units)),
+    ]
     if len(run.quantum):
-        lines.append(("Evolution", _evolution(settings.get("evolution", {}), run)))
+        lines.append(("Evolution", _evolution(settings.get("evolution", {}), run, units)))
     lines.append(("Prediction", _prediction(run)))
     if run.budget:
         lines.append(("Errors", _budget(run)))
@@ -47,11 +59,14 @@ def _chain(chain: Table) -> str:
         return f"{model}, {sites}"
     anisotropy, coupling = float(chain.get("anisotropy", float("nan"))), float(chain.get("coupling", 1.0))
     hamiltonian = "spin-1/2 XXZ, H = J Σ (SˣSˣ + SʸSʸ + D SᶻSᶻ)"
-    return f"{hamiltonian}, D = {plain(anisotropy)}, J = {plain(coupling)}; {sites}"
+    own = "" if coupling == 1 else " (energies and times in the units in which J has this value)"
+    return f"{hamiltonian}, D = {plain(anisotropy)}, J = {plain(coupling)}{own}; {sites}"
 
 
-def _start(start: Table) -> str:
-    parts = [f"inverse temperature β (1/J): {_profile(start.get('beta', {}))}"]
+def _start(start: Table, units: Units) -> str:
+    parts = [
+        f"{labelled('inverse temperature β', units.symbol('1/coupling'))}: {_profile(start.get('beta', {}))}"
+    ]
     if "beta_field" in start:
         parts.append(f"field βh: {_profile(start['beta_field'])}")
     if start.get("joint") == "separate":
@@ -77,17 +92,17 @@ def _profile(profile: Table) -> str:
     return f"{shape or 'not stated'}"
 
 
-def _evolution(evolution: Table, run: Run) -> str:
-    parts = [f"to t = {plain(float(run.coordinates['time'].values[-1]))}/J"]
+def _evolution(evolution: Table, run: Run, units: Units) -> str:
+    parts = [f"to {units.instant(float(run.coordinates['time'].values[-1]))}"]
     if "every" in evolution:
-        parts[0] += f", measured every {plain(evolution['every'])}/J"
+        parts[0] += f", measured every {units.duration(evolution['every'])}"
     if "accuracy" in evolution:
         parts.append(f"accuracy {plain(evolution['accuracy'])} J asked")
     if "discarded_weight" in evolution:
         parts.append(f"discarded weight {plain(evolution['discarded_weight'])} a cut")
     order = f"{ORDERS.get(evolution.get('trotter_order', 4), '')}-order Trotter steps"
     if "time_step" in evolution:
-        order += f" of at most {plain(evolution['time_step'])}/J"
+        order += f" of at most {units.duration(evolution['time_step'])}"
     parts.append(order)
     if "bond_ceiling" in evolution:
         parts.append(f"bond dimension up to {evolution['bond_ceiling']}")

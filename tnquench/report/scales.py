@@ -35,6 +35,11 @@ def span(values: Reals, *, margin: float = 0.0) -> tuple[float, float]:
     return low - widening, high + widening
 
 
+def reach(positions: Reals) -> tuple[float, float]:
+    """Return the limits of an axis over the whole chain, half a lattice spacing beyond its last places."""
+    return float(positions[0]) - 0.5, float(positions[-1]) + 0.5
+
+
 def linear(axis: Axis, size: float, unit: str, *, ticks: int = 6) -> str:
     """Give a linear axis at most `ticks` short labels, and return its unit with the power of ten taken out.
 
@@ -69,7 +74,7 @@ def logarithmic(axes: Axes, low: float, high: float) -> None:
     axes.set_yscale("log")
     axes.set_ylim(low, high)
     decades = np.log10(high / low)
-    subs = (1.0, 2.0, 5.0) if decades < 2.5 else (1.0,)
+    subs = (1.0,) if decades > 2.5 else (1.0, 2.0, 5.0) if decades > 0.9 else (1.0, 1.5, 2.0, 3.0, 5.0, 7.0)
     axes.yaxis.set_major_locator(LogLocator(subs=subs, numticks=8))
     axes.yaxis.set_minor_locator(NullLocator())
     axes.yaxis.set_major_formatter(FuncFormatter(decade_label))

@@ -10,9 +10,9 @@ from matplotlib.figure import FigureBase
 
 from tnquench.conventions import Reals
 from tnquench.report.canvas import FAINT, INK, PREDICTION, QUANTUM, SOURCE_STYLES, Panel, Plate, axes_at
-from tnquench.report.comparison import NOTHING, Comparison, numerical_sources
-from tnquench.report.maps import T_LABEL, X_LABEL
-from tnquench.report.scales import linear, logarithmic, span, typeset
+from tnquench.report.comparison import NOTHING_PREDICTED, Comparison, Verdicts, numerical_sources
+from tnquench.report.maps import X_LABEL
+from tnquench.report.scales import linear, logarithmic, reach, span, typeset
 from tnquench.report.wording import (
     MINUS,
     OBSERVABLE_NAMES,
@@ -51,13 +51,15 @@ def budget_plate(fields: list[Comparison]) -> Plate:
 
 def start_plate(fields: list[Comparison]) -> Plate:
     """Return the mismatch at t = 0 between the true start and the local-density start of the theory."""
-    seen = [field for field in fields if _mismatched(field)]
+    seen = [field for field in fields if _mismatched(field).any()]
     panels = [panel for field in seen for panel in _start_panels(field)]
     caption = (
         "At t = 0 the theory starts from local equilibrium at each place; the chain's true start differs "
         "where the profile varies within a correlation length. This is physics, not numerics: it is part of "
         f"the deviation and never of the numerical error. {_largest_mismatch(seen)}"
     )
+    if any(field.numerical is not None for field in seen):
+        caption += " Near the open ends the error of the chain's length covers the difference."
     return Plate("start", "Mismatch of the start itself", caption, tuple(panels), columns=2)
 
 
@@ -84,10 +86,11 @@ def start_mismatch(field: Comparison) -> Reals:
     return np.zeros(field.positions.size) if field.deviation is None else field.deviation[0]
 
 
-def _mismatched(field: Comparison) -> bool:
-    """Whether the start differs from local equilibrium by more than the error, or than rounding."""
-    error = 0.0 if field.numerical is None else field.numerical[0]
-    return bool(np.any(np.abs(start_mismatch(field)) > np.maximum(error, NOTHING)))
+def _mismatched(field: Comparison) -> Verdicts:
+    """Where the start differs from local equilibrium beyond the error, as the verdict counts it, (place,)."""
+    error = np.zeros(field.positions.size) if field.numerical is None else field.numerical[0]
+    threshold = np.maximum(field.resolve_at * error, NOTHING_PREDICTED)
+    return np.asarray(field.stretch & (np.abs(start_mismatch(field)) > threshold))
 
 
 def _largest_mismatch(fields: list[Comparison]) -> str:
@@ -95,7 +98,7 @@ def _largest_mismatch(fields: list[Comparison]) -> str:
         return "Here no observable shows it."
     parts = []
     for field in fields:
-        place = int(np.argmax(np.abs(start_mismatch(field))))
+        place = int(np.argmax(np.abs(start_mismatch(field)) * _mismatched(field)))
         size = quantity(abs(float(start_mismatch(field)[place])), field.unit)
         where = plain(float(field.positions[place]))
         parts.append(f"{size} in the {OBSERVABLE_NAMES[field.name]} (x = {where})")
@@ -103,38 +106,40 @@ def _largest_mismatch(fields: list[Comparison]) -> str:
 
 
 def _draw_budget(field: Comparison, figure: FigureBase) -> None:
-    axes = axes_at(figure, WIDE, left=0.72, right=1.6, bottom=0.5, top=0.32)
+    axes = axes_at(figure, WIDE, left=0.72, right=1.78, bottom=0.5, top=0.32)
     t = field.times
     norms = {source: field.norm(values) for source, values in numerical_sources(field.errors).items()}
     bound = None if field.bound is None else field.norm(field.bound)
     low, high = _range([field.deviation_norm, field.numerical_norm], [*norms.values(), bound])
     if field.deviation_norm is not None:
-        axes.plot(t, _positive(field.deviation_norm), color=INK, lw=2.0, label="deviation")
+        axes.plot(t, _above(field.deviation_norm, low), color=INK, lw=2.0, label="deviation")
     if field.numerical_norm is not None:
         axes.fill_between(
-            t, low, _positive(field.numerical_norm), color=QUANTUM, alpha=0.13, lw=0, label="summed error"
+            t, low, _above(field.numerical_norm, low), color=QUANTUM, alpha=0.13, lw=0, label="summed error"
         )
     for source, norm in sorted(norms.items(), key=lambda item: -float(item[1][-1])):
-        _draw_source(axes, t, source, norm, low)
+        _draw_source(axes, field, source, norm, low)
     if bound is not None:
-        axes.plot(t, _positive(bound), "--", color=FAINT, lw=1.3, label="truncation,\nrigorous bound")
+        axes.plot(t, _above(bound, low), "--", color=FAINT, lw=1.3, label="truncation,\nrigorous bound")
     said = typeset(labelled("norm", field.unit))
-    axes.set(title=capitalised(OBSERVABLE_NAMES[field.name]), xlabel=T_LABEL, ylabel=said)
+    axes.set(title=capitalised(OBSERVABLE_NAMES[field.name]), xlabel=field.units.time_label, ylabel=said)
     axes.set_xlim(0.0, float(t[-1]) or 1.0)
     logarithmic(axes, low, high)
     axes.legend(loc="center left", bbox_to_anchor=(1.02, 0.5), borderaxespad=0.0)
 
 
-def _draw_source(axes: Axes, times: Reals, source: str, norm: Reals, low: float) -> None:
+def _draw_source(axes: Axes, field: Comparison, source: str, norm: Reals, low: float) -> None:
     colour, dashes = SOURCE_STYLES.get(source, (FAINT, "-"))
     name = SOURCE_NAMES.get(source, source)
+    if field.kinds.get(source) == "bound":
+        name += " (bound)"
     if float(norm.max()) <= low:
         name += ": none" if not norm.any() else ": negligible"
-    axes.plot(times, _positive(norm), dashes, color=colour, label=name)
+    axes.plot(field.times, _above(norm, low), dashes, color=colour, label=name)
 
 
-def _positive(values: Reals) -> Reals:
-    return np.where(values > 0, values, np.nan)
+def _above(values: Reals, low: float) -> Reals:
+    return np.where(values > low, values, np.nan)
 
 
 def _range(main: list[Reals | None], others: list[Reals | None]) -> tuple[float, float]:
@@ -160,11 +165,9 @@ def _draw_start(field: Comparison, figure: FigureBase) -> None:
     ):
         if side is not None:
             axes.plot(field.positions, side[0], style, ms=3.0, color=colour, label=label)
-    low, high = span(
-        np.concatenate([side[0] for side in (field.quantum, field.prediction) if side is not None])
-    )
-    margin = 0.06 * (high - low)
-    axes.set_ylim(low - margin, high + margin)
+    sides = [side[0, field.stretch] for side in (field.quantum, field.prediction) if side is not None]
+    low, high = span(np.concatenate(sides), margin=0.06)
+    axes.set_ylim(low, high)
     unit = linear(axes.yaxis, max(abs(low), abs(high)), field.unit)
     _finish(axes, field, labelled(OBSERVABLE_NAMES[field.name], unit))
 
@@ -177,7 +180,8 @@ def _draw_mismatch(field: Comparison, figure: FigureBase) -> None:
     axes.plot(x, mismatch, color=INK, marker=".", ms=4.0, lw=0.8, label=f"chain {MINUS} local equilibrium")
     if field.numerical is not None:
         axes.fill_between(x, -error, error, color=QUANTUM, alpha=0.25, lw=0, label="± numerical error")
-    low, high = span(np.concatenate([mismatch, error, -error]), margin=0.08)
+    seen = mismatch[_mismatched(field)]
+    low, high = span(np.append(seen, 0.0), margin=0.1)
     axes.set_ylim(low, high)
     unit = linear(axes.yaxis, max(abs(low), abs(high)), field.unit)
     _finish(axes, field, labelled("mismatch", unit))
@@ -185,5 +189,5 @@ def _draw_mismatch(field: Comparison, figure: FigureBase) -> None:
 
 def _finish(axes: Axes, field: Comparison, label: str) -> None:
     axes.set(title=f"{capitalised(OBSERVABLE_NAMES[field.name])}, t = 0", xlabel=X_LABEL, ylabel=label)
-    axes.set_xlim(float(field.positions[0]), float(field.positions[-1]))
+    axes.set_xlim(*reach(field.positions[field.stretch]))
     axes.legend(loc="lower right", bbox_to_anchor=(1.0, 1.0), ncols=2, fontsize=8.5, borderaxespad=0.1)

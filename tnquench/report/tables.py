@@ -1,18 +1,17 @@
-"""Tables of the report: the summary by observable, the events, the provenance."""
+"""The summary of a run: one row an observable."""
 
 from __future__ import annotations
 
-from collections.abc import Callable, Mapping
+from collections.abc import Callable
 from dataclasses import dataclass
 from typing import Any
 
 import numpy as np
 
 from tnquench.conventions import Reals
-from tnquench.dataset.reader import Run
 from tnquench.report.comparison import Comparison
 from tnquench.report.verdict import first_resolved, largest
-from tnquench.report.wording import DASH, OBSERVABLE_NAMES, SOURCE_NAMES, duration, plain, quantity
+from tnquench.report.wording import DASH, OBSERVABLE_NAMES, SOURCE_NAMES, percent, plain, quantity
 
 NOT_KNOWN = DASH
 
@@ -119,7 +118,7 @@ def _share(field: Comparison, chosen: Any) -> str:
     points = int(np.count_nonzero(field.judged))
     if chosen is None or points == 0:
         return NOT_KNOWN
-    return f"{np.count_nonzero(chosen & field.judged) / points:.0%}"
+    return percent(np.count_nonzero(chosen & field.judged) / points)
 
 
 def _beyond(field: Comparison) -> Any:
@@ -132,74 +131,3 @@ def _dominant(field: Comparison, time: int) -> str:
     if not field.dominant:
         return NOT_KNOWN
     return SOURCE_NAMES.get(field.dominant[time], field.dominant[time])
-
-
-def provenance_rows(run: Run) -> list[tuple[str, list[str]]]:
-    """Return pairs of heading and lines: machine, times, versions, preparation, companions, digest."""
-    said = run.provenance
-    rows = [
-        ("Written", [str(said.get("created", NOT_KNOWN))]),
-        ("Machine", [_listed(said.get("machine", NOT_KNOWN))]),
-        (
-            "Time",
-            [
-                f"{_seconds(said, 'wall_seconds')} on the clock, {_seconds(said, 'cpu_seconds')} of "
-                "processor time"
-            ],
-        ),
-        ("Versions", [_listed(said.get("versions", {}))]),
-        ("Preparation", [_listed(said.get("preparation", {}))]),
-        ("Companion runs", _companions(run)),
-        ("Config file", [str(said.get("config_file", NOT_KNOWN))]),
-        ("Dataset", [f"{run.path.name}, format {said.get('format_version', NOT_KNOWN)}"]),
-        ("SHA-256", [str(said.get("digest", NOT_KNOWN))]),
-    ]
-    return [(heading, lines) for heading, lines in rows if any(lines)]
-
-
-def event_rows(run: Run) -> list[tuple[str, str, str]]:
-    """Return time, kind and detail of each event of the run."""
-    events = run.provenance.get("events") or []
-    return [
-        (
-            _moment(event.get("time")),
-            str(event.get("kind", "")).replace("_", " "),
-            str(event.get("detail", "")),
-        )
-        for event in events
-        if isinstance(event, Mapping)
-    ]
-
-
-def _moment(time: object) -> str:
-    return plain(float(time)) if isinstance(time, int | float) else NOT_KNOWN
-
-
-def _seconds(said: Mapping[str, Any], name: str) -> str:
-    value = said.get(name)
-    return duration(float(value)) if isinstance(value, int | float) else "unknown time"
-
-
-def _listed(value: object) -> str:
-    """Return a mapping as one line of names and values, a text as it stands."""
-    if isinstance(value, Mapping):
-        return ", ".join(f"{str(name).replace('_', ' ')} {_listed(inner)}" for name, inner in value.items())
-    if isinstance(value, list | tuple):
-        return ", ".join(_listed(inner) for inner in value)
-    if isinstance(value, float):
-        return plain(float(f"{value:.3g}"))
-    return str(value)
-
-
-def _companions(run: Run) -> list[str]:
-    lines = []
-    for companion in run.companions.values():
-        said = companion.attrs
-        weight, step = (
-            plain(float(said.get("discarded_weight", np.nan))),
-            plain(float(said.get("time_step", np.nan))),
-        )
-        lines.append(
-            f"weight {weight}, step {step}/J, {said.get('sites', '?')} sites: {_seconds(said, 'seconds')}"
-        )
-    return lines

@@ -12,23 +12,26 @@ from matplotlib.figure import FigureBase
 
 from tnquench.conventions import Reals
 from tnquench.report.canvas import FAINT, INK, PREDICTION, QUANTUM, Panel, Plate, axes_at
-from tnquench.report.maps import T_LABEL
+from tnquench.report.comparison import NOTHING
 from tnquench.report.scales import linear, logarithmic, typeset
+from tnquench.report.units import Units
 from tnquench.report.wording import capitalised, labelled, quantity
 
 SMALL = (3.72, 2.9)
 WIDE = (5.6, 3.0)
 
 
-def growth_plate(quantum: xarray.Dataset) -> Plate:
+def growth_plate(quantum: xarray.Dataset, units: Units) -> Plate:
     """Return bond dimension, operator entanglement and discarded weight against time."""
-    drawers: dict[str, Callable[[xarray.Dataset, FigureBase], None]] = {
+    drawers: dict[str, Callable[[xarray.Dataset, Units, FigureBase], None]] = {
         "bond_dimension": _draw_bond_dimension,
         "operator_entanglement": _draw_entanglement,
         "discarded_weight": _draw_discarded,
     }
     panels = tuple(
-        Panel(name, f"{capitalised(name.replace('_', ' '))} against time", partial(draw, quantum), *SMALL)
+        Panel(
+            name, f"{capitalised(name.replace('_', ' '))} against time", partial(draw, quantum, units), *SMALL
+        )
         for name, draw in drawers.items()
         if name in quantum
     )
@@ -40,58 +43,58 @@ def growth_plate(quantum: xarray.Dataset) -> Plate:
     return Plate("growth", "Cost of the state", caption, panels, columns=3)
 
 
-def conservation_plate(quantum: xarray.Dataset) -> Plate:
+def conservation_plate(quantum: xarray.Dataset, units: Units) -> Plate:
     """Return the drift of total energy and total charge."""
-    said = {"total_energy": ("total energy", "J"), "total_charge": ("total magnetisation", "")}
+    said = {"total_energy": "total energy", "total_charge": "total magnetisation"}
     panels = tuple(
         Panel(
             f"{name}_drift",
             f"Drift of the {words} against time",
-            partial(_draw_drift, quantum, name, words, unit),
+            partial(_draw_drift, quantum[name], words, units),
             *WIDE,
         )
-        for name, (words, unit) in said.items()
-        if name in quantum
+        for name, words in said.items()
+        if name in quantum and float(np.max(np.abs(quantum[name].values))) > NOTHING
     )
     caption = (
-        "The exact dynamics conserves both. Their drift is a check of the numerics that needs no estimate."
+        "The exact dynamics conserves the totals; their drift checks the numerics without any estimate. "
+        "A total that is zero by symmetry is not drawn."
     )
     return Plate("conservation", "Conservation", caption, panels, columns=2)
 
 
-def _draw_bond_dimension(quantum: xarray.Dataset, figure: FigureBase) -> None:
+def _draw_bond_dimension(quantum: xarray.Dataset, units: Units, figure: FigureBase) -> None:
     values = np.asarray(quantum["bond_dimension"].values, dtype=np.float64)
-    axes = _against_time(figure, quantum, values, labelled("bond dimension", ""))
-    logarithmic(axes, max(0.8, 0.8 * float(values.min())), 1.5 * float(values.max()))
+    axes = _against_time(figure, quantum, units, values, labelled("bond dimension", ""))
+    middle = values[:, int(np.argmin(np.abs(quantum["bond"].values)))]
+    logarithmic(axes, max(0.8, 0.7 * float(middle.min())), 1.5 * float(values.max()))
     axes.legend(loc="best")
 
 
-def _draw_entanglement(quantum: xarray.Dataset, figure: FigureBase) -> None:
+def _draw_entanglement(quantum: xarray.Dataset, units: Units, figure: FigureBase) -> None:
     values = np.asarray(quantum["operator_entanglement"].values, dtype=np.float64)
-    axes = _against_time(figure, quantum, values, labelled("operator entanglement", "nats"))
+    axes = _against_time(figure, quantum, units, values, labelled("operator entanglement", "nats"))
     axes.set_ylim(bottom=0.0)
     axes.legend(loc="best")
 
 
-def _draw_discarded(quantum: xarray.Dataset, figure: FigureBase) -> None:
+def _draw_discarded(quantum: xarray.Dataset, units: Units, figure: FigureBase) -> None:
     values = np.asarray(quantum["discarded_weight"].values, dtype=np.float64)
-    axes = _against_time(figure, quantum, np.where(values > 0, values, np.nan), "discarded weight")
+    axes = _against_time(figure, quantum, units, np.where(values > 0, values, np.nan), "discarded weight")
     total = values.sum(axis=1)
     axes.plot(
         quantum["time"].values, np.where(total > 0, total, np.nan), ":", color=INK, label="all bonds together"
     )
-    positive = values[values > 0]
-    if positive.size:
+    largest = values.max(axis=1)
+    if np.any(largest > 0):
         highest = float(total.max())
-        logarithmic(
-            axes,
-            max(0.5 * float(values.max(axis=1)[values.max(axis=1) > 0].min()), 1e-6 * highest),
-            3 * highest,
-        )
+        logarithmic(axes, max(0.5 * float(largest[largest > 0].min()), 1e-6 * highest), 3 * highest)
     axes.legend(loc="best")
 
 
-def _against_time(figure: FigureBase, quantum: xarray.Dataset, values: Reals, label: str) -> Axes:
+def _against_time(
+    figure: FigureBase, quantum: xarray.Dataset, units: Units, values: Reals, label: str
+) -> Axes:
     """Draw the middle bond and the largest bond of an array (time, bond)."""
     axes = axes_at(figure, SMALL, left=0.62, right=0.12, bottom=0.5, top=0.32)
     times = quantum["time"].values
@@ -99,20 +102,22 @@ def _against_time(figure: FigureBase, quantum: xarray.Dataset, values: Reals, la
     largest = np.max(np.where(np.isnan(values), -np.inf, values), axis=1)
     axes.plot(times, np.where(np.isfinite(largest), largest, np.nan), color=PREDICTION, label="largest bond")
     axes.plot(times, values[:, middle], "--", color=QUANTUM, label="middle bond")
-    axes.set(title=capitalised(label.partition(" (")[0]), xlabel=T_LABEL, ylabel=label)
+    axes.set(title=capitalised(label.partition(" (")[0]), xlabel=units.time_label, ylabel=label)
     axes.set_xlim(0.0, float(times[-1]) or 1.0)
     return axes
 
 
-def _draw_drift(quantum: xarray.Dataset, name: str, said: str, unit: str, figure: FigureBase) -> None:
+def _draw_drift(total: xarray.DataArray, said: str, units: Units, figure: FigureBase) -> None:
     axes = axes_at(figure, WIDE, left=0.85, right=0.12, bottom=0.5, top=0.32)
-    values = np.asarray(quantum[name].values, dtype=np.float64)
+    values = np.asarray(total.values, dtype=np.float64)
+    times = total["time"].values
+    unit = units.symbol(str(total.attrs.get("units")))
     drift = values - values[0]
     size = max(float(np.max(np.abs(drift))), 1e-15)
     axes.axhline(0.0, color=FAINT, lw=0.6)
-    axes.plot(quantum["time"].values, drift, color=QUANTUM, marker=".", ms=4.0)
+    axes.plot(times, drift, color=QUANTUM, marker=".", ms=4.0)
     axes.set_ylim(min(0.0, float(drift.min())) - 0.1 * size, max(0.0, float(drift.max())) + 0.1 * size)
     axes.set_ylabel(labelled("drift since t = 0", linear(axes.yaxis, size, unit)))
     start = quantity(float(values[0]), unit, digits=6)
-    axes.set(title=typeset(f"{capitalised(said)}, {start} at t = 0"), xlabel=T_LABEL)
-    axes.set_xlim(0.0, float(quantum["time"].values[-1]) or 1.0)
+    axes.set(title=typeset(f"{capitalised(said)}, {start} at t = 0"), xlabel=units.time_label)
+    axes.set_xlim(0.0, float(times[-1]) or 1.0)

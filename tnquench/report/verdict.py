@@ -8,7 +8,7 @@ import numpy as np
 
 from tnquench.conventions import Reals
 from tnquench.report.comparison import Comparison, Verdicts
-from tnquench.report.wording import LEVEL_NAMES, OBSERVABLE_NAMES, measured, plain, quantity
+from tnquench.report.wording import LEVEL_NAMES, OBSERVABLE_NAMES, measured, percent, plain, quantity
 
 #: A power law is fitted from this fraction of the last time on, to no fewer samples than these.
 FIT_FROM = 0.3
@@ -27,34 +27,29 @@ class PowerLaw:
     last: float
 
 
-def headline(fields: list[Comparison]) -> str:
+def headline(fields: list[Comparison], *, about: str = "energy_density") -> str:
     """Return the verdict of a run in one sentence.
 
     fields : the observables that do not vanish by symmetry
+    about  : the observable to speak of, if it is among them
     """
     if not fields:
         return "Every observable of this run is zero by symmetry: there is nothing to compare."
-    field = main_observable(fields)
+    field = next((field for field in fields if field.name == about), fields[0])
     if field.quantum is None:
         return (
-            f"This dataset holds the prediction alone, up to t = {plain(float(field.times[-1]))}/J: without "
+            f"This dataset holds the prediction alone, up to {_when(field)}: without "
             "the chain's "
             "dynamics it gives no verdict on it."
         )
     if field.prediction is None or field.deviation is None:
         return _without_prediction(field)
-    place = joint(field) if field.joined else int(np.argmax(np.abs(field.deviation[-1])))
+    place = joint(field) if field.joined else largest(field.deviation[-1:], field.window[-1:])[1]
     if field.numerical is None or field.resolved is None:
         return _without_companions(field, place)
     if not np.any(field.resolved & field.judged):
         return _nothing_resolved(field)
     return _resolved(field, place, field.resolved & field.judged)
-
-
-def main_observable(fields: list[Comparison]) -> Comparison:
-    """Return the density that varies most in the start: the one the run is about."""
-    densities = [field for field in fields if field.name.endswith("density")] or fields
-    return max(densities, key=lambda field: float(np.ptp(field.known[0])))
 
 
 def joint(field: Comparison) -> int:
@@ -104,11 +99,18 @@ def _names(field: Comparison) -> tuple[str, str]:
 
 def _where(field: Comparison, place: int) -> str:
     x = float(field.positions[place])
-    return "at the joint" if field.joined and abs(x) < 0.01 else f"at x = {plain(x)}"
+    if field.joined and x == 0:
+        return "at the joint"
+    return f"next to the joint (x = {plain(x)})" if field.joined and abs(x) == 0.5 else f"at x = {plain(x)}"
 
 
 def _when(field: Comparison, time: int = -1) -> str:
-    return f"t = {plain(float(field.times[time]))}/J"
+    return field.units.instant(float(field.times[time]))
+
+
+def _at(field: Comparison, place: int, time: int = -1) -> str:
+    where = _where(field, place)
+    return f"{where} {'and' if where.startswith('at x') else 'at'} {_when(field, time)}"
 
 
 def _resolved(field: Comparison, place: int, resolved: Verdicts) -> str:
@@ -118,30 +120,24 @@ def _resolved(field: Comparison, place: int, resolved: Verdicts) -> str:
     at_place = quantity(abs(float(field.deviation[-1, place])), field.unit)
     error = quantity(float(field.numerical[-1, place]), field.unit, digits=1)
     if resolved[-1, place]:
-        opening = (
-            f"{theory} misses the {said} by {at_place} (± {error} numerical error) {_where(field, place)} "
-            f"at {_when(field)}"
-        )
+        opening = f"{theory} misses the {said} by {at_place} (± {error} numerical error) {_at(field, place)}"
     else:
         opening = (
-            f"{theory} gives the {said} {_where(field, place)} at {_when(field)} to within the numerical "
-            "error "
-            f"(deviation {at_place}, numerical error {error})"
+            f"{theory} gives the {said} {_at(field, place)} to within "
+            f"{plain(field.resolve_at)} times the numerical error (deviation {at_place}, error {error})"
         )
-    return f"{opening}; {_history(field, resolved)}{_trend(field, place, resolved)}."
+    return f"{opening}; {_history(field, place, resolved)}{_trend(field, place, resolved)}."
 
 
-def _history(field: Comparison, resolved: Verdicts) -> str:
+def _history(field: Comparison, place: int, resolved: Verdicts) -> str:
     """Say since when and where the deviation is resolved."""
     seen = np.any(resolved, axis=1)
     first = int(np.argmax(seen))
-    since = f"the deviation is resolved from t = {plain(float(field.times[first]))}/J on"
+    where = "" if resolved[-1, place] else "elsewhere "
+    since = f"{where}the deviation is resolved from {_when(field, first)} on"
     if not np.all(seen[first:]):
-        since = (
-            f"the deviation is resolved at {np.count_nonzero(seen)} of {np.count_nonzero(field.times > 0)} "
-            "times, "
-            f"first at t = {plain(float(field.times[first]))}/J"
-        )
+        count = f"{np.count_nonzero(seen)} of {np.count_nonzero(field.times > 0)} times"
+        since = f"{where}the deviation is resolved at {count}, first at {_when(field, first)}"
     if not seen[-1]:
         return f"{since}, and no longer at {_when(field)}"
     places = field.positions[resolved[-1]]
@@ -151,7 +147,7 @@ def _history(field: Comparison, resolved: Verdicts) -> str:
     if low == high:
         return f"{since}, at the end only at x = {plain(low)}"
     stretch = f"|x| ≤ {plain(high)}" if abs(low + high) < 1e-9 else f"{plain(low)} ≤ x ≤ {plain(high)}"
-    dense = "everywhere" if share == 1 else f"at {share:.0%} of the places"
+    dense = "everywhere" if share == 1 else f"at {percent(share)} of the places"
     return f"{since} ({_when(field)}: {dense} in {stretch})"
 
 
@@ -181,7 +177,7 @@ def _nothing_resolved(field: Comparison) -> str:
         f"error at every place inside the light cone up to {_when(field)}; the largest difference is "
         f"{quantity(abs(float(field.deviation[time, place])), field.unit)} (± "
         f"{quantity(float(field.numerical[time, place]), field.unit, digits=1)} numerical error) "
-        f"{_where(field, place)}, {_when(field, time)}, and a failure of the theory larger than "
+        f"{_at(field, place, time)}, and a failure of the theory larger than "
         f"{quantity(claim, field.unit)} is excluded."
     )
 
@@ -192,7 +188,7 @@ def _without_companions(field: Comparison, place: int) -> str:
     opening = (
         f"{theory} differs from the chain's {said} by "
         f"{quantity(abs(float(field.deviation[-1, place])), field.unit)} "
-        f"{_where(field, place)} at {_when(field)}; the numerical error is not estimated, as no companion "
+        f"{_at(field, place)}; the numerical error is not estimated, as no companion "
         "runs were made"
     )
     if field.bound is None:
@@ -200,11 +196,11 @@ def _without_companions(field: Comparison, place: int) -> str:
     bound = quantity(float(field.bound[-1, place]), field.unit)
     beyond = np.any((np.abs(field.deviation) > field.bound) & field.judged, axis=1)
     if beyond.any():
-        until = plain(float(field.times[np.flatnonzero(beyond)[-1]]))
+        until = _when(field, int(np.flatnonzero(beyond)[-1]))
         return (
             f"{opening}; only the rigorous bound on truncation stands ({bound} there), and the deviation "
             "exceeds it "
-            f"somewhere up to t = {until}/J."
+            f"somewhere up to {until}."
         )
     return f"{opening}; the deviation never exceeds the rigorous bound on truncation, {bound} there."
 
@@ -215,9 +211,7 @@ def _without_prediction(field: Comparison) -> str:
     if field.numerical is not None:
         time, place = largest(field.numerical, np.ones_like(field.window))
         worst = quantity(float(field.numerical[time, place]), field.unit)
-        return (
-            f"{opening} with a numerical error up to {worst} ({_where(field, place)}, {_when(field, time)})."
-        )
+        return f"{opening} with a numerical error up to {worst} ({_at(field, place, time)})."
     if field.bound is not None:
         bound = quantity(float(np.max(field.bound)), field.unit)
         return (
@@ -226,18 +220,9 @@ def _without_prediction(field: Comparison) -> str:
     return f"{opening}; its numerical error is not estimated."
 
 
-def remarks(zero: list[Comparison], events: list[str]) -> list[str]:
-    """Return what the verdict must not hide.
-
-    zero   : observables that vanish by symmetry
-    events : kind of each event of the run
-    """
-    said = []
-    if zero:
-        names = " and ".join(OBSERVABLE_NAMES[field.name] for field in zero)
-        said.append(f"Zero by symmetry, hence not drawn: {names}.")
-    if events:
-        kinds = ", ".join(dict.fromkeys(events))
-        count = "1 event" if len(events) == 1 else f"{len(events)} events"
-        said.append(f"The run recorded {count} ({kinds}), listed below.")
-    return said
+def remarks(zero: list[Comparison]) -> list[str]:
+    """Return what the verdict leaves out; zero : observables that vanish by symmetry."""
+    if not zero:
+        return []
+    names = " and ".join(OBSERVABLE_NAMES[field.name] for field in zero)
+    return [f"Zero by symmetry, hence not drawn: {names}."]

@@ -72,6 +72,13 @@ def labelled(said: str, unit: str) -> str:
     return f"{said} ({unit})" if unit else said
 
 
+def percent(share: float) -> str:
+    """Return a share as a percentage that says 0% and 100% only where it is exactly so."""
+    if 0 < share < 0.01:
+        return "under 1%"
+    return f"{min(round(100 * share), 99) if share < 1 else 100}%"
+
+
 def unbroken(text: str) -> str:
     """Return a text whose formulas stay on one line: no break beside a sign or before a unit."""
     return BREAKABLE.sub(NO_BREAK, text)
