@@ -158,7 +158,7 @@ def test_second_quadrature_agrees(nu: int, sign: int) -> None:
     _, slopes = states_on_rays(mesh, reference, rays=np.array([ray]), **sides)
     crossings, _ = find_crossings(mesh, slopes, np.array([ray]))
     cuts = [
-        mesh.rapidities[0] + mesh.spacing * crossings.position[crossings.row == string] for string in range(nu)
+        mesh.layout.rapidities(crossings.position[crossings.row == string]) for string in range(nu)
     ]
     assert all(cut.size for cut in cuts)
     grids = [panels(cut) for cut in cuts]

@@ -1,33 +1,37 @@
-"""The report says what the dataset holds: every section, numbers that agree with the arrays, nothing loaded.
+"""The report holds every section, numbers that agree with the arrays, and loads nothing.
 
-Expected numbers are recomputed here from the dataset with numpy alone; the window of the verdict is written
-out from its definition: the light cone, one and a half spacings wider on either side.
+Expected numbers are recomputed here from the dataset with numpy alone.
 """
 
 from __future__ import annotations
 
 import base64
 import re
-from collections.abc import Callable
-from html.parser import HTMLParser
 from pathlib import Path
 from typing import Any
 
 import numpy as np
 import pytest
 
-from tests.synthetic_run import synthetic_pieces
-from tnquench.conventions import OBSERVABLE_PLACES, Reals
+from tests.report_cases import (
+    SITES,
+    Page,
+    mismatched_start,
+    no_magnetisation,
+    no_prediction,
+    numbers_in,
+    page_of,
+    prediction_alone,
+    window,
+    written,
+)
+from tnquench.conventions import OBSERVABLE_PLACES
 from tnquench.dataset.reader import Run, open_run
-from tnquench.dataset.writer import write_run
 from tnquench.errors import InputError
-from tnquench.report.comparison import compare
 from tnquench.report.figures import comparisons, figure
 from tnquench.report.page import write_report
-from tnquench.report.question import settings_of, subject
 from tnquench.report.references import EULER_KEYS, QUANTUM_KEYS, REFERENCES, TROTTER_KEYS, citations
-from tnquench.report.verdict import headline, power_law
-from tnquench.report.wording import duration, measured, number, percent, plain
+from tnquench.report.verdict import headline
 
 SECTIONS = (
     "question",
@@ -43,84 +47,6 @@ SECTIONS = (
     "settings",
     "references",
 )
-SITES, TIMES = 32, 21
-
-Change = Callable[[dict[str, Any]], None]
-
-
-class Page(HTMLParser):
-    """What a reader meets: tags with their attributes, ids, and the text of each section."""
-
-    def __init__(self, markup: str) -> None:
-        super().__init__()
-        self.tags: list[tuple[str, dict[str, str | None]]] = []
-        self.sections: list[str] = []
-        self.texts: dict[str, str] = {}
-        self.feed(markup)
-
-    def handle_starttag(self, tag: str, attrs: list[tuple[str, str | None]]) -> None:
-        self.tags.append((tag, dict(attrs)))
-        if tag in ("section", "header") and (name := dict(attrs).get("id")):
-            self.sections.append(name)
-            self.texts[name] = ""
-
-    def handle_data(self, data: str) -> None:
-        if self.sections:
-            self.texts[self.sections[-1]] += data.replace("\N{NO-BREAK SPACE}", " ")
-
-    @property
-    def pictures(self) -> list[str]:
-        return [attrs["src"] or "" for tag, attrs in self.tags if tag == "img"]
-
-
-def written(folder: Path, *changes: Change, companions: bool = True) -> Path:
-    """Write a synthetic dataset after some changes to its pieces."""
-    pieces = synthetic_pieces(sites=SITES, times=TIMES, companions=companions)
-    for change in changes:
-        change(pieces)
-    folder.mkdir(exist_ok=True)
-    write_run(folder, **pieces)
-    return folder
-
-
-def page_of(folder: Path) -> Page:
-    return Page(write_report(folder).read_text(encoding="utf-8"))
-
-
-def mismatched_start(pieces: dict[str, Any]) -> None:
-    extra = 0.01 * np.exp(-(pieces["coordinates"]["bond"] ** 2))
-    pieces["groups"]["quantum"]["energy_density"][0] += extra
-    pieces["groups"]["budget/energy_density"]["euler_deviation"][0] += extra
-
-
-def no_magnetisation(pieces: dict[str, Any]) -> None:
-    for name in ("charge_density", "charge_current"):
-        for group in {"quantum", "hydrodynamics/euler"} & set(pieces["groups"]):
-            pieces["groups"][group][name] = np.zeros_like(pieces["groups"][group][name])
-    if "quantum" in pieces["groups"]:
-        pieces["groups"]["quantum"]["total_charge"] = np.zeros(TIMES)
-
-
-def nothing_resolved(pieces: dict[str, Any]) -> None:
-    for name in OBSERVABLE_PLACES:
-        budget = pieces["groups"][f"budget/{name}"]
-        budget["numerical"] = budget["numerical"] + 0.5 * np.abs(budget["euler_deviation"])
-        budget["euler_resolved"] = np.zeros_like(budget["euler_resolved"])
-
-
-def no_prediction(pieces: dict[str, Any]) -> None:
-    del pieces["groups"]["hydrodynamics/euler"]
-    del pieces["attributes"]["hydrodynamics/euler"]
-    for name in OBSERVABLE_PLACES:
-        budget = pieces["groups"][f"budget/{name}"]
-        pieces["groups"][f"budget/{name}"] = {
-            key: rows for key, rows in budget.items() if not key.startswith("euler_")
-        }
-
-
-def prediction_alone(pieces: dict[str, Any]) -> None:
-    pieces["groups"] = {"hydrodynamics/euler": pieces["groups"]["hydrodynamics/euler"]}
-    pieces["attributes"] = {"hydrodynamics/euler": pieces["attributes"]["hydrodynamics/euler"]}
 
 
 @pytest.fixture(scope="module")
@@ -129,26 +55,9 @@ def full(tmp_path_factory: pytest.TempPathFactory) -> tuple[Path, Page, Run]:
     return folder, page_of(folder), open_run(folder)
 
 
-def window(run: Run, place: str) -> np.ndarray:
-    """Points of the verdict, (time, place)."""
-    theory = run.hydrodynamics["euler"]
-    t, x = run.coordinates["time"].values[:, None], run.coordinates[place].values[None, :]
-    edges = theory.attrs["light_cone_left"] * t - 1.5, theory.attrs["light_cone_right"] * t + 1.5
-    return np.asarray((x >= edges[0]) & (x <= edges[1]) & (t > 0))
-
-
-def numbers_in(text: str) -> list[float]:
-    """Read back every number of a text, powers of ten included."""
-    raised = str.maketrans("⁻⁰¹²³⁴⁵⁶⁷⁸⁹", "-0123456789")
-    text = text.replace("\N{MINUS SIGN}", "-").replace("\N{NO-BREAK SPACE}", " ")
-    found = re.finditer(r"-?\d+(?:\.\d+)?(?: × 10([⁻⁰¹²³⁴⁵⁶⁷⁸⁹]+))?", text)  # noqa: RUF001
-    return [
-        float(match[0].split(" ")[0]) * 10.0 ** int((match[1] or "⁰").translate(raised)) for match in found
-    ]
-
-
 def test_every_section_of_a_full_run_in_order(full: tuple[Path, Page, Run]) -> None:
-    _, page, _ = full
+    _, page, run = full
+    assert headline(comparisons(run)[0]) in page.texts["verdict"]
     assert tuple(page.sections) == SECTIONS
     assert all(page.texts[name].strip() for name in SECTIONS)
 
@@ -186,34 +95,6 @@ def test_every_picture_is_described(full: tuple[Path, Page, Run]) -> None:
     described = [attributes.get("alt") for tag, attributes in page.tags if tag == "img"]
     assert all(described)
     assert len(set(described)) == len(described)
-
-
-def test_verdict_agrees_with_the_arrays(full: tuple[Path, Page, Run]) -> None:
-    _, page, run = full
-    budget, x, t = (
-        run.budget["energy_density"],
-        run.coordinates["bond"].values,
-        run.coordinates["time"].values,
-    )
-    joint = int(np.argmin(np.abs(x)))
-    deviation: Reals = budget["euler_deviation"].values
-    resolved = (budget["euler_resolved"].values == 1) & window(run, "bond")
-    sentence = page.texts["verdict"]
-    assert "Euler GHD misses the energy density" in sentence
-    said = numbers_in(sentence.partition("; the deviation")[0])
-    assert said[0] == pytest.approx(abs(deviation[-1, joint]), rel=0.02)  # two digits are shown
-    assert said[1] == pytest.approx(float(budget["numerical"].values[-1, joint]), rel=0.35)  # one digit
-    assert said[2] == t[-1]
-    first = float(t[np.flatnonzero(resolved.any(axis=1))[0]])
-    assert numbers_in(sentence.partition("resolved from t = ")[2])[0] == first
-    outermost = float(np.abs(x[resolved[-1]]).max())
-    assert numbers_in(sentence.partition("|x| ≤ ")[2])[0] == outermost
-    share = resolved[-1].sum() / np.count_nonzero(np.abs(x) <= outermost)
-    assert numbers_in(sentence.partition(": at ")[2])[0] == pytest.approx(100 * share, abs=0.51)
-    late = t >= 0.3 * t[-1]
-    slope = np.polyfit(np.log(t[late]), np.log(np.abs(deviation[late, joint])), 1)[0]
-    assert "falls like" in sentence
-    assert numbers_in(sentence.partition("p = ")[2])[0] == pytest.approx(-slope, abs=0.006)
 
 
 @pytest.mark.parametrize("name", OBSERVABLE_PLACES)
@@ -277,17 +158,6 @@ def test_question_repeats_the_config(full: tuple[Path, Page, Run]) -> None:
     assert "discarded weight 10⁻⁸ a cut" in said
 
 
-def test_nothing_resolved_is_said_with_what_is_excluded(tmp_path: Path) -> None:
-    folder = written(tmp_path, nothing_resolved, no_magnetisation)
-    run, sentence = open_run(folder), page_of(folder).texts["verdict"]
-    budget = run.budget["energy_density"]
-    size = np.abs(budget["euler_deviation"].values) + budget["numerical"].values
-    assert "No deviation is resolved" in sentence
-    assert numbers_in(sentence.partition("larger than")[2])[0] == pytest.approx(
-        size[window(run, "bond")].max(), rel=0.06
-    )
-
-
 def test_without_prediction_the_quantum_side_stands_alone(tmp_path: Path) -> None:
     folder = written(tmp_path, no_prediction, no_magnetisation)
     page, run = page_of(folder), open_run(folder)
@@ -346,59 +216,6 @@ def test_text_from_the_config_is_never_markup(tmp_path: Path) -> None:
         assert hostile in page.texts[section]
 
 
-def test_other_couplings_are_not_called_units(tmp_path: Path) -> None:
-    def stronger(pieces: dict[str, Any]) -> None:
-        config = pieces["provenance"]["config_toml"]
-        pieces["provenance"]["config_toml"] = config.replace("sites =", "coupling = 2.0\nsites =")
-
-    run = open_run(written(tmp_path, stronger))
-    sentence = headline(comparisons(run)[0])
-    assert "t = 10;" in sentence
-    assert "J" not in sentence
-    assert compare(run, "energy_density").unit == ""
-
-
-def test_smooth_start_is_judged_where_the_deviation_is_largest(tmp_path: Path) -> None:
-    def bump(pieces: dict[str, Any]) -> None:
-        config = pieces["provenance"]["config_toml"]
-        smooth = 'shape = "bump"\nbase = 1.0\nheight = 0.5\nwidth = 4.0'
-        pieces["provenance"]["config_toml"] = re.sub(r'shape = "step"\nleft = .*\nright = .*', smooth, config)
-        x = pieces["coordinates"]["bond"]
-        pieces["groups"]["budget/energy_density"]["euler_deviation"][-1] = 0.1 * np.exp(-((x - 3.0) ** 2))
-
-    sentence = headline(comparisons(open_run(written(tmp_path, bump)))[0])
-    assert "misses the energy density by 0.10 J" in sentence
-    assert "at x = 3 and t = 10/J" in sentence
-    assert "joint" not in sentence
-
-
-def test_field_step_is_about_the_magnetisation(tmp_path: Path) -> None:
-    def field_step(pieces: dict[str, Any]) -> None:
-        config = pieces["provenance"]["config_toml"]
-        field = '[start.beta]\nshape = "uniform"\nvalue = 1.0\n[start.beta_field]\nshape = "step"'
-        pieces["provenance"]["config_toml"] = config.replace('[start.beta]\nshape = "step"', field)
-
-    run = open_run(written(tmp_path, field_step))
-    sentence = headline(comparisons(run)[0], about=subject(settings_of(run)))
-    deviation = run.budget["charge_density"]["euler_deviation"].values
-    place = SITES // 2 - 1 + int(np.argmax(np.abs(deviation[-1, SITES // 2 - 1 : SITES // 2 + 1])))
-    assert "misses the magnetisation by" in sentence
-    assert "next to the joint (x = " in sentence
-    assert numbers_in(sentence)[0] == pytest.approx(abs(deviation[-1, place]), rel=0.02)
-
-
-def test_deviation_resolved_elsewhere_only_is_said_so(tmp_path: Path) -> None:
-    def blind_at_the_joint(pieces: dict[str, Any]) -> None:
-        budget = pieces["groups"]["budget/energy_density"]
-        budget["numerical"][:, SITES // 2 - 1] += 0.1
-        budget["euler_resolved"][:, SITES // 2 - 1] = 0
-
-    sentence = headline(comparisons(open_run(written(tmp_path, blind_at_the_joint)))[0])
-    assert "at the joint at t = 10/J to within 3 times the numerical error" in sentence
-    assert "elsewhere the deviation is resolved from t = 0.5/J on" in sentence
-    assert "like" not in sentence
-
-
 def test_figures_stand_alone_for_a_notebook(full: tuple[Path, Page, Run]) -> None:
     run = full[2]
     maps = figure(run, "energy_density_maps")
@@ -420,57 +237,6 @@ def test_blocked_figure_folder_is_one_clear_line(tmp_path: Path) -> None:
     with pytest.raises(InputError, match="report cannot be written"):
         write_report(folder)
     assert not (folder / "report.html").exists()
-
-
-def test_power_law_finds_a_known_exponent() -> None:
-    times = np.linspace(0.0, 12.0, 25)
-    values = -3.0 * np.divide(1.0, times, out=np.zeros(25), where=times > 0) ** 0.75
-    law = power_law(times, values, np.ones(25, dtype=np.bool_))
-    assert law is not None
-    assert law.exponent == pytest.approx(0.75, abs=1e-12)
-    assert law.error < 1e-12
-    assert (law.first, law.last) == (4.0, 12.0)
-    assert power_law(times, values, times > 11.0) is None
-
-
-def test_power_law_error_is_the_standard_error_of_the_slope() -> None:
-    rng = np.random.default_rng(1)
-    times = np.linspace(1.0, 20.0, 40)
-    slopes, errors = [], []
-    for _ in range(400):
-        law = power_law(
-            times, times**-1.0 * np.exp(0.1 * rng.standard_normal(40)), np.ones(40, dtype=np.bool_)
-        )
-        assert law is not None
-        slopes.append(law.exponent)
-        errors.append(law.error)
-    assert np.std(slopes) == pytest.approx(
-        np.mean(errors), rel=0.12
-    )  # 400 samples: the deviation is known to 4 %
-
-
-@pytest.mark.parametrize(
-    ("value", "said"),
-    [
-        (0.0, "0"),
-        (0.0059, "5.9 × 10⁻³"),  # noqa: RUF001
-        (-3.04e-5, "\N{MINUS SIGN}3.0 × 10⁻⁵"),  # noqa: RUF001
-        (0.0999, "0.10"),
-        (0.00996, "0.010"),
-        (12.34, "12"),
-        (2.5e7, "2.5 × 10⁷"),  # noqa: RUF001
-        (float("nan"), "not a number"),
-    ],
-)
-def test_numbers_are_written_as_in_print(value: float, said: str) -> None:
-    assert number(value) == said
-
-
-def test_small_words() -> None:
-    assert [plain(1e-8), plain(-7.5), plain(10.0)] == ["10⁻⁸", "\N{MINUS SIGN}7.5", "10"]
-    assert measured(0.9812, 0.0234) == "0.98 ± 0.02"
-    assert [percent(1.0), percent(0.999), percent(0.001), percent(0.0)] == ["100%", "99%", "under 1%", "0%"]
-    assert [duration(4.2), duration(200.0), duration(18_600.0)] == ["4.2 s", "3 min 20 s", "5 h 10 min"]
 
 
 def test_citations_come_once_and_unknown_keys_stand_as_they_are() -> None:

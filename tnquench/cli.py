@@ -13,6 +13,7 @@ import sys
 import traceback
 from collections.abc import Sequence
 from concurrent.futures.process import BrokenProcessPool
+from errno import EDQUOT, ENOSPC
 from importlib.metadata import PackageNotFoundError, version
 from multiprocessing import active_children
 from pathlib import Path
@@ -240,7 +241,8 @@ def main(arguments: Sequence[str] | None = None) -> None:
     debug = "--debug" in words
     try:
         outcome = app([word for word in words if word != "--debug"], prog_name=PROGRAM, standalone_mode=False)
-        sys.stdout.flush()
+        if sys.stdout is not None:  # it is None where the caller closed it
+            sys.stdout.flush()
         code, message = (INTERRUPTED, INTERRUPTION) if outcome == INTERRUPTED else (outcome or DONE, "")
     except (Exception, KeyboardInterrupt) as error:
         if debug:
@@ -256,11 +258,13 @@ def main(arguments: Sequence[str] | None = None) -> None:
 def answer(error: BaseException) -> tuple[int, str]:
     """Return the exit code for an exception and what to tell the user."""
     if isinstance(error, TnquenchError):
-        return error.exit_code, str(error)
+        return error.exit_code, str(error) if error.exit_code != DEFECT else f"{PROGRAM}: {error}"
     if hasattr(error, "format_message"):  # a complaint about the command line, whatever its class
         return BAD_INPUT, _usage_message(error)
     if isinstance(error, KeyboardInterrupt | typer.Abort):
         return INTERRUPTED, INTERRUPTION
+    if isinstance(error, OSError) and error.errno in (ENOSPC, EDQUOT):
+        return DEFECT, f"{PROGRAM}: {error.strerror}"
     if isinstance(error, MemoryError):
         return DEFECT, f"{PROGRAM}: out of memory; {PROGRAM} forecast CONFIG estimates what a run needs"
     if isinstance(error, BrokenProcessPool):

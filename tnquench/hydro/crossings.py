@@ -103,7 +103,7 @@ def _extrema(mesh: RapidityMesh, slopes: Reals, samples: Reals) -> tuple[Integer
 def _velocity_at(mesh: RapidityMesh, slopes: Reals, row: Integers, position: Reals) -> Reals:
     """Return v_eff of the rows ray*strings + string at mesh positions, shape (row,)."""
     ray, string = np.divmod(row, mesh.model.strings)
-    matrix = interpolate(mesh.grid, np.eye(mesh.model.nodes), mesh.rapidities[0] + mesh.spacing * position).T
+    matrix = interpolate(mesh.grid, np.eye(mesh.model.nodes), mesh.layout.rapidities(position)).T
     energy, momentum = (np.einsum("rn,rn->r", slopes[ray, k, string], matrix) for k in (0, 1))
     return np.asarray(energy / momentum)
 

@@ -23,29 +23,66 @@ from tnquench.conventions import Integers, Reals
 #: Rapidities beyond this are left out: every density falls like exp(-2 |lambda|), to 5e-12 here.
 MESH_REACH = 13.0
 
+#: Newton steps that place a point; each squares an error that starts well below the spacing.
+NEWTON_STEPS = 4
+
 #: Order of the columns of `averages`.
 OBSERVABLES: tuple[str, ...] = ("energy_density", "charge_density", "energy_current", "charge_current")
 
 
+@dataclass(frozen=True)
+class Layout:
+    """Points of a mesh: integer values of tau(lambda) = (points - 1)/2 + lambda/spacing + tanh(lambda)/core_spacing.
+
+    The trapezoidal rule in tau integrates over lambda. Points are dense near zero, where velocities vary most.
+    """
+
+    spacing: float
+    core_spacing: float
+
+    @property
+    def points(self) -> int:
+        """Number of points, odd."""
+        return 2 * int(np.ceil(MESH_REACH / self.spacing + 1.0 / self.core_spacing)) + 1
+
+    def weights(self, rapidities: Reals) -> Reals:
+        """Return d lambda / d tau."""
+        density = 1.0 / self.spacing + 1.0 / (self.core_spacing * np.cosh(rapidities) ** 2)
+        return np.asarray(1.0 / density)
+
+    def rapidities(self, positions: Reals) -> Reals:
+        """Return the rapidities at tau = positions, any shape, by Newton's method from a table."""
+        middle = 0.5 * (self.points - 1)
+        table = np.linspace(-2.0 * MESH_REACH, 2.0 * MESH_REACH, 4 * self.points)
+        rapidities = np.interp(positions - middle, self._count(table), table)
+        for _ in range(NEWTON_STEPS):
+            excess = self._count(rapidities) - (positions - middle)
+            rapidities = rapidities - excess * self.weights(rapidities)
+        return np.asarray(rapidities)
+
+    def _count(self, rapidities: Reals) -> Reals:
+        return np.asarray(rapidities / self.spacing + np.tanh(rapidities) / self.core_spacing)
+
+
 @dataclass(frozen=True, eq=False)
 class RapidityMesh:
-    """A uniform rapidity mesh with the kernel that takes its fillings to the nodes of `model`.
+    """A rapidity mesh with the kernel that takes its fillings to the nodes of `model`.
 
     grid       : the nodes of `model`
-    rapidities : (point,), ascending with distance `spacing`
+    layout     : where points are; rapidities : (point,), ascending
     spread     : (node, point) interpolation from nodes to mesh
     window     : (point,) 1/cosh^2
     kernel     : (string*point, string*node); (theta f) @ kernel is the convolution of T with sigma theta f,
                  f on the mesh, both f and the result divided by the window
     slopes     : (2, string, node) bare e' and p' divided by the window
-    measure    : (string, point) sigma window spacing / 2 pi, the weight of theta q f in an average
+    measure    : (string, point) sigma window weight / 2 pi, the weight of theta q f in an average
     energy     : (string, point) bare energy
     """
 
     model: BetheModel
     grid: RapidityGrid
+    layout: Layout
     rapidities: Reals
-    spacing: float
     spread: Reals
     window: Reals
     kernel: Reals
@@ -59,16 +96,20 @@ class RapidityMesh:
         return self.model.strings, self.rapidities.size
 
 
-@lru_cache(maxsize=8)
-def rapidity_mesh(*, anisotropy: float, coupling: float, nodes: int, spacing: float) -> RapidityMesh:
-    """Return the mesh with rapidities at most `spacing` crossing angles apart, over `nodes` nodes a string.
+@lru_cache(maxsize=4)
+def rapidity_mesh(
+    *, anisotropy: float, coupling: float, nodes: int, spacing: float, core_spacing: float = np.inf
+) -> RapidityMesh:
+    """Return the mesh with points at most `spacing` crossing angles apart, over `nodes` nodes a string.
 
+    core_spacing : same unit; about the distance of points near rapidity zero, where it is the smaller one
     Raises UnsupportedAnisotropy where the strings are not finite in number. Cached.
     """
     model = xxz_model(anisotropy=anisotropy, coupling=coupling, nodes=nodes)
     grid = rapidity_grid(model.strings, nodes)
-    half = int(np.ceil(MESH_REACH / (spacing * grid.angle)))
-    rapidities, step = np.linspace(-MESH_REACH, MESH_REACH, 2 * half + 1, retstep=True)
+    layout = Layout(spacing * grid.angle, core_spacing * grid.angle)
+    rapidities = layout.rapidities(np.arange(layout.points, dtype=np.float64))
+    weights = layout.weights(rapidities)
     window = np.cosh(rapidities) ** -2
     inverse_window = np.cosh(model.rapidities) ** 2
     bare = [
@@ -79,13 +120,13 @@ def rapidity_mesh(*, anisotropy: float, coupling: float, nodes: int, spacing: fl
     return RapidityMesh(
         model=model,
         grid=grid,
+        layout=layout,
         rapidities=rapidities,
-        spacing=float(step),
         spread=interpolation_matrix(grid, unit_of_rapidity(grid, rapidities)).T.copy(),
         window=window,
-        kernel=_mesh_kernel(model, rapidities, window * step),
+        kernel=_mesh_kernel(model, rapidities, window * weights),
         slopes=np.stack([model.energy_derivative, model.momentum_derivative]) * inverse_window,
-        measure=model.signs[:, None] * window * step / (2.0 * np.pi),
+        measure=model.signs[:, None] * window * weights / (2.0 * np.pi),
         energy=energy_unit * np.array(bare),
     )
 

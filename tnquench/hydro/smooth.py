@@ -132,15 +132,18 @@ def smooth_averages(start: SmoothStart, level: SmoothLevel, times: Reals, places
 
 def _flow(start: SmoothStart, level: SmoothLevel, *, until: float) -> Flow:
     fastest, steepest = start.velocity_survey
-    spacing = level.mesh_spacing
+    core_spacing = np.inf
     if until > 0.0:
         meeting = start.scale / (steepest * until) / (np.pi / supported_nu(start.anisotropy))
-        spacing = min(spacing, level.phase * meeting)
+        core_spacing = level.phase * meeting
     mesh = rapidity_mesh(
-        anisotropy=start.anisotropy, coupling=start.coupling, nodes=level.nodes, spacing=spacing
+        anisotropy=start.anisotropy,
+        coupling=start.coupling,
+        nodes=level.nodes,
+        spacing=level.mesh_spacing,
+        core_spacing=core_spacing,
     )
-    beta_range, field_range = start.ranges
-    states = thermal_states(mesh, beta_range=beta_range, field_range=field_range)
+    states = thermal_states(mesh, *start.samples)
     light_travel = VELOCITY_MARGIN * fastest * until
     approach = max(SHORTEST_APPROACH, 2.0 * start.scale)
     profile = UnfoldedProfile(start.beta, start.beta_field, start.wall, start.wall + light_travel, approach)

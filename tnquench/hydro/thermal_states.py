@@ -17,28 +17,58 @@ State = tuple[float, float]
 #: Chebyshev coefficients of a filling below this, absolutely, are dropped.
 COEFFICIENT_TARGET = 1e-10
 
+#: A coordinate that varies less than this, relative to the parameters, does not vary.
+ROUNDING = 1e-13
+
 #: Numbers of Chebyshev points tried in each parameter.
 POINT_COUNTS: tuple[int, ...] = (8, 16, 32, 64, 128)
 
 
-@dataclass(frozen=True, eq=False)
-class ThermalStates:
-    """Fillings of exp(-beta H + beta_field S^z) for parameters in a rectangle, by Chebyshev expansion.
+@dataclass(frozen=True)
+class Parameters:
+    """Coordinates of thermal states: beta, and beta_field less its regression offset + slope beta.
 
-    beta_range, field_range : (least, greatest)
-    coefficients            : (beta order, field order, string, point)
+    Where both parameters follow the same shape in space the second coordinate is constant.
+    beta_span, rest_span : middle and half range of the two coordinates; a half range may be zero
     """
 
-    beta_range: tuple[float, float]
-    field_range: tuple[float, float]
-    coefficients: Reals
+    offset: float
+    slope: float
+    beta_span: tuple[float, float]
+    rest_span: tuple[float, float]
+
+    def units(self, beta: Reals, beta_field: Reals) -> tuple[Reals, Reals]:
+        """Return both coordinates scaled to -1..1, zero where constant; any shape."""
+        rest = beta_field - self.offset - self.slope * beta
+        return _unit(beta, self.beta_span), _unit(rest, self.rest_span)
+
+    def state(self, beta_unit: float, rest_unit: float) -> State:
+        """Return (beta, beta_field) at scaled coordinates."""
+        beta = self.beta_span[0] + beta_unit * self.beta_span[1]
+        rest = self.rest_span[0] + rest_unit * self.rest_span[1]
+        return beta, rest + self.offset + self.slope * beta
+
+
+@dataclass(frozen=True, eq=False)
+class ThermalStates:
+    """Fillings of thermal states near given ones, by Chebyshev expansion in two coordinates.
+
+    rows : one array (order in the second coordinate, string, point) for each order in the first
+    """
+
+    parameters: Parameters
+    rows: tuple[Reals, ...]
 
     def filling(self, beta: Reals, beta_field: Reals) -> Reals:
         """Return fillings (..., string, point) at parameters given for each string and point, same shape."""
-        by_field = _unit(beta_field, self.field_range)
-        by_beta = _unit(beta, self.beta_range)
-        rows = [_clenshaw(row, by_field) for row in self.coefficients]
-        return _clenshaw(rows, by_beta)
+        first, second = self.parameters.units(beta, beta_field)
+        return _clenshaw([_clenshaw(row, second) for row in self.rows], first)
+
+    def middle(self) -> Reals:
+        """Return the filling (string, point) at the middle of both coordinates."""
+        shape = self.rows[0].shape[1:]
+        beta, beta_field = self.parameters.state(0.0, 0.0)
+        return self.filling(np.full(shape, beta), np.full(shape, beta_field))
 
 
 def thermal_on_mesh(mesh: RapidityMesh, state: State) -> Reals:
@@ -47,65 +77,68 @@ def thermal_on_mesh(mesh: RapidityMesh, state: State) -> Reals:
     return np.asarray(fermi(log_eta @ mesh.spread))
 
 
-def thermal_states(
-    mesh: RapidityMesh, *, beta_range: tuple[float, float], field_range: tuple[float, float]
-) -> ThermalStates:
-    """Return the thermal states of a rectangle of parameters, to COEFFICIENT_TARGET in the filling."""
-    middle = 0.5 * sum(beta_range), 0.5 * sum(field_range)
+def thermal_states(mesh: RapidityMesh, beta: Reals, beta_field: Reals) -> ThermalStates:
+    """Return the thermal states around samples (sample,) of a profile, to COEFFICIENT_TARGET in the filling."""
+    parameters = _parameters(beta, beta_field)
     orders = (
-        _sufficient_points(mesh, beta_range, (middle[1], middle[1])),
-        _sufficient_points(mesh, (middle[0], middle[0]), field_range),
+        _sufficient_order(mesh, parameters, axis=0) if parameters.beta_span[1] else 1,
+        _sufficient_order(mesh, parameters, axis=1) if parameters.rest_span[1] else 1,
     )
-    return ThermalStates(beta_range, field_range, _expand(mesh, beta_range, field_range, orders))
+    coefficients = _expand(mesh, parameters, orders)
+    sizes = np.abs(coefficients).max(axis=(2, 3))
+    kept = [max(1, _needed(row)) for row in sizes]
+    return ThermalStates(parameters, tuple(row[:count] for row, count in zip(coefficients, kept, strict=True)))
 
 
-def _sufficient_points(
-    mesh: RapidityMesh, beta_range: tuple[float, float], field_range: tuple[float, float]
-) -> int:
-    """Return how many Chebyshev points a parameter needs, the other one held fixed."""
-    along_beta = beta_range[0] != beta_range[1]
-    if not along_beta and field_range[0] == field_range[1]:
-        return 1
+def _parameters(beta: Reals, beta_field: Reals) -> Parameters:
+    varying = np.ptp(beta) > 0.0
+    slope = float(np.polyfit(beta, beta_field, 1)[0]) if varying and np.ptp(beta_field) > 0.0 else 0.0
+    offset = float(np.mean(beta_field - slope * beta))
+    rest = beta_field - offset - slope * beta
+    beta_span, rest_span = ((0.5 * float(c.max() + c.min()), 0.5 * float(np.ptp(c))) for c in (beta, rest))
+    if rest_span[1] < ROUNDING * (1.0 + np.abs(beta_field).max()):
+        rest_span = (rest_span[0], 0.0)
+    return Parameters(offset, slope, beta_span, rest_span)
+
+
+def _needed(sizes: Reals) -> int:
+    """Return how many of the coefficients (order,) must be kept."""
+    return int(np.flatnonzero(sizes > COEFFICIENT_TARGET).max(initial=-1)) + 1
+
+
+def _sufficient_order(mesh: RapidityMesh, parameters: Parameters, *, axis: int) -> int:
+    """Return how many Chebyshev orders one coordinate needs, the other one at its middle."""
     for count in POINT_COUNTS:
-        orders = (count, 1) if along_beta else (1, count)
-        coefficients = _expand(mesh, beta_range, field_range, orders)
-        sizes = np.abs(coefficients).max(axis=(2, 3)).ravel()
-        needed = int(np.flatnonzero(sizes > COEFFICIENT_TARGET).max(initial=0)) + 1
+        orders = (count, 1) if axis == 0 else (1, count)
+        sizes = np.abs(_expand(mesh, parameters, orders)).max(axis=(2, 3)).ravel()
+        needed = _needed(sizes)
         if needed < count - 1:
             return needed + 1
     return POINT_COUNTS[-1]
 
 
-def _expand(
-    mesh: RapidityMesh,
-    beta_range: tuple[float, float],
-    field_range: tuple[float, float],
-    orders: tuple[int, int],
-) -> Reals:
-    """Return Chebyshev coefficients (beta order, field order, string, point) from as many thermal states."""
-    betas, fields = _chebyshev_points(*beta_range, orders[0]), _chebyshev_points(*field_range, orders[1])
-    values = np.array([[thermal_on_mesh(mesh, (beta, field)) for field in fields] for beta in betas])
-    to_beta, to_field = (_chebyshev_transform(count) for count in orders)
-    return np.asarray(np.einsum("ib,jf,bfsp->ijsp", to_beta, to_field, values, optimize=True))
+def _expand(mesh: RapidityMesh, parameters: Parameters, orders: tuple[int, int]) -> Reals:
+    """Return Chebyshev coefficients (first order, second order, string, point) from as many thermal states."""
+    first, second = (np.cos(_chebyshev_angles(count)) for count in orders)
+    values = np.array([[thermal_on_mesh(mesh, parameters.state(a, b)) for b in second] for a in first])
+    to_first, to_second = (_chebyshev_transform(count) for count in orders)
+    return np.asarray(np.einsum("ia,jb,absp->ijsp", to_first, to_second, values, optimize=True))
 
 
-def _chebyshev_points(least: float, greatest: float, count: int) -> Reals:
-    angles = np.pi * (np.arange(count) + 0.5) / count
-    return np.asarray(0.5 * (least + greatest) + 0.5 * (greatest - least) * np.cos(angles))
+def _chebyshev_angles(count: int) -> Reals:
+    return np.asarray(np.pi * (np.arange(count) + 0.5) / count)
 
 
 def _chebyshev_transform(count: int) -> Reals:
     """Return the (order, point) matrix from values at the Chebyshev roots to coefficients."""
-    angles = np.pi * (np.arange(count) + 0.5) / count
-    matrix = 2.0 / count * np.cos(np.arange(count)[:, None] * angles)
+    matrix = 2.0 / count * np.cos(np.arange(count)[:, None] * _chebyshev_angles(count))
     matrix[0] *= 0.5
     return np.asarray(matrix)
 
 
 def _unit(values: Reals, span: tuple[float, float]) -> Reals:
-    """Return values mapped to -1..1; zero where the parameter does not vary."""
-    half = 0.5 * (span[1] - span[0])
-    return np.asarray((values - 0.5 * (span[0] + span[1])) / half if half else np.zeros_like(values))
+    middle, half_range = span
+    return np.asarray((values - middle) / half_range) if half_range else np.zeros_like(values)
 
 
 def _clenshaw(coefficients: Sequence[Reals] | Reals, unit: Reals) -> Reals:

@@ -156,9 +156,8 @@ def bond_entropy(state: ChainState, site: int) -> float:
     """Return the von Neumann entropy (nats) of the unit vector sigma across the bond right of the centre
     `site`."""
     tensor = state.tensors[site]
-    flat = [
-        tensor[:, :, block].reshape(-1, block.stop - block.start) for block in state.sector_slices(site + 1)
-    ]
+    rows = tensor.shape[0] * tensor.shape[1]
+    flat = [tensor[:, :, block].reshape(rows, -1) for block in state.sector_slices(site + 1)]
     weights = np.concatenate([np.linalg.eigvalsh(part.T @ part) for part in flat])
     weights = weights[weights > 0.0]
     return float(-(weights * np.log(weights)).sum())

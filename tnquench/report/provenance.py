@@ -8,7 +8,7 @@ from typing import Any
 
 from tnquench.dataset.reader import Run
 from tnquench.report.units import Units
-from tnquench.report.wording import DASH, duration, plain
+from tnquench.report.wording import DASH, duration, plain, unbroken
 
 #: A few events are told beside the verdict, more of them only counted.
 FEW = 3
@@ -36,7 +36,7 @@ def provenance_rows(run: Run, units: Units) -> list[tuple[str, list[str]]]:
         ("Dataset", [f"{run.path.name}, format {said.get('format_version', DASH)}"]),
         ("SHA-256", [_listed(said.get("digest", ""))]),
     ]
-    return [(heading, lines) for heading, lines in rows if any(lines)]
+    return [(heading, [unbroken(line) for line in lines]) for heading, lines in rows if any(lines)]
 
 
 def event_rows(run: Run) -> list[tuple[str, str, str]]:
@@ -59,7 +59,7 @@ def event_remarks(events: list[tuple[str, str, str]]) -> list[str]:
 
 def _companion(said: Mapping[str, Any], units: Units) -> str:
     weight = plain(float(said.get("discarded_weight", float("nan"))))
-    step = units.duration(float(said.get("time_step", float("nan"))))
+    step = units.duration(float(f"{float(said.get('time_step', float('nan'))):.3g}"))
     return f"weight {weight}, step {step}, {said.get('sites', '?')} sites: {_seconds(said, 'seconds')}"
 
 

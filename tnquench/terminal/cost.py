@@ -20,8 +20,8 @@ from tnquench.terminal.units import duration, plain, size
 #: Times at which the bond dimension is shown.
 TIMES_SHOWN = 5
 
-#: Average bytes of a text on the source scale.
-TEXT_BYTES = 16
+#: Bytes of a text on the source scale, and of what the file says about each variable (measured).
+TEXT_BYTES, RECORD_BYTES = 16, 1550
 
 
 def cost_numbers(config: Config, quench: Quench, forecast: Forecast, *, threads: int) -> dict[str, Any]:
@@ -43,6 +43,7 @@ def cost_numbers(config: Config, quench: Quench, forecast: Forecast, *, threads:
         "threads": threads,
         "wall_seconds": together,
         "memory_bytes": forecast.memory_bytes,
+        "total_memory_bytes": forecast.memory_bytes * min(threads, 1 + len(companions)),
         "disk_bytes": dataset_bytes(config, companions),
         "pilot_seconds": forecast.pilot_seconds,
         "pilot_time": forecast.pilot_time,
@@ -58,13 +59,14 @@ def cost_rows(numbers: Mapping[str, Any]) -> Iterator[tuple[str, str]]:
     yield f"main run (discarded weight {weight}, time step {step})", duration(numbers["main_seconds"])
     yield f"its {numbers['companions']} companions together", duration(numbers["companion_seconds"])
     threads = "1 thread" if numbers["threads"] == 1 else f"{numbers['threads']} threads"
-    yield f"simulations from start to end on {threads}", duration(numbers["wall_seconds"])
+    yield f"all simulations on {threads}", duration(numbers["wall_seconds"])
     yield "memory of the main run", size(numbers["memory_bytes"])
-    yield "dataset on disk", size(numbers["disk_bytes"])
+    yield f"memory of all processes on {threads}, at most", size(numbers["total_memory_bytes"])
+    yield "dataset on disk; report and figures add a few MB", size(numbers["disk_bytes"])
 
 
 def dataset_bytes(config: Config, companions: Mapping[str, Quench]) -> int:
-    """Return the bytes of the arrays in a run's dataset, whose layout is known before it is computed."""
+    """Return the size of a run's dataset, whose layout is known before it is computed."""
     levels = [level for level in LEVELS if level in config.hydrodynamics.levels]
     absent = tuple(f"{level}_" for level in LEVELS if level not in levels)
     sizes = _places(config.chain.sites)
@@ -86,7 +88,8 @@ def _places(sites: int) -> dict[str, int]:
 
 
 def _table_bytes(table: Mapping[str, Variable], sizes: Mapping[str, int]) -> int:
-    return sum(prod(sizes[dim] for dim in row.dims) * _item_bytes(row) for row in table.values())
+    arrays = sum(prod(sizes[dim] for dim in row.dims) * _item_bytes(row) for row in table.values())
+    return arrays + RECORD_BYTES * len(table)
 
 
 def _item_bytes(row: Variable) -> int:
