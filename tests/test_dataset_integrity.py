@@ -181,8 +181,8 @@ FAULTS: dict[str, tuple[Callable[[h5py.File], None], str]] = {
         "budget/energy_density/euler_resolved holds values outside 0..1",
     ),
     "units": (
-        set_attribute("quantum/energy_current", "units", "coupling"),
-        "quantum/energy_current has units 'coupling', expected 'coupling^2'",
+        set_attribute("quantum/energy_current", "units", "energy"),
+        "quantum/energy_current has units 'energy', expected 'energy^2'",
     ),
     "dimensions": (
         replace_by("quantum/energy_density", np.zeros((TIMES, SITES)), "time", "site"),

@@ -12,6 +12,7 @@ from scipy.interpolate import PchipInterpolator
 from tnquench.bethe.strings import UnsupportedAnisotropy, supported_nu
 from tnquench.budget.assess import RunSettings
 from tnquench.budget.companions import coarser_steps, shorter_length
+from tnquench.budget.verdict import SHARP_REACH
 from tnquench.config.rules import default_time_step
 from tnquench.config.schema import Config
 from tnquench.conventions import Reals, bond_positions, site_positions
@@ -26,6 +27,9 @@ START_SHARE = 0.03
 
 #: The coarser companion needs a step to double: a main run takes at least so many in each interval.
 FEWEST_STEPS = 2
+
+#: A tangent or a Gaussian counts as flat beyond so many of its widths.
+FLAT_BEYOND = 3.0
 
 _SHAPES: dict[str, Callable[..., Reals]] = {
     "uniform": profiles.uniform,
@@ -183,6 +187,21 @@ def default_step(config: Config) -> float:
     )
 
 
+def start_reach(config: Config) -> float:
+    """Return the distance from x = 0 beyond which every profile of the start is flat, infinite if there is
+    none."""
+    return SHARP_REACH + max(
+        _reach(profile) for profile in (config.start.beta, config.start.beta_field) if profile
+    )
+
+
+def _reach(profile: Any) -> float:
+    """Return the distance from x = 0 beyond which one profile is flat."""
+    if profile.shape in ("step", "bump"):
+        return FLAT_BEYOND * float(profile.width)
+    return 0.0 if profile.shape == "uniform" else float("inf")
+
+
 def budget_settings(config: Config, quench: Quench) -> RunSettings:
     """Return what the budget must know of a main run.
 
@@ -194,5 +213,6 @@ def budget_settings(config: Config, quench: Quench) -> RunSettings:
         step_ratio=quench.steps / coarser_steps(quench.steps),
         trotter_order=quench.trotter_order,
         resolve_at=config.budget.resolve_at,
+        reach=start_reach(config),
         fallback_velocity=config.chain.coupling * max(1.0, abs(config.chain.anisotropy)) * 0.5 * np.pi,
     )

@@ -238,7 +238,7 @@ def main(arguments: Sequence[str] | None = None) -> None:
     words = sys.argv[1:] if arguments is None else arguments
     if arguments is None:
         signal(SIGTERM, default_int_handler)  # a batch system's stop ends companions too, like Ctrl-C
-    debug = "--debug" in words
+    debug, others = "--debug" in words, set(active_children())
     try:
         outcome = app([word for word in words if word != "--debug"], prog_name=PROGRAM, standalone_mode=False)
         if sys.stdout is not None:  # it is None where the caller closed it
@@ -248,7 +248,7 @@ def main(arguments: Sequence[str] | None = None) -> None:
         if debug:
             traceback.print_exc()
         code, message = answer(error)
-    for worker in active_children():  # companions whose results nobody will fetch
+    for worker in set(active_children()) - others:  # companions whose results nobody will fetch
         worker.terminate()
     if message:
         typer.echo(message, err=True)

@@ -14,7 +14,7 @@ from typing import Any
 
 import numpy as np
 
-from tnquench.assemble import budget_settings, sample_times
+from tnquench.assemble import budget_settings, sample_times, start_reach
 from tnquench.budget.assess import PredictedLevel, assess
 from tnquench.budget.verdict import SOURCE_KINDS, ObservableBudget
 from tnquench.config.document import effective_toml
@@ -78,7 +78,7 @@ def run_pieces(
         "total_charge": main.total_charge,
     }
     if prediction is not None:
-        _add_prediction(pieces, prediction)
+        _add_prediction(pieces, config, prediction)
     budgets = assess(
         main,
         quantum.companions,
@@ -111,7 +111,7 @@ def run_pieces(
 def prediction_pieces(config: Config, config_file: Path, prediction: Prediction) -> Pieces:
     """Return the dataset of a prediction alone."""
     pieces = _empty_pieces(config, config_file, times=sample_times(config))
-    _add_prediction(pieces, prediction)
+    _add_prediction(pieces, config, prediction)
     pieces.provenance.update({"events": _outlook(config, prediction, ""), "preparation": {}})
     return pieces
 
@@ -138,7 +138,7 @@ def _empty_pieces(config: Config, config_file: Path, *, times: Reals) -> Pieces:
     )
 
 
-def _add_prediction(pieces: Pieces, prediction: Prediction) -> None:
+def _add_prediction(pieces: Pieces, config: Config, prediction: Prediction) -> None:
     """Add a prediction with its errors and its light cone."""
     group = "hydrodynamics/euler"
     pieces.groups[group] = dict(prediction.fields)
@@ -149,6 +149,7 @@ def _add_prediction(pieces: Pieces, prediction: Prediction) -> None:
     pieces.attributes[group] = {
         "light_cone_left": left,
         "light_cone_right": right,
+        "light_cone_reach": start_reach(config),
         "method": prediction.method,
         "references": list(prediction.references),
     }

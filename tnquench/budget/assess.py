@@ -10,7 +10,7 @@ import numpy as np
 
 from tnquench.budget import sources
 from tnquench.budget.companions import COARSE, LOOSE, LOOSER, SHORT
-from tnquench.budget.verdict import ObservableBudget, judge_observable, light_cone_window
+from tnquench.budget.verdict import SHARP_REACH, ObservableBudget, judge_observable, light_cone_window
 from tnquench.conventions import OBSERVABLE_PLACES, Reals
 from tnquench.observables.quench import QuantumRecord
 
@@ -34,6 +34,7 @@ class RunSettings:
     trotter_order: int
     resolve_at: float
     fallback_velocity: float
+    reach: float = SHARP_REACH
 
 
 def quantum_sources(
@@ -123,7 +124,9 @@ def assess(
             sources=found,
             bound=sources.truncation_bound(angle=main.angle, norm=main.norms[name], shape=values.shape),
             predictions={level: prediction.fields[name] for level, prediction in predictions.items()},
-            window=light_cone_window(times=main.times, positions=positions[place], light_cone=cone),
+            window=light_cone_window(
+                times=main.times, positions=positions[place], light_cone=cone, reach=settings.reach
+            ),
             times=main.times,
             resolve_at=settings.resolve_at,
         )

@@ -23,6 +23,13 @@ SOURCE_KINDS: dict[str, str] = {
 }
 
 
+#: Reach of a sharp step: the points next to the joint, so that no window is empty.
+SHARP_REACH = 1.5
+
+#: Spacings next to an open end, where the chain feels its end already at t = 0.
+END_MARGIN = 4.0
+
+
 @dataclass(frozen=True)
 class LevelVerdict:
     """The comparison with one hydrodynamic level.
@@ -56,16 +63,21 @@ class ObservableBudget:
     levels: dict[str, LevelVerdict]
 
 
-def light_cone_window(*, times: Reals, positions: Reals, light_cone: tuple[float, float]) -> np.ndarray:
-    """Return which points (time, place) the fastest excitations from the middle have reached, one lattice
-    spacing wider.
+def light_cone_window(
+    *, times: Reals, positions: Reals, light_cone: tuple[float, float], reach: float = SHARP_REACH
+) -> np.ndarray:
+    """Return which points (time, place) the fastest excitations from the middle have reached.
 
-    light_cone : leftmost and rightmost velocity; a window never has fewer than the points within one and a
-    half spacings of the middle.
+    light_cone : leftmost and rightmost velocity
+    reach : distance from x = 0 up to which the start itself varies; infinite where it varies everywhere
+    The last END_MARGIN spacings before each open end are left out wherever the window does not consist of
+    them alone.
     """
     left, right = light_cone
     clock, place = times[:, None], positions[None, :]
-    return np.asarray((place >= left * clock - 1.5) & (place <= right * clock + 1.5))
+    inside = (place >= left * clock - reach) & (place <= right * clock + reach)
+    interior = np.abs(place) <= np.abs(positions).max() - END_MARGIN
+    return np.asarray(inside & interior if (inside & interior).any(axis=1).all() else inside)
 
 
 def window_norm(values: Reals, window: np.ndarray) -> Reals:

@@ -41,7 +41,7 @@ class Variable:
 
 #: Dimension scales of the root group.
 COORDINATES: dict[str, Variable] = {
-    "time": Variable(("time",), "1/coupling", "time since the start"),
+    "time": Variable(("time",), "1/energy", "time since the start"),
     "site": Variable(("site",), "lattice spacing", "position of the site, the middle of the chain at zero"),
     "bond": Variable(("bond",), "lattice spacing", "position of the bond, the middle of the chain at zero"),
     "source": Variable(("source",), "1", "source of error", "str"),
@@ -59,10 +59,10 @@ OWN_COORDINATES: dict[str, Variable] = {
 OBSERVABLES: dict[str, Variable] = {
     name: Variable(("time", OBSERVABLE_PLACES[name]), units, long_name)
     for name, units, long_name in (
-        ("energy_density", "coupling", "energy density"),
-        ("energy_current", "coupling^2", "energy current"),
+        ("energy_density", "energy", "energy density"),
+        ("energy_current", "energy^2", "energy current"),
         ("charge_density", "1", "charge density"),
-        ("charge_current", "coupling", "charge current"),
+        ("charge_current", "energy", "charge current"),
     )
 }
 
@@ -70,7 +70,7 @@ _QUANTUM: dict[str, Variable] = OBSERVABLES | {
     "bond_dimension": Variable(("time", "bond"), "1", "bond dimension", "int64"),
     "operator_entanglement": Variable(("time", "bond"), "nats", "entropy of entanglement of the state"),
     "discarded_weight": Variable(("time", "bond"), "1", "discarded weight, summed since the start"),
-    "total_energy": Variable(("time",), "coupling", "total energy"),
+    "total_energy": Variable(("time",), "energy", "total energy"),
     "total_charge": Variable(("time",), "1", "total charge"),
 }
 

@@ -37,7 +37,7 @@ def write_run(
     """Write `folder`/run.h5 and return its path; an earlier run.h5 is replaced only by a complete new one.
 
     folder      : made if missing
-    coordinates : "time" (time,) in 1/coupling, "site" (site,) and "bond" (bond,) in lattice spacings,
+    coordinates : "time" (time,) in 1/energy, "site" (site,) and "bond" (bond,) in lattice spacings,
                   "source" (source,) as text
     groups      : variables by group, such as "quantum" or "budget/energy_density"; names, shapes and units
                   as in tnquench/dataset/variables.py. A companion on a chain of another length adds its

@@ -87,7 +87,9 @@ def thermal_states(mesh: RapidityMesh, beta: Reals, beta_field: Reals) -> Therma
     coefficients = _expand(mesh, parameters, orders)
     sizes = np.abs(coefficients).max(axis=(2, 3))
     kept = [max(1, _needed(row)) for row in sizes]
-    return ThermalStates(parameters, tuple(row[:count] for row, count in zip(coefficients, kept, strict=True)))
+    return ThermalStates(
+        parameters, tuple(row[:count] for row, count in zip(coefficients, kept, strict=True))
+    )
 
 
 def _parameters(beta: Reals, beta_field: Reals) -> Parameters:

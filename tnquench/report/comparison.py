@@ -9,7 +9,7 @@ import numpy as np
 import xarray
 from numpy.typing import NDArray
 
-from tnquench.budget.verdict import light_cone_window, window_norm
+from tnquench.budget.verdict import SHARP_REACH, light_cone_window, window_norm
 from tnquench.conventions import OBSERVABLE_PLACES, PHYSICAL_SOURCES, Reals
 from tnquench.dataset.reader import Run
 from tnquench.dataset.variables import LEVELS
@@ -36,7 +36,8 @@ class Comparison:
     each an estimate or a bound as kinds says
     bound : rigorous, on truncation alone
     deviation_norm, numerical_norm (time,) : norms over the light-cone window; dominant : one source a time
-    light_cone : leftmost and rightmost velocity of the prediction; joined : the start joins halves at x = 0
+    light_cone : leftmost and rightmost velocity of the prediction; reach : how far from x = 0 the start
+    varies; joined : the start joins halves at x = 0
     """
 
     name: str
@@ -58,6 +59,7 @@ class Comparison:
     dominant: tuple[str, ...]
     resolve_at: float
     light_cone: tuple[float, float] | None
+    reach: float
     joined: bool
 
     @property
@@ -88,7 +90,9 @@ class Comparison:
         if self.light_cone is None:
             return np.ones((self.times.size, self.positions.size), dtype=np.bool_)
         return np.asarray(
-            light_cone_window(times=self.times, positions=self.positions, light_cone=self.light_cone),
+            light_cone_window(
+                times=self.times, positions=self.positions, light_cone=self.light_cone, reach=self.reach
+            ),
             dtype=np.bool_,
         )
 
@@ -133,6 +137,7 @@ def compare(run: Run, name: str) -> Comparison:
         dominant=_dominant(budget) if estimated else (),
         resolve_at=float(budget.attrs.get("resolve_at", np.nan)),
         light_cone=(float(cone[0]), float(cone[1])) if cone[0] is not None and cone[1] is not None else None,
+        reach=float(theory.attrs.get("light_cone_reach", SHARP_REACH)),
         joined=is_step(settings),
     )
 

@@ -70,7 +70,7 @@ def render_page(run: Run, figures: Path) -> str:
         windowed=any(field.light_cone is not None for field in drawn),
         chapters=[_chapter(chapter, figures) for chapter in chapters(run, drawn)],
         events=events,
-        time_unit=units_of(settings).symbol("1/coupling"),
+        time_unit=units_of(settings).symbol("1/energy"),
         config=str(run.provenance.get("config_toml", "")),
         provenance=provenance_rows(run, units_of(settings)),
         references=_references(run, settings),

@@ -65,7 +65,7 @@ def _chain(chain: Table) -> str:
 
 def _start(start: Table, units: Units) -> str:
     parts = [
-        f"{labelled('inverse temperature β', units.symbol('1/coupling'))}: {_profile(start.get('beta', {}))}"
+        f"{labelled('inverse temperature β', units.symbol('1/energy'))}: {_profile(start.get('beta', {}))}"
     ]
     if "beta_field" in start:
         parts.append(f"field βh: {_profile(start['beta_field'])}")

@@ -9,7 +9,7 @@ from typing import Any
 from tnquench.report.wording import labelled, plain
 
 #: Units of the dataset as a physicist writes them where J = 1.
-SYMBOLS: dict[str, str] = {"coupling": "J", "coupling^2": "J²", "1/coupling": "1/J", "nats": "nats"}
+SYMBOLS: dict[str, str] = {"energy": "J", "energy^2": "J²", "1/energy": "1/J", "nats": "nats"}
 
 
 @dataclass(frozen=True)
@@ -26,7 +26,7 @@ class Units:
     @property
     def time_label(self) -> str:
         """Label of a time axis."""
-        return labelled("time t", self.symbol("1/coupling"))
+        return labelled("time t", self.symbol("1/energy"))
 
     def symbol(self, unit: str) -> str:
         """Return how a unit of the dataset is written, nothing for pure numbers."""
