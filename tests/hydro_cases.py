@@ -66,9 +66,7 @@ class PanelState:
 
     def dressed(self) -> list[Reals]:
         """Dressed e' and p' on each string's grid, (2, rapidity)."""
-        blocks = [
-            [self.kernel(a, self.grids[a][0], b) for b in range(self.nu)] for a in range(self.nu)
-        ]
+        blocks = [[self.kernel(a, self.grids[a][0], b) for b in range(self.nu)] for a in range(self.nu)]
         bare = np.concatenate([self.bare(a, self.grids[a][0]) for a in range(self.nu)], axis=1)
         solution = np.linalg.solve(np.eye(bare.shape[1]) + np.block(blocks), bare.T).T
         return np.split(solution, np.cumsum([x.size for x, _ in self.grids])[:-1], axis=1)

@@ -59,7 +59,8 @@ def test_step_estimate_recovers_a_known_law(order: int) -> None:
 
 
 def test_length_estimate_keeps_the_depth_below_the_end() -> None:
-    """An end effect of the short chain is charged to the long chain at equal depth, noise below the floor is not."""
+    """An end effect of the short chain is charged to the long chain at equal depth, noise below the floor is
+    not."""
     long, noise = np.zeros((2, 12)), np.full((2, 12), 1e-6)
     short = np.full((2, 8), 1e-7)
     short[:, 0], short[:, 1] = 1e-2, 1e-3
@@ -147,7 +148,8 @@ SETTINGS = RunSettings(step_ratio=3.0, trotter_order=4, resolve_at=3.0, fallback
 def judged(
     sites: int, *, weight: float, field: bool
 ) -> tuple[QuantumRecord, dict[str, Reals], dict[str, Reals]]:
-    """A free chain with its claimed errors (the ends' influence left out: the oracle has the same ends) and truth."""
+    """A free chain with its claimed errors (the ends' influence left out: the oracle has the same ends) and
+    truth."""
     main = free_quench(sites, weight=weight, field=field)
     records = {name: simulate(quench) for name, quench in companion_quenches(main, shorter=None).items()}
     record = simulate(main)
@@ -170,7 +172,8 @@ def judged(
 def test_claimed_error_covers_the_true_one_and_is_no_wider_than_needed(
     sites: int, weight: float, field: bool
 ) -> None:
-    """At D = 0 free fermions give the truth: 95 % of all points covered, and 90 % of those in the last light cones.
+    """At D = 0 free fermions give the truth: 95 % of all points covered, and 90 % of those in the last light
+    cones.
 
     Norms over the light cone and all samples are within a factor 10.
     """

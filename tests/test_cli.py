@@ -204,7 +204,7 @@ def test_thermo_table_says_what_its_json_says() -> None:
 
 
 def test_thermo_scales_with_the_coupling() -> None:
-    """H is proportional to J: (J, beta, h) = (2, 0.5, 0.4) is (1, 1, 0.2) with energies doubled; no source."""
+    """H is proportional to J: (J, beta, h) = (2, 0.5, 0.4) is (1, 1, 0.2) with energies doubled."""
     single = json.loads(call(*THERMO, "--field", "0.2", "--json").out)
     words = ("--anisotropy", "0.5", "--beta", "0.5", "--field", "0.4", "--coupling", "2", "--json")
     double = json.loads(call("thermo", "xxz", *words).out)

@@ -5,8 +5,8 @@ from __future__ import annotations
 import errno
 import json
 import os
+import shutil
 import signal
-import subprocess
 import time
 from concurrent.futures.process import BrokenProcessPool
 from pathlib import Path
@@ -61,27 +61,30 @@ def test_dataset_of_a_run_is_sound(finished: tuple[Path, Answer]) -> None:
         assert call("check", path) == Answer(0, f"{path}: sound and complete\n", "")
 
 
-def test_one_thread_gives_the_same_numbers(finished: tuple[Path, Answer], tmp_path: Path) -> None:
+def test_one_thread_gives_the_same_numbers(
+    finished: tuple[Path, Answer], tmp_path: Path, monkeypatch: pytest.MonkeyPatch
+) -> None:
     folder, _ = finished
+    monkeypatch.setattr("tnquench.run.write_report", lambda _folder: None)  # seconds, and not in question
     assert call("run", config_file(tmp_path), "--into", tmp_path / "again", "--threads", 1).code == 0
     twice, once = open_run(folder), open_run(tmp_path / "again")
     for name in OBSERVABLE_PLACES:
         np.testing.assert_allclose(once.quantum[name], twice.quantum[name], rtol=0.0, atol=1e-12)
 
 
-def test_report_is_rebuilt_from_the_dataset_alone(tmp_path: Path) -> None:
-    write_synthetic_run(tmp_path, sites=8, times=4)
-    for path in (tmp_path, tmp_path / "run.h5"):
-        answer = call("report", path)
-        assert (answer.code, answer.out) == (0, f"{tmp_path / 'report.html'}\n")
-        (tmp_path / "report.html").unlink()
+def test_report_is_rebuilt_from_the_dataset_alone(finished: tuple[Path, Answer], tmp_path: Path) -> None:
+    folder, _ = finished
+    shutil.copy(folder / "run.h5", tmp_path)
+    page = tmp_path / "report.html"
+    assert call("report", tmp_path / "run.h5") == Answer(0, f"{page}\n", "report\n")
+    assert page.stat().st_size == pytest.approx((folder / "report.html").stat().st_size, rel=0.01)
 
 
 # --- forecast and prediction alone
 
 
 def test_forecast_foretells_the_run(finished: tuple[Path, Answer], tmp_path: Path) -> None:
-    """Of a run of half a second only sizes can be foretold: bonds exact up to the growth law, disk to 25 %."""
+    """Of a run of half a second only sizes can be foretold: bonds to 30 %, disk to 25 %."""
     folder, _ = finished
     answer = call("forecast", config_file(tmp_path), "--threads", 3, "--json")
     assert (answer.code, answer.err) == (0, "pilot runs\n")
@@ -158,7 +161,7 @@ def failing(monkeypatch: pytest.MonkeyPatch, error: BaseException) -> None:
 
 
 FAILURES = [
-    (RuntimeError("of\nsome kind"), 1, "a defect of the program (RuntimeError: of some kind); please run the same"),
+    (RuntimeError("of\nsome kind"), 1, "a defect of the program (RuntimeError: of some kind); please run"),
     (KeyError(), 1, "a defect of the program (KeyError: no message)"),
     (StateError("not finite"), 1, "not finite"),
     (ConvergenceError("an iteration", residual=1e-3), 1, "an iteration did not converge"),
@@ -190,24 +193,27 @@ def test_debug_shows_the_traceback(monkeypatch: pytest.MonkeyPatch, words: tuple
     assert answer.lines[-1].startswith("tnquench: a defect of the program")
 
 
-def interrupted(folder: Path, sign: signal.Signals, *, threads: int) -> tuple[subprocess.Popen[str], str, str]:
-    """Start a run of minutes, send its main process a signal in the middle, return it with what it wrote."""
-    file = config_file(folder, until=500.0, discarded_weight=1e-14)
-    process = start("run", file, "--into", folder / "results", "--threads", threads)
+@pytest.mark.parametrize(("sign", "threads"), [(signal.SIGINT, 1), (signal.SIGTERM, 2)])
+def test_interrupted_run_ends_cleanly(tmp_path: Path, sign: signal.Signals, threads: int) -> None:
+    file = config_file(tmp_path, until=500.0, discarded_weight=1e-14)
+    process = start("run", file, "--into", tmp_path / "results", "--threads", threads)
     assert process.stderr is not None
-    first = process.stderr.readline()
-    assert first.startswith("main run"), first
+    assert process.stderr.readline().startswith("main run")
     time.sleep(0.5)
     process.send_signal(sign)
     out, err = process.communicate(timeout=20)
-    return process, out, err
-
-
-@pytest.mark.parametrize(("sign", "threads"), [(signal.SIGINT, 1), (signal.SIGTERM, 2)])
-def test_interrupted_run_ends_cleanly(tmp_path: Path, sign: signal.Signals, threads: int) -> None:
-    process, out, err = interrupted(tmp_path, sign, threads=threads)
     assert (process.returncode, out) == (130, "")
     assert err == "tnquench: interrupted; no file is left half-written\n"
     assert list((tmp_path / "results").iterdir()) == []
-    with pytest.raises(ProcessLookupError):  # no companion goes on behind our back
-        os.killpg(process.pid, 0)
+    assert group_is_gone(process.pid), "a companion goes on behind our back"
+
+
+def group_is_gone(group: int) -> bool:
+    """Whether every process of a group ends within a few seconds."""
+    for _ in range(50):
+        try:
+            os.killpg(group, 0)
+        except ProcessLookupError:
+            return True
+        time.sleep(0.1)
+    return False

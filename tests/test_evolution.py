@@ -52,7 +52,8 @@ def guess_for(blocks: list[Reals], *, held: int = 10, noise: float = 1e-3) -> li
 def test_three_cutting_methods_agree_to_rounding(shape: tuple[int, int], weight: float) -> None:
     """With a warm start that reaches below the target all three keep the same space and lose the same weight.
 
-    Tolerance: weights near the cut are known to the rounding unit of the whole, so directions are to rounding/weight.
+    Tolerance: weights near the cut are known to the rounding unit of the whole, so directions are to
+    rounding/weight.
     """
     tolerance = 100.0 * np.finfo(float).eps / weight
     blocks = decaying_blocks(*shape)

@@ -24,7 +24,13 @@ TIMES = np.array([0.0, 2.0, 5.0, 8.0])
 
 
 def halves(
-    *, anisotropy: float, left: State, right: State, coupling: float = 1.0, times: Reals = TIMES, sites: int = SITES
+    *,
+    anisotropy: float,
+    left: State,
+    right: State,
+    coupling: float = 1.0,
+    times: Reals = TIMES,
+    sites: int = SITES,
 ) -> Prediction:
     middle = (0.5 * (left[0] + right[0]), 0.5 * (left[1] + right[1]))
     places = {"sites": site_positions(SITES), "bonds": bond_positions(SITES)}
@@ -32,7 +38,9 @@ def halves(
     return predict_step(left=left, right=right, middle=middle, times=times, **chain, **places)
 
 
-def on_rays(rays: Reals, *, nodes: int = 48, anisotropy: float, left: State, right: State) -> dict[str, Reals]:
+def on_rays(
+    rays: Reals, *, nodes: int = 48, anisotropy: float, left: State, right: State
+) -> dict[str, Reals]:
     """Averages on many rays at one resolution."""
     mesh = rapidity_mesh(anisotropy=anisotropy, coupling=1.0, nodes=nodes, spacing=4.0 / nodes)
     columns = join_halves(mesh, thermal_on_mesh(mesh, left), thermal_on_mesh(mesh, right), rays=rays).T
@@ -157,9 +165,7 @@ def test_second_quadrature_agrees(nu: int, sign: int) -> None:
     reference = reference_state(mesh, 0.5 * (sides["left"] + sides["right"]))
     _, slopes = states_on_rays(mesh, reference, rays=np.array([ray]), **sides)
     crossings, _ = find_crossings(mesh, slopes, np.array([ray]))
-    cuts = [
-        mesh.layout.rapidities(crossings.position[crossings.row == string]) for string in range(nu)
-    ]
+    cuts = [mesh.layout.rapidities(crossings.position[crossings.row == string]) for string in range(nu)]
     assert all(cut.size for cut in cuts)
     grids = [panels(cut) for cut in cuts]
     fillings = []

@@ -9,7 +9,8 @@ import pytest
 
 PACKAGE = Path(__file__).parent.parent / "tnquench"
 
-#: Ranks of the folders and files; a module may import lower ranks and its own folder, never its own rank's neighbours.
+#: Ranks of the folders and files; a module may import lower ranks and its own folder, never its own rank's
+#: neighbours.
 RANKS = {
     "conventions": 0,
     "errors": 0,
@@ -23,6 +24,7 @@ RANKS = {
     "budget": 4,
     "report": 5,
     "cluster": 6,
+    "notebook": 6,
     "assemble": 7,
     "outcome": 8,
     "run": 9,
@@ -30,7 +32,8 @@ RANKS = {
     "cli": 11,
 }
 
-#: What the report may see: files, and the budget's norms and windows; any report can be rebuilt from its dataset.
+#: What the report may see: files, and the budget's norms and windows; any report can be rebuilt from its
+#: dataset.
 REPORT_SEES = {"tnquench.conventions", "tnquench.errors", "tnquench.budget.verdict"}
 
 #: Evolution and prediction never see each other: their agreement must mean something.

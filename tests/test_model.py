@@ -1,4 +1,5 @@
-"""The chain's operators against dense matrices and its grading against the symmetries that the terms leave."""
+"""The operators of a chain against dense matrices; its grading against the symmetries that the terms leave."""
+leave."""
 
 from __future__ import annotations
 

@@ -1,4 +1,5 @@
-"""Every observable of a whole quench against exact short chains, long free-fermion chains and another evolution."""
+"""All observables of whole quenches against exact short chains, free-fermion chains and another evolution."""
+evolution."""
 
 from __future__ import annotations
 
@@ -109,7 +110,8 @@ def long_free_chain() -> tuple[QuantumRecord, dict[str, Reals]]:
 def test_long_free_chain_agrees_with_covariance_matrices(
     long_free_chain: tuple[QuantumRecord, dict[str, Reals]],
 ) -> None:
-    """L = 64, D = 0 at weight 1e-10, t up to 5; the finer statement on the claimed error is in test_budget."""
+    """L = 64, D = 0 at weight 1e-10, t up to 5; the finer statement on the claimed error is in
+    test_budget."""
     record, exact = long_free_chain
     for name, values in record.fields.items():
         np.testing.assert_allclose(values, exact[name], rtol=0.0, atol=1e-5, err_msg=name)
@@ -131,8 +133,9 @@ def test_operator_entanglement_of_a_long_chain(
 def test_another_evolution_agrees_within_both_bounds() -> None:
     """quimb's general-purpose matrix product states on the same gates, L = 16, D = 0.5, order 2, dt = 0.1.
 
-    Both sides cut at 1e-12, so their bond energies may differ by the sum of the rigorous bounds; steps are equal, so
-    Trotter errors drop out. The bounds are loose, hence also a tolerance that a wrong gate could not meet.
+    Both sides cut at 1e-12, so their bond energies may differ by the sum of the rigorous bounds; steps are
+    equal, so Trotter errors drop out. The bounds are loose, hence also a tolerance that a wrong gate could
+    not meet.
     """
     sites, weight = 16, 1e-12
     beta, _ = start("step", sites)

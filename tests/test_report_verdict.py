@@ -1,8 +1,8 @@
 """The verdict is a sentence whose numbers are those of the arrays, whatever the run has resolved.
 
 Expected numbers are recomputed here from the dataset with numpy alone; the window of the verdict is written
-out in `report_cases` from its definition: the light cone, one and a half spacings wider on either side, without
-the four spacings next to each end.
+out in `report_cases` from its definition: the light cone, one and a half spacings wider on either side,
+without the four spacings next to each end.
 """
 
 from __future__ import annotations

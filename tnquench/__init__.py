@@ -1,5 +1,5 @@
 """Judge hydrodynamics of one-dimensional quantum chains against error-controlled exact dynamics."""
 
-from tnquench.dataset.reader import Run, open_run
+from tnquench.notebook import Run, open_run
 
 __all__ = ["Run", "open_run"]

@@ -12,16 +12,22 @@ class TnquenchError(Exception):
 
 
 class InputError(TnquenchError):
-    """The user's input cannot be used; carries one line per problem (where, found, allowed, what to do)."""
+    """The user's input cannot be used; carries one line per problem (where, found, allowed, what to do).
+
+    consequence : what did not happen because of it, said in the heading; nothing where that is plain
+    """
 
     exit_code = 2
 
-    def __init__(self, subject: str, problems: Sequence[str]) -> None:
+    def __init__(
+        self, subject: str, problems: Sequence[str], *, consequence: str = "nothing was run"
+    ) -> None:
         self.subject = subject
         self.problems = tuple(problems)
         count = f"{len(self.problems)} problem{'s' if len(self.problems) != 1 else ''}"
         lines = "\n".join(f"  {problem}" for problem in self.problems)
-        super().__init__(f"{subject}: {count}, nothing was run\n{lines}")
+        heading = f"{subject}: {count}, {consequence}" if consequence else f"{subject}: {count}"
+        super().__init__(f"{heading}\n{lines}")
 
 
 class VerdictNegative(TnquenchError):  # noqa: N818 - a verdict, not a fault

@@ -3,12 +3,14 @@ design."""
 
 from __future__ import annotations
 
+import signal
+import threading
 import time
 from collections.abc import Callable, Iterator, Mapping
 from concurrent.futures import Future, ProcessPoolExecutor
 from contextlib import contextmanager
 from dataclasses import dataclass, replace
-from multiprocessing import get_context
+from multiprocessing import active_children, get_context
 from pathlib import Path
 
 from threadpoolctl import threadpool_limits
@@ -84,11 +86,11 @@ def hydro(config_file: Path, *, into: Path | None = None) -> Path:
     began, cpu = time.perf_counter(), time.process_time()
     config = load_config(config_file)
     folder = into or DEFAULT_FOLDER / f"{config_file.stem}-hydro"
-    require_writable(folder)
     with threadpool_limits(1):
         prediction, absence = build_prediction(config)
     if prediction is None:
         raise InputError(str(config_file), [absence])
+    require_writable(folder)
     pieces = prediction_pieces(config, config_file, prediction)
     pieces.provenance.update(
         {"wall_seconds": time.perf_counter() - began, "cpu_seconds": time.process_time() - cpu}
@@ -174,22 +176,39 @@ def simulate_all(
 def _background(
     quenches: Mapping[str, Quench], *, workers: int
 ) -> Iterator[dict[str, Future[QuantumRecord]]]:
-    """Start quenches in processes of their own, longest first; yield their futures by name, none without
-    workers.
+    """Start quenches in processes of their own; yield their futures by name, none without workers.
 
-    Interrupted, it gives up what has not begun.
+    On any exception the processes are ended: nobody will fetch their results.
     """
     if workers < 1 or not quenches:
         yield {}
         return
+    others = set(active_children())
     with ProcessPoolExecutor(
         min(workers, len(quenches)), mp_context=get_context("spawn"), initializer=_one_core
     ) as pool:
         try:
-            yield {name: pool.submit(simulate, quench) for name, quench in quenches.items()}
+            with _interrupts_ignored():
+                pending = {name: pool.submit(simulate, quench) for name, quench in quenches.items()}
+            yield pending
         except BaseException:
             pool.shutdown(wait=False, cancel_futures=True)
+            for worker in set(active_children()) - others:
+                worker.terminate()
             raise
+
+
+@contextmanager
+def _interrupts_ignored() -> Iterator[None]:
+    """Ignore Ctrl-C while processes start: they inherit it, so that only this process answers to it later."""
+    if threading.current_thread() is not threading.main_thread():
+        yield
+        return
+    previous = signal.signal(signal.SIGINT, signal.SIG_IGN)
+    try:
+        yield
+    finally:
+        signal.signal(signal.SIGINT, previous)
 
 
 def _one_core() -> None:

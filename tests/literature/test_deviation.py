@@ -3,7 +3,6 @@ much."""
 
 from __future__ import annotations
 
-from pathlib import Path
 
 import numpy as np
 import pytest

@@ -56,7 +56,7 @@ def read_contents(path: Path) -> Contents:
     try:
         return decode(image)
     except DamagedFile as damage:
-        raise InputError(str(locate(path)), [str(damage)]) from damage
+        raise InputError(str(locate(path)), [str(damage)], consequence="") from damage
 
 
 def version_complaint(contents: Contents) -> str:

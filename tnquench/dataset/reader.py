@@ -56,11 +56,13 @@ def open_run(path: Path | str, *, verify: bool = True) -> Run:
     file = locate(Path(path))
     complaint = version_complaint(contents) or (digest_complaint(contents) if verify else "")
     if complaint:
-        raise InputError(str(file), [complaint])
+        raise InputError(str(file), [complaint], consequence="")
     try:
         return _build(file, contents)
     except (ValueError, KeyError) as error:  # dimensions that contradict each other
-        raise InputError(str(file), [f"damaged dataset: {str(error).splitlines()[0]}"]) from error
+        raise InputError(
+            str(file), [f"damaged dataset: {str(error).splitlines()[0]}"], consequence=""
+        ) from error
 
 
 def _build(file: Path, contents: Contents) -> Run:

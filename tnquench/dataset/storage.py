@@ -96,10 +96,10 @@ def read_bytes(path: Path) -> bytes:
         return locate(path).read_bytes()
     except FileNotFoundError as error:
         problem = "no such dataset; give a folder that holds run.h5, or the file"
-        raise InputError(str(locate(path)), [problem]) from error
+        raise InputError(str(locate(path)), [problem], consequence="") from error
     except (OSError, ValueError) as error:  # ValueError: a null byte in the name
         reason = getattr(error, "strerror", None) or str(error)
-        raise InputError(str(path), [f"cannot be read: {reason}"]) from error
+        raise InputError(str(path), [f"cannot be read: {reason}"], consequence="") from error
 
 
 def _sealed(body: bytes) -> bytes:

@@ -200,7 +200,7 @@ def _refusing(path: Path) -> Iterator[None]:
         yield
     except (OSError, ValueError) as error:  # ValueError: a null byte in the name
         reason = getattr(error, "strerror", None) or str(error)
-        raise InputError(str(path), [f"cannot be written: {reason}"]) from error
+        raise InputError(str(path), [f"cannot be written: {reason}"], consequence="") from error
 
 
 def _beside(path: Path) -> Path:

@@ -14,6 +14,7 @@ import numpy as np
 
 from tnquench.conventions import Reals
 from tnquench.errors import ConvergenceError
+from tnquench.hydro.crossings import velocities
 from tnquench.hydro.counting import SPLINE_DEGREE, StateCount, cumulative_integral, state_count
 from tnquench.hydro.mesh import RapidityMesh, Reference, averages, redress, reference_state
 from tnquench.hydro.thermal_states import ThermalStates
@@ -43,7 +44,7 @@ class Medium:
     def dressed(self, origins: Reals, slopes: Reals) -> tuple[Reals, float]:
         """Return one iterate of the dressed slopes, and its change relative to their largest value.
 
-        origins : (position, string, node) where each quasiparticle was at t = 0
+        origins : (position, string, point) where each quasiparticle was at t = 0
         slopes  : (position, 2, string, node) e', p' over the window
         """
         improved = np.empty(slopes.shape)
@@ -58,7 +59,7 @@ class Medium:
         return np.concatenate(parts)
 
     def _filling(self, origins: Reals) -> Reals:
-        return self.states.filling(*self.profile.parameters(origins @ self.mesh.spread))
+        return self.states.filling(*self.profile.parameters(origins))
 
 
 def _batches(count: int) -> list[slice]:
@@ -67,7 +68,7 @@ def _batches(count: int) -> list[slice]:
 
 @dataclass(frozen=True, eq=False)
 class Moment:
-    """One time: origins (position, string, node) and dressed slopes (position, 2, string, node)."""
+    """One time: origins (position, string, point) and dressed slopes (position, 2, string, node)."""
 
     time: float
     origins: Reals
@@ -81,7 +82,7 @@ class Flow:
     positions : (position,) equidistant from a left end that stays flat until the last time, up to the right
                 wall; `start` is their state at t = 0
     integral  : (position, position) cumulative integral
-    count     : states from the left at t = 0, on positions wherever a characteristic can come from
+    count     : states from the left at t = 0, wherever a characteristic can come from, on the rapidity mesh
     """
 
     medium: Medium
@@ -109,14 +110,14 @@ def prepare_flow(
     reference = reference_state(mesh, states.middle())
     medium = Medium(mesh, states, profile, reference)
     start = local_equilibrium(medium, positions)
-    count = state_count(positions, start.slopes[:, 1])
+    count = state_count(positions, start.slopes[:, 1] @ mesh.spread)
     inside = Moment(0.0, start.origins[:kept], start.slopes[:kept])
     return Flow(medium, positions[:kept], cumulative_integral(positions[:kept]), inside, count)
 
 
 def local_equilibrium(medium: Medium, positions: Reals) -> Moment:
     """Return the state at t = 0 of any positions (position,)."""
-    origins = np.tile(positions[:, None, None], (1, medium.mesh.model.strings, medium.mesh.model.nodes))
+    origins = np.tile(positions[:, None, None], (1, *medium.mesh.shape))
     slopes, change = np.repeat(medium.reference.slopes[None], positions.size, axis=0), np.inf
     for _ in range(ITERATIONS):
         slopes, change = medium.dressed(origins, slopes)
@@ -134,18 +135,30 @@ def flow_to(flow: Flow, time: float, *, earlier: Moment) -> Moment:
     """
     slopes, positions = earlier.slopes, flow.positions[:, None, None]
     if earlier.time == 0.0:
-        origins = positions - time * slopes[:, 0] / slopes[:, 1]
+        origins = positions - time * velocities(flow.medium.mesh, slopes)
     else:
         origins = positions + (earlier.origins - positions) * time / earlier.time
     entered = time * flow.start.slopes[0, 0]
     shift = np.inf
     for _ in range(ITERATIONS):
         slopes, change = flow.medium.dressed(origins, slopes)
-        counted, density = flow.count.at(origins)
-        correction = (np.tensordot(flow.integral, slopes[:, 1], axes=1) - entered - counted) / density
-        shift = float(np.max(np.abs(correction)))
         if shift < ORIGIN_TARGET and change < CHANGE_TARGET:
             return Moment(time, origins, slopes)
-        origins = origins + correction
+        counted = np.tensordot(flow.integral, slopes[:, 1], axes=1) - entered
+        shift = _move(flow, origins, counted)
     what = f"characteristics at D = {flow.medium.mesh.model.anisotropy:.6g}, t = {time:g}"
     raise ConvergenceError(what, residual=shift)
+
+
+def _move(flow: Flow, origins: Reals, counted: Reals) -> float:
+    """Move origins, in place, towards where P at t = 0 equals `counted` (position, string, node), by Newton's step.
+
+    Returns the largest move.
+    """
+    largest = 0.0
+    for rows in _batches(counted.shape[0]):
+        before, density = flow.count.at(origins[rows])
+        step = (counted[rows] @ flow.medium.mesh.spread - before) / density
+        origins[rows] += step
+        largest = max(largest, float(np.max(np.abs(step))))
+    return largest

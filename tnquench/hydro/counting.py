@@ -28,7 +28,7 @@ def resample(positions: Reals, values: Reals, places: Reals) -> Reals:
 class StateCount:
     """P(x), the integral of a density from the left end, with its first two derivatives.
 
-    positions : (position,) equidistant; values, densities, gradients : (position, string, node)
+    positions : (position,) equidistant; values, densities, gradients : (position, string, point)
     """
 
     positions: Reals
@@ -37,25 +37,34 @@ class StateCount:
     gradients: Reals
 
     def at(self, x: Reals) -> tuple[Reals, Reals]:
-        """Return P and its density at x (any, string, node): quintic inside, linear beyond the ends."""
-        first, spacing = self.positions[0], self.positions[1] - self.positions[0]
-        inside = np.clip(x, first, self.positions[-1])
-        cell = np.minimum(((inside - first) / spacing).astype(np.int64), self.positions.size - 2)
-        s = (inside - first) / spacing - cell
-        near, far = ((cell + k, *np.indices(x.shape)[1:]) for k in (0, 1))
-        jump = self.values[far] - self.values[near]
-        slope, next_slope = spacing * self.densities[near], spacing * self.densities[far]
-        curve, next_curve = spacing**2 * self.gradients[near], spacing**2 * self.gradients[far]
-        cubic = 10.0 * jump - 6.0 * slope - 4.0 * next_slope - 1.5 * curve + 0.5 * next_curve
-        quartic = -15.0 * jump + 8.0 * slope + 7.0 * next_slope + 1.5 * curve - next_curve
-        quintic = 6.0 * jump - 3.0 * (slope + next_slope) - 0.5 * (curve - next_curve)
-        rise = s * (slope + s * (0.5 * curve + s * (cubic + s * (quartic + s * quintic))))
-        steepness = slope + s * (curve + s * (3.0 * cubic + s * (4.0 * quartic + s * 5.0 * quintic)))
-        return self.values[near] + rise + (x - inside) * steepness / spacing, steepness / spacing
+        """Return P and its density at x (any, string, point): quintic inside, linear beyond the ends."""
+        size, spacing = self.values[0].size, self.positions[1] - self.positions[0]
+        scaled = (x - self.positions[0]) / spacing
+        inside = np.clip(scaled, 0.0, self.positions.size - 1.0)
+        cell = np.minimum(inside.astype(np.int64), self.positions.size - 2)
+        s = inside - cell
+        near = cell * size + np.arange(size).reshape(x.shape[1:])
+        far = near + size
+        start = self.values.take(near)
+        jump = self.values.take(far) - start
+        slope, next_slope = spacing * self.densities.take(near), spacing * self.densities.take(far)
+        curve, next_curve = (
+            0.5 * spacing**2 * self.gradients.take(near),
+            spacing**2 * self.gradients.take(far),
+        )
+        # what a quintic adds to start + slope s + curve s^2, from its value, slope and curvature at s = 1
+        short, steeper = jump - slope - curve, next_slope - slope - 2.0 * curve
+        bent = 0.5 * next_curve - curve
+        cubic = 10.0 * short - 4.0 * steeper + bent
+        quartic = -15.0 * short + 7.0 * steeper - 2.0 * bent
+        quintic = 6.0 * short - 3.0 * steeper + bent
+        rise = s * (slope + s * (curve + s * (cubic + s * (quartic + s * quintic))))
+        density = slope + s * (2.0 * curve + s * (3.0 * cubic + s * (4.0 * quartic + s * (5.0 * quintic))))
+        return start + rise + (scaled - inside) * density, density / spacing
 
 
 def state_count(positions: Reals, densities: Reals) -> StateCount:
-    """Return the count of `densities` (position, string, node) at equidistant positions."""
+    """Return the count of `densities` (position, string, point) at equidistant positions."""
     spline = make_interp_spline(positions, densities, k=SPLINE_DEGREE)
     values, gradients = spline.antiderivative()(positions), spline.derivative()(positions)
     return StateCount(positions, values, densities, gradients)

@@ -36,14 +36,17 @@ class SmoothLevel:
 
 
 LEVELS: tuple[SmoothLevel, ...] = (
-    SmoothLevel(nodes=32, mesh_spacing=0.11, phase=0.5, spacing=0.25),
-    SmoothLevel(nodes=48, mesh_spacing=0.085, phase=0.35, spacing=0.18),
-    SmoothLevel(nodes=64, mesh_spacing=0.07, phase=0.25, spacing=0.125),
-    SmoothLevel(nodes=96, mesh_spacing=0.055, phase=0.18, spacing=0.09),
+    SmoothLevel(nodes=28, mesh_spacing=0.11, phase=0.8, spacing=0.22),
+    SmoothLevel(nodes=32, mesh_spacing=0.095, phase=0.65, spacing=0.16),
+    SmoothLevel(nodes=40, mesh_spacing=0.08, phase=0.5, spacing=0.12),
+    SmoothLevel(nodes=56, mesh_spacing=0.065, phase=0.35, spacing=0.08),
 )
 
 #: Distance at which the callers' profiles are sampled for their range and scale, in lattice spacings.
 SAMPLE_SPACING = 0.05
+
+#: Half ranges of beta J and of beta_field over which fillings change by most of what they can.
+LARGEST_CHANGE = (4.0, 2.0)
 
 #: Largest distance of positions, in lattice spacings.
 WIDEST_SPACING = 2.0
@@ -88,11 +91,15 @@ class SmoothStart:
 
     @cached_property
     def scale(self) -> float:
-        """Smallest length, half range over steepest slope, of the two parameters."""
+        """Smallest length, half range over steepest slope, of the two parameters; a range counts no more
+        than states depend on it: LARGEST_CHANGE."""
         spacing = 2.0 * self.wall / (self.samples.shape[1] - 1)
         steepest = np.abs(np.diff(self.samples, axis=1)).max(axis=1) / spacing
         varying = steepest > 0.0
-        return float(np.min(0.5 * np.ptp(self.samples, axis=1)[varying] / steepest[varying]))
+        change = np.minimum(
+            0.5 * np.ptp(self.samples, axis=1), np.divide(LARGEST_CHANGE, (self.coupling, 1.0))
+        )
+        return float(np.min(change[varying] / steepest[varying]))
 
     @cached_property
     def velocity_survey(self) -> tuple[float, float]:

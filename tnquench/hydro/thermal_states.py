@@ -15,7 +15,7 @@ from tnquench.hydro.mesh import RapidityMesh
 State = tuple[float, float]
 
 #: Chebyshev coefficients of a filling below this, absolutely, are dropped.
-COEFFICIENT_TARGET = 1e-10
+COEFFICIENT_TARGET = 1e-9
 
 #: A coordinate that varies less than this, relative to the parameters, does not vary.
 ROUNDING = 1e-13

@@ -43,7 +43,7 @@ def write_report(folder: Path | str) -> Path:
         unfinished.replace(target)
     except OSError as error:
         problem = f"the report cannot be written: {error.strerror or error}"
-        raise InputError(str(run.path.parent), [problem]) from error
+        raise InputError(str(run.path.parent), [problem], consequence="") from error
     return target
 
 

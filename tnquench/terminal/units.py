@@ -4,8 +4,12 @@ from __future__ import annotations
 
 _SECOND, _MINUTE, _HOUR, _DAY = 1.0, 60.0, 3600.0, 86400.0
 
-#: Largest pair of units by size: at and above `size` seconds, written in `unit` and the smaller `rest`.
-_PAIRS = ((_DAY, "d", _HOUR, "h"), (_HOUR, "h", _MINUTE, "min"), (_MINUTE, "min", _SECOND, "s"))
+#: Pairs of units: a duration below `limit` is written in `whole` and `rest`, in seconds with their names.
+_PAIRS = (
+    (_HOUR, _MINUTE, "min", _SECOND, "s"),
+    (_DAY, _HOUR, "h", _MINUTE, "min"),
+    (float("inf"), _DAY, "d", _HOUR, "h"),
+)
 
 _BYTE_UNITS = ("B", "kB", "MB", "GB", "TB")
 _THOUSAND = 1000.0
@@ -17,12 +21,11 @@ def duration(seconds: float) -> str:
         return f"{1000.0 * seconds:.2g} ms"
     if seconds < _MINUTE - 0.5:
         return f"{seconds:.0f} s" if seconds >= 9.95 else f"{seconds:.2g} s"
-    for size, unit, rest, rest_unit in _PAIRS:
-        count = round(seconds / rest)  # rounded first, so that 59.7 min becomes 1 h and not 60 min
-        whole, remainder = divmod(count, round(size / rest))
-        if whole:
-            return f"{whole} {unit} {remainder} {rest_unit}" if remainder else f"{whole} {unit}"
-    return f"{seconds:.0f} s"
+    # rounded before it is compared, so that nothing lasts 60 min
+    pair = next(pair for pair in _PAIRS if round(seconds / pair[3]) * pair[3] < pair[0])
+    _, whole, whole_name, rest, rest_name = pair
+    wholes, rests = divmod(round(seconds / rest), round(whole / rest))
+    return f"{wholes} {whole_name} {rests} {rest_name}" if rests else f"{wholes} {whole_name}"
 
 
 def size(count: float) -> str:
