@@ -1,5 +1,4 @@
 """The operators of a chain against dense matrices; its grading against the symmetries that the terms leave."""
-leave."""
 
 from __future__ import annotations
 

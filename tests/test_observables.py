@@ -1,5 +1,4 @@
 """All observables of whole quenches against exact short chains, free-fermion chains and another evolution."""
-evolution."""
 
 from __future__ import annotations
 

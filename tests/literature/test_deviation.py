@@ -3,7 +3,6 @@ much."""
 
 from __future__ import annotations
 
-
 import numpy as np
 import pytest
 
