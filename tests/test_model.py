@@ -1,4 +1,4 @@
-"""The operators of a chain against dense matrices; its grading against the symmetries that the terms leave."""
+"""The operators of a chain against dense matrices; its grading against the symmetries left by its terms."""
 
 from __future__ import annotations
 

@@ -18,14 +18,14 @@ import psutil
 from scipy.optimize import nnls
 
 from tnquench.budget import sources
-from tnquench.budget.companions import coarser_steps
+from tnquench.budget.companions import coarser_steps, loosened
 from tnquench.conventions import Reals
 from tnquench.observables.quench import Progress, QuantumRecord, Quench, simulate
 
 #: Weights of the pilot runs, the looser first; they never go below ten times the weight of the run they stand
 #: for.
 FORECAST_WEIGHTS = (1e-6, 1e-7)
-ACCURACY_WEIGHTS = (1e-4, 1e-5, 1e-6)
+ACCURACY_WEIGHTS = (1e-6, 1e-7)
 
 #: Shares of the requested accuracy given to truncation and to the time step.
 TRUNCATION_SHARE, STEP_SHARE = 0.5, 0.25
@@ -200,44 +200,57 @@ def choose_settings(
 
     build : (weight, time step) -> quench; time_step : the pilots' step; fixed_step : keep it
     Returns (weight, time step): truncation is to stay under half the accuracy, the step's error under a
-    quarter.
+    quarter. The truncation error that the budget would claim is measured at two weights and continued as a
+    power law.
     """
-    looser, loose, main = (
-        simulate(replace(build(weight, time_step), bond_floor=PILOT_BOND_FLOOR))
-        for weight in ACCURACY_WEIGHTS
-    )
-    weight = _weight_for(looser, loose, main, TRUNCATION_SHARE * accuracy)
-    if fixed_step:
-        return weight, time_step
-    quench = replace(build(ACCURACY_WEIGHTS[-1], time_step), bond_floor=PILOT_BOND_FLOOR)
+    pilots = [_weight_pilot(build(weight, time_step)) for weight in ACCURACY_WEIGHTS]
+    claims = [max(pilot.claimed, NEGLIGIBLE_ERROR) for pilot in pilots]
+    steepness = np.log(claims[0] / claims[1]) / np.log(ACCURACY_WEIGHTS[0] / ACCURACY_WEIGHTS[1])
+    power = float(np.clip(steepness, sources.LEAST_POWER, 1.0))
+    weight = ACCURACY_WEIGHTS[1] * (TRUNCATION_SHARE * accuracy / claims[1]) ** (1.0 / power)
+    step = time_step if fixed_step else _step_for(pilots[1], STEP_SHARE * accuracy)
+    return float(np.clip(weight, TIGHTEST_WEIGHT, LOOSEST_WEIGHT)), step
+
+
+@dataclass(frozen=True)
+class _WeightPilot:
+    """A loose companion of a pilot run and the largest truncation error that the budget claims for the
+    pilot."""
+
+    loose_quench: Quench
+    loose: QuantumRecord
+    claimed: float
+
+
+def _weight_pilot(quench: Quench) -> _WeightPilot:
+    """Run a pilot with the two companions that its truncation estimate needs."""
+    loose_quench = loosened(quench, times=1)
+    records = [simulate(run) for run in (quench, loose_quench, loosened(quench, times=2))]
+    claimed = 0.0
+    for name in records[0].fields:
+        main, loose, looser = (
+            sources.TruncatedRun(record.fields[name], record.discarded_weight) for record in records
+        )
+        claimed = max(claimed, float(sources.truncation(main=main, loose=loose, looser=looser).max()))
+    return _WeightPilot(loose_quench, records[1], claimed)
+
+
+def _step_for(pilot: _WeightPilot, allowed: float) -> float:
+    """Return the time step whose Trotter error is as large as allowed, from a pilot and the same with longer
+    steps."""
+    quench = pilot.loose_quench
     steps = coarser_steps(quench.steps)
     coarse = simulate(replace(quench, steps=steps))
     error = max(
         float(
             sources.time_step(
-                fine=main.fields[name],
+                fine=pilot.loose.fields[name],
                 coarse=coarse.fields[name],
                 step_ratio=quench.steps / steps,
                 order=quench.trotter_order,
             ).max()
         )
-        for name in main.fields
+        for name in coarse.fields
     )
-    wanted = quench.time_step * (STEP_SHARE * accuracy / max(error, 1e-300)) ** (1.0 / quench.trotter_order)
-    return weight, float(np.clip(wanted, SHORTEST_STEP * quench.every, LONGEST_STEP * quench.every))
-
-
-def _weight_for(looser: QuantumRecord, loose: QuantumRecord, main: QuantumRecord, allowed: float) -> float:
-    """Extrapolate the truncation error of three pilot runs to the weight at which it is as small as
-    allowed."""
-    weight = LOOSEST_WEIGHT
-    for name in main.fields:
-        runs = {
-            key: sources.TruncatedRun(record.fields[name], record.discarded_weight)
-            for key, record in (("main", main), ("loose", loose), ("looser", looser))
-        }
-        error = float(sources.truncation(**runs).max())
-        if error > NEGLIGIBLE_ERROR:
-            power = float(sources.weight_power(**runs)[-1, 0])
-            weight = min(weight, ACCURACY_WEIGHTS[2] * (allowed / error) ** (1.0 / power))
-    return float(np.clip(weight, TIGHTEST_WEIGHT, LOOSEST_WEIGHT))
+    wanted = quench.time_step * (allowed / max(error, NEGLIGIBLE_ERROR)) ** (1.0 / quench.trotter_order)
+    return float(np.clip(wanted, SHORTEST_STEP * quench.every, LONGEST_STEP * quench.every))

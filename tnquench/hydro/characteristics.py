@@ -14,8 +14,8 @@ import numpy as np
 
 from tnquench.conventions import Reals
 from tnquench.errors import ConvergenceError
-from tnquench.hydro.crossings import velocities
 from tnquench.hydro.counting import SPLINE_DEGREE, StateCount, cumulative_integral, state_count
+from tnquench.hydro.crossings import velocities
 from tnquench.hydro.mesh import RapidityMesh, Reference, averages, redress, reference_state
 from tnquench.hydro.thermal_states import ThermalStates
 from tnquench.hydro.unfolding import UnfoldedProfile

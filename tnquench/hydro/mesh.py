@@ -32,9 +32,10 @@ OBSERVABLES: tuple[str, ...] = ("energy_density", "charge_density", "energy_curr
 
 @dataclass(frozen=True)
 class Layout:
-    """Points of a mesh: integer values of tau(lambda) = (points - 1)/2 + lambda/spacing + tanh(lambda)/core_spacing.
+    """Points of a mesh: integer tau = (points - 1)/2 + lambda/spacing + tanh(lambda)/core_spacing.
 
-    The trapezoidal rule in tau integrates over lambda. Points are dense near zero, where velocities vary most.
+    The trapezoidal rule in tau integrates over lambda. Points are dense near zero, where velocities vary
+    most.
     """
 
     spacing: float

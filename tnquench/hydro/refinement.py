@@ -12,7 +12,7 @@ from tnquench.conventions import Reals
 #: Error that refinement cannot see: the cut rapidity mesh, iterations, rounding.
 ERROR_FLOOR = 1e-10
 
-#: Two levels may agree by chance in one observable: each is charged this part of the largest change at its place.
+#: Two levels may agree by chance in one observable: each bears this part of the largest change at its place.
 SHARED_CHANGE = 0.3
 
 #: An item whose error falls by less than this factor converges too slowly for another level to be worth it.
@@ -31,8 +31,8 @@ def refine(solve: Callable[[int, Reals], Reals], items: Reals, *, levels: int, t
     """Solve every item (item,) at levels 0 and 1, and at further ones while its error exceeds `target`.
 
     solve : maps a level and some items to values (item, ..., observable)
-    The errors are the changes in the last refinement, each at least SHARED_CHANGE of the largest change of all
-    observables there, plus ERROR_FLOOR: they are the errors of the coarser of two levels.
+    The errors are the changes in the last refinement, each at least SHARED_CHANGE of the largest change of
+    all observables there, plus ERROR_FLOOR: they are the errors of the coarser of two levels.
     """
     values = solve(0, items)
     errors = np.full(values.shape, np.inf)

@@ -118,7 +118,7 @@ class SmoothStart:
 
 def initial_light_cone(start: SmoothStart) -> tuple[float, float]:
     """Return the extreme effective velocities (negative, positive) of the initial profile."""
-    flow = _flow(start, LEVELS[1], until=0.0)
+    flow = _flow(start, LEVELS[-1], until=0.0)
     return extreme_velocities(flow.medium.mesh, flow.start.slopes)
 
 
