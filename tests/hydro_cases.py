@@ -1,7 +1,7 @@
 """A second solution of the dressing equations, for fillings that jump: panels of Gauss-Legendre nodes.
 
-Written from the formulas of M. Takahashi and M. Suzuki, Prog. Theor. Phys. 48, 2187 (1972), at D = cos g, g = pi/nu:
-no window, no interpolation, no iteration; dressed functions anywhere by the integral equation itself (Nystrom).
+Written from the formulas of M. Takahashi and M. Suzuki, Prog. Theor. Phys. 48, 2187 (1972), at D = cos g,
+g = pi/nu: no window, no interpolation, no iteration; between nodes the integral equation itself is used.
 """
 
 from __future__ import annotations
@@ -19,13 +19,14 @@ def lorentzian(x: Reals, *, n: int, v: int, nu: int) -> Reals:
     if n % nu == 0:
         return np.zeros_like(x)
     angle = n * np.pi / nu
-    return v * np.sin(angle) / (np.cosh(2.0 * x) - v * np.cos(angle)) / np.pi
+    return np.asarray(v * np.sin(angle) / (np.cosh(2.0 * x) - v * np.cos(angle)) / np.pi)
 
 
 def lorentzian_slope(x: Reals, *, n: int, v: int, nu: int) -> Reals:
     """Derivative of a_n^v."""
     angle = n * np.pi / nu
-    return -2.0 * v * np.sin(angle) * np.sinh(2.0 * x) / (np.cosh(2.0 * x) - v * np.cos(angle)) ** 2 / np.pi
+    denominator = np.cosh(2.0 * x) - v * np.cos(angle)
+    return np.asarray(-2.0 * v * np.sin(angle) * np.sinh(2.0 * x) / denominator**2 / np.pi)
 
 
 def panels(cuts: Reals) -> tuple[Reals, Reals]:
@@ -78,7 +79,7 @@ class PanelState:
         )
         return np.asarray(energy / momentum)
 
-    def averages(self, dressed: Sequence[Reals]) -> list[float]:
+    def averages(self, dressed: Sequence[Reals]) -> Reals:
         """Energy density, charge density, energy current, charge current."""
         totals = np.array([0.25 * self.sign * np.cos(np.pi / self.nu), 0.5, 0.0, 0.0])
         for row, (x, weights) in enumerate(self.grids):
@@ -86,4 +87,4 @@ class PanelState:
             energy = -self.sign * np.pi * np.sin(np.pi / self.nu) * lorentzian(x, n=n, v=v, nu=self.nu)
             flow, density = v * self.fillings[row] * weights * dressed[row] / (2.0 * np.pi)
             totals += [energy @ density, -n * density.sum(), energy @ flow, -n * flow.sum()]
-        return totals.tolist()
+        return totals

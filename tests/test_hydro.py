@@ -16,26 +16,26 @@ from tnquench.errors import InputError
 from tnquench.hydro.crossings import find_crossings
 from tnquench.hydro.joined import join_halves, states_on_rays
 from tnquench.hydro.mesh import OBSERVABLES, RapidityMesh, dressed_slopes, rapidity_mesh, reference_state
-from tnquench.hydro.prediction import Prediction, State, predict_step
-from tnquench.hydro.thermal_states import thermal_on_mesh
+from tnquench.hydro.prediction import Prediction, predict_step
+from tnquench.hydro.thermal_states import State, thermal_on_mesh
 
 SITES = 24
 TIMES = np.array([0.0, 2.0, 5.0, 8.0])
 
 
 def halves(
-    *,
-    anisotropy: float,
-    left: State,
-    right: State,
-    coupling: float = 1.0,
-    times: Reals = TIMES,
-    sites: int = SITES,
+    *, anisotropy: float, left: State, right: State, coupling: float = 1.0, times: Reals = TIMES
 ) -> Prediction:
-    middle = (0.5 * (left[0] + right[0]), 0.5 * (left[1] + right[1]))
-    places = {"sites": site_positions(SITES), "bonds": bond_positions(SITES)}
-    chain = {"anisotropy": anisotropy, "coupling": coupling}
-    return predict_step(left=left, right=right, middle=middle, times=times, **chain, **places)
+    return predict_step(
+        anisotropy=anisotropy,
+        coupling=coupling,
+        left=left,
+        right=right,
+        middle=(0.5 * (left[0] + right[0]), 0.5 * (left[1] + right[1])),
+        times=times,
+        sites=site_positions(SITES),
+        bonds=bond_positions(SITES),
+    )
 
 
 def on_rays(
@@ -60,8 +60,8 @@ FREE_CASES = [
 def test_free_fermions_agree_with_closed_integrals(left: State, right: State, coupling: float) -> None:
     """At D = 0 every mode keeps the occupation of the half it comes from; the cone's edges are at J.
 
-    Source: T. Antal, Z. Racz, A. Rakos, G. M. Schutz, Phys. Rev. E 59, 4912 (1999) for fields; Y. Ogata, Phys.
-    Rev. E 66, 016135 (2002) for temperatures (from memory). Tolerance: the claimed error and 1e-7.
+    Source: T. Antal, Z. Racz, A. Rakos, G. M. Schutz, Phys. Rev. E 59, 4912 (1999) for fields; Y. Ogata,
+    Phys. Rev. E 66, 016135 (2002) for temperatures (from memory). Tolerance: the claimed error and 1e-7.
     """
     times = TIMES / coupling
     prediction = halves(anisotropy=0.0, left=left, right=right, coupling=coupling, times=times)
@@ -85,8 +85,8 @@ def test_domain_wall_is_an_arcsine(nu: int) -> None:
     memory; nu = 2 is Antal et al. 1999), with its current from the continuity equation.
     """
     rays = np.linspace(-0.99, 0.99, 23) * np.sin(np.pi / nu)
-    states = {"left": (0.0, 60.0), "right": (0.0, -60.0)}
-    result = on_rays(rays, nodes=64, anisotropy=root_of_unity(nu), **states)
+    up, down = (0.0, 60.0), (0.0, -60.0)
+    result = on_rays(rays, nodes=64, anisotropy=root_of_unity(nu), left=up, right=down)
     density = -nu / (2.0 * np.pi) * np.arcsin(rays)
     current = nu / (2.0 * np.pi) * (np.sqrt(1.0 - rays**2) - np.cos(np.pi / nu))
     np.testing.assert_allclose(result["charge_density"], density, rtol=0.0, atol=1e-9)
@@ -103,10 +103,10 @@ def test_low_temperature_current_is_conformal() -> None:
     deviations = []
     for hot in (0.1, 0.05, 0.025):
         cold = 0.5 * hot
-        states = {"left": (1.0 / hot, 0.0), "right": (1.0 / cold, 0.0)}
-        current = on_rays(np.zeros(1), anisotropy=0.5, **states)["energy_current"][0]
+        states = on_rays(np.zeros(1), anisotropy=0.5, left=(1.0 / hot, 0.0), right=(1.0 / cold, 0.0))
+        current = states["energy_current"][0]
         deviations.append(abs(current / (np.pi / 12.0 * (hot**2 - cold**2)) - 1.0))
-    assert deviations[0] < 0.05
+    assert deviations[0] < 0.008
     assert deviations[1] < 0.5 * deviations[0]
     assert deviations[2] < 0.5 * deviations[1]
 
@@ -119,11 +119,11 @@ def energy_current_variance(anisotropy: float) -> float:
 
 @pytest.mark.parametrize("nu", [2, 3, 4, 7])
 def test_energy_current_obeys_the_high_temperature_sum_rule(nu: int) -> None:
-    """The total energy current J_E is conserved, so between betas -b and b, b -> 0, its profile integrates to
-    the static variance of J_E: integral of j_E over x/t = 2 b <J_E^2>/L + O(b^3).
+    """The total energy current J_E is conserved, so between betas -b and b, b -> 0, its profile integrates
+    to the static variance of J_E: integral of j_E over x/t = 2 b <J_E^2>/L + O(b^3).
 
-    Source: conservation of J_E, X. Zotos, F. Naef, P. Prelovsek, Phys. Rev. B 55, 11029 (1997); the variance is
-    computed here from matrices. Tolerance: b^2 and the quadrature over rays.
+    Source: conservation of J_E, X. Zotos, F. Naef, P. Prelovsek, Phys. Rev. B 55, 11029 (1997); the variance
+    is computed here from matrices. Tolerance: b^2 and the quadrature over rays.
     """
     small = 0.01
     rays = np.linspace(-1.6, 1.6, 801)
@@ -138,8 +138,8 @@ def test_energy_current_obeys_the_high_temperature_sum_rule(nu: int) -> None:
 def test_spin_current_obeys_the_drude_weight(nu: int) -> None:
     """At infinite temperature and fields +-b the spin current integrates to 2 b lim <J(t) J>/L.
 
-    Source: T. Prosen and E. Ilievski, Phys. Rev. Lett. 111, 057203 (2013); E. Ilievski and J. De Nardis, Phys.
-    Rev. Lett. 119, 020602 (2017): lim <J(t) J>/L = [1 - (nu/2 pi) sin(2 pi/nu)]/8 at D = cos(pi/nu).
+    Source: T. Prosen and E. Ilievski, Phys. Rev. Lett. 111, 057203 (2013); E. Ilievski and J. De Nardis,
+    Phys. Rev. Lett. 119, 020602 (2017): lim <J(t) J>/L = [1 - (nu/2 pi) sin(2 pi/nu)]/8 at D = cos(pi/nu).
     """
     small = 0.01
     rays = np.linspace(-1.02, 1.02, 801)
@@ -183,9 +183,8 @@ def test_second_quadrature_agrees(nu: int, sign: int) -> None:
 
 def test_anisotropy_and_temperature_change_sign_together() -> None:
     """Rotating every second spin about z turns H(D) into -H(-D): energies and their currents change sign."""
-    cases = {"left": (0.7, 0.6), "right": (2.0, -0.4)}
-    plus = halves(anisotropy=0.5, **cases)
-    minus = halves(anisotropy=-0.5, **{side: (-beta, field) for side, (beta, field) in cases.items()})
+    plus = halves(anisotropy=0.5, left=(0.7, 0.6), right=(2.0, -0.4))
+    minus = halves(anisotropy=-0.5, left=(-0.7, 0.6), right=(-2.0, -0.4))
     for name in OBSERVABLES:
         sign = -1.0 if name.startswith("energy") else 1.0
         np.testing.assert_allclose(minus.fields[name], sign * plus.fields[name], rtol=0.0, atol=1e-9)
@@ -234,11 +233,9 @@ def test_times_at_rest_and_light_cone() -> None:
         assert np.all(current[row, ~outside] > 1e-6)
         np.testing.assert_allclose(energy[row, bonds < first * time], energy[0, 0], rtol=0.0, atol=1e-12)
     mesh = rapidity_mesh(anisotropy=0.5, coupling=1.0, nodes=64, spacing=0.07)
-    fastest = [
-        np.max(slopes[0] / slopes[1]) for slopes in (dressed_slopes(mesh, thermal_on_mesh(mesh, right)),)
-    ]
-    assert last >= fastest[0]
-    assert last == pytest.approx(fastest[0], abs=2e-3)
+    energy_slope, momentum_slope = dressed_slopes(mesh, thermal_on_mesh(mesh, right))
+    fastest = np.max(energy_slope / momentum_slope)  # over the nodes, so a little too small
+    assert fastest <= last < fastest + 2e-3
 
 
 def test_equal_halves_stay_as_they_are() -> None:
@@ -252,5 +249,5 @@ def test_equal_halves_stay_as_they_are() -> None:
 
 
 def test_light_at_the_ends_is_refused_with_its_time() -> None:
-    with pytest.raises(InputError, match=r"reaches the ends at t = 10\.1"):
+    with pytest.raises(InputError, match=r"reaches the ends at t = 10\.54"):
         halves(anisotropy=0.5, left=(0.5, 0.0), right=(2.0, 0.0), times=np.array([0.0, 11.0]))

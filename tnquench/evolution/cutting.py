@@ -34,7 +34,10 @@ NEGLIGIBLE = 1e-26
 #: directions.
 OUTSIDE_SHARE = 0.3
 
-#: Random directions added to the warm start: at least this many, and this fraction of its size.
+#: A charge that misses less than this share of what is allowed outside needs no more directions.
+IDLE_SHARE = 0.05
+
+#: Random directions added to a basis that misses too much: at least this many, and this fraction of its size.
 EXTRA_DIRECTIONS, EXTRA_FRACTION = 4, 0.1
 
 
@@ -180,44 +183,53 @@ def _by_gram(block: Reals) -> _Spectrum:
 def _by_subspace(
     blocks: list[Reals], guess: list[Reals], rule: CutRule, total: float
 ) -> tuple[list[_Spectrum], float]:
-    """Iterate a subspace until the weight outside it is a small share of the target.
+    """Find a subspace that holds each block up to a small share of the target; return its singular
+    directions.
 
-    Each round maps the rows of the current basis through the block, orthonormalises, and measures what the
-    new basis misses as a difference of norms. A round that misses too much is repeated from its own result
-    with more random rows.
+    The warm start is mapped once through the block; what the block has outside, measured as a difference of
+    norms, is then caught by random directions of the residual, in growing portions and only where something
+    is missing.
     """
     allowed = OUTSIDE_SHARE * rule.weight_target * total
+    frames = [_frame(block, rows) for block, rows in zip(blocks, guess, strict=True)]
+    norms = [float(np.vdot(block, block)) for block in blocks]
     extra = EXTRA_FRACTION
-    basis = guess
     while True:
-        basis = [_widen(rows, block, extra, rule.random) for rows, block in zip(basis, blocks, strict=True)]
-        frames = [_frame(block, rows) for block, rows in zip(blocks, basis, strict=True)]
-        outside = total - sum(float(np.vdot(image, image)) for _, image in frames)
-        complete = all(
-            min(block.shape) == len(image) for block, (_, image) in zip(blocks, frames, strict=True)
-        )
-        if outside <= allowed or complete:
+        held = [float(np.vdot(image, image)) for _, image in frames]
+        missing = [norm - inside for norm, inside in zip(norms, held, strict=True)]
+        open_ends = [
+            charge
+            for charge, (block, (_, image)) in enumerate(zip(blocks, frames, strict=True))
+            if len(image) < min(block.shape) and missing[charge] > IDLE_SHARE * allowed
+        ]
+        if sum(missing) <= allowed or not open_ends:
             break
+        for charge in open_ends:
+            frames[charge] = _grown(blocks[charge], *frames[charge], extra, rule.random)
         extra *= 2.0
-        basis = [image for _, image in frames]
     spectra = []
     for orthonormal, image in frames:
         weights, rotation = np.linalg.eigh(image @ image.T)
         spectra.append(_Spectrum(orthonormal, image, np.maximum(weights[::-1], 0.0), rotation[:, ::-1]))
-    return spectra, max(outside, 0.0)
-
-
-def _widen(rows: Reals, block: Reals, extra: float, random: np.random.Generator) -> Reals:
-    """Add random rows to a basis, up to the rank that the block can have."""
-    most = min(block.shape)
-    wanted = min(most, len(rows) + max(EXTRA_DIRECTIONS, int(extra * len(rows))))
-    fresh = random.standard_normal((max(0, wanted - len(rows)), block.shape[1]))
-    return np.vstack([rows[:most], fresh])
+    return spectra, max(sum(missing), 0.0)
 
 
 def _frame(block: Reals, rows: Reals) -> tuple[Reals, Reals]:
     """Return an orthonormal basis of the block's image of `rows`, and the block seen in it."""
-    image = block @ rows.T
+    image = block @ rows[: min(block.shape)].T
     lengths = np.linalg.norm(image, axis=0)
     orthonormal, _ = np.linalg.qr(image / np.where(lengths > 0.0, lengths, 1.0))
     return orthonormal, orthonormal.T @ block
+
+
+def _grown(
+    block: Reals, orthonormal: Reals, image: Reals, extra: float, random: np.random.Generator
+) -> tuple[Reals, Reals]:
+    """Add directions of the residual block - orthonormal @ image to a basis, up to the rank of the block."""
+    held = len(image)
+    fresh = min(min(block.shape) - held, max(EXTRA_DIRECTIONS, int(extra * held)))
+    probe = random.standard_normal((block.shape[1], fresh))
+    sample = block @ probe - orthonormal @ (image @ probe)
+    new, _ = np.linalg.qr(sample / np.maximum(np.linalg.norm(sample, axis=0), np.finfo(np.float64).tiny))
+    new, _ = np.linalg.qr(new - orthonormal @ (orthonormal.T @ new))  # rounding left a trace of the old basis
+    return np.hstack([orthonormal, new]), np.vstack([image, new.T @ block])

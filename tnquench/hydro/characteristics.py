@@ -151,9 +151,9 @@ def flow_to(flow: Flow, time: float, *, earlier: Moment) -> Moment:
 
 
 def _move(flow: Flow, origins: Reals, counted: Reals) -> float:
-    """Move origins, in place, towards where P at t = 0 equals `counted` (position, string, node), by Newton's step.
+    """Move origins, in place, by Newton's step to where P at t = 0 is `counted` (position, string, node).
 
-    Returns the largest move.
+    Returns the largest move, in lattice spacings.
     """
     largest = 0.0
     for rows in _batches(counted.shape[0]):

@@ -6,6 +6,7 @@ from collections.abc import Callable
 from dataclasses import dataclass
 
 import numpy as np
+from scipy.ndimage import maximum_filter1d
 
 from tnquench.conventions import OBSERVABLE_PLACES, Reals
 from tnquench.errors import InputError
@@ -19,9 +20,13 @@ from tnquench.hydro.thermal_states import State, thermal_on_mesh
 #: Smooth nodes a string and mesh spacing, in crossing angles, of successive refinements of joined halves.
 STEP_LEVELS: tuple[tuple[int, float], ...] = ((32, 0.11), (48, 0.085), (64, 0.07), (96, 0.055))
 
-#: Error at which refinement stops.
-STEP_TARGET = 1e-8
-SMOOTH_TARGET = 1e-6
+#: Change at which refinement stops, and error that it cannot see: the cut rapidity mesh and iterations, for
+#: smooth profiles also the expansion of thermal states.
+STEP_TARGET, STEP_FLOOR = 1e-8, 1e-10
+SMOOTH_TARGET, SMOOTH_FLOOR = 1e-6, 1e-8
+
+#: Least scale of a smooth profile, in lattice spacings.
+NARROWEST_SCALE = 0.3
 
 #: Rays x/t that agree to this many decimals are one ray.
 RAY_DECIMALS = 12
@@ -90,7 +95,7 @@ def predict_step(
         _refuse_reflection(edges, times, sites)
     rays = _rays(np.concatenate([sites, bonds]), times, uniform=uniform)
     distinct, index = np.unique(rays, return_inverse=True)
-    refined = refine(solve, distinct, levels=len(STEP_LEVELS), target=STEP_TARGET)
+    refined = refine(solve, distinct, levels=len(STEP_LEVELS), target=STEP_TARGET, floor=STEP_FLOOR)
     values, errors = (each[index.reshape(rays.shape)] for each in (refined.values, refined.errors))
     method = "uniform" if uniform else "joined halves (self-similar)"
     return _prediction(Refined(values, errors), sites.size, edges, method, STEP_REFERENCES)
@@ -106,26 +111,35 @@ def predict_smooth(
     sites: Reals,
     bonds: Reals,
 ) -> Prediction:
-    """Predict a smooth profile between reflecting ends half a lattice spacing beyond the first and last site.
+    """Predict a smooth profile between two reflecting ends.
 
     beta, beta_field : functions of position (any shape) in the chain
     times : (time,) in 1/J, not negative, ascending; sites, bonds : (site,), (bond,) positions, symmetric
     The light cone holds the extreme velocities of the initial profile.
-    Raises UnsupportedAnisotropy (a ValueError) and ConvergenceError.
+    Raises UnsupportedAnisotropy (a ValueError), ConvergenceError, and InputError for a profile that changes
+    within less than NARROWEST_SCALE.
     """
-    start = SmoothStart(anisotropy, coupling, beta, beta_field, wall=float(sites[-1]) + 0.5)
+    start = SmoothStart(anisotropy, coupling, beta, beta_field, wall=_wall(sites))
     if start.is_uniform:
         state = start.ranges[0][0], start.ranges[1][0]
         return predict_step(
             anisotropy=anisotropy, coupling=coupling, left=state, right=state, middle=state,
             times=times, sites=sites, bonds=bonds,
         )  # fmt: skip
+    if start.scale < NARROWEST_SCALE:
+        problem = (
+            f"[start] a profile changes within {start.scale:.2g} lattice spacings; for a smooth one the least is "
+            f"{NARROWEST_SCALE}: widen it, or make it a sharp step (width = 0)"
+        )
+        subject = "prediction"
+        raise InputError(subject, [problem])
     places = np.concatenate([sites, bonds])
     refined = refine(
         lambda level, some: smooth_averages(start, SMOOTH_LEVELS[level], some, places),
         times,
         levels=len(SMOOTH_LEVELS),
         target=SMOOTH_TARGET,
+        floor=SMOOTH_FLOOR,
     )
     return _prediction(refined, sites.size, initial_light_cone(start), "characteristics", SMOOTH_REFERENCES)
 
@@ -140,9 +154,13 @@ def _rays(places: Reals, times: Reals, *, uniform: bool) -> Reals:
         return np.asarray((places / times[:, None]).round(RAY_DECIMALS))
 
 
+def _wall(sites: Reals) -> float:
+    """Return where quasiparticles turn: free modes of an open chain vanish one site beyond its ends."""
+    return float(sites[-1]) + 1.0
+
+
 def _refuse_reflection(edges: tuple[float, float], times: Reals, sites: Reals) -> None:
-    wall = float(sites[-1]) + 0.5
-    arrival = wall / max(-edges[0], edges[1])
+    arrival = _wall(sites) / max(-edges[0], edges[1])
     if times.max(initial=0.0) > arrival:
         problem = (
             f"[evolution] until = {times.max():g}: light (velocities {edges[0]:.4g}, {edges[1]:.4g}) reaches "
@@ -156,12 +174,15 @@ def _refuse_reflection(edges: tuple[float, float], times: Reals, sites: Reals) -
 def _prediction(
     refined: Refined, sites: int, light_cone: tuple[float, float], method: str, references: tuple[str, ...]
 ) -> Prediction:
-    """Sort values (time, site or bond, observable) into the observables' places."""
+    """Sort values (time, site or bond, observable) into the observables' places.
+
+    A change under refinement may vanish by chance at a place: its error is the largest among its neighbours.
+    """
     fields, errors = {}, {}
     for index, name in enumerate(OBSERVABLES):
         part = slice(None, sites) if OBSERVABLE_PLACES[name] == "site" else slice(sites, None)
         fields[name] = refined.values[:, part, index].copy()
-        errors[name] = refined.errors[:, part, index].copy()
+        errors[name] = maximum_filter1d(refined.errors[:, part, index], size=3, axis=1)
     for each in (fields, errors):
         each["energy_current"][:, [0, -1]] = 0.0  # no bond beyond the end sites to carry energy
     exact = {name: np.zeros_like(values) for name, values in fields.items()}

@@ -9,11 +9,14 @@ import numpy as np
 
 from tnquench.conventions import Reals
 
-#: Error that refinement cannot see: the cut rapidity mesh, iterations, rounding.
-ERROR_FLOOR = 1e-10
+#: The error is taken as this many times the last change: convergence is not everywhere exponential.
+SAFETY = 2.0
 
 #: Two levels may agree by chance in one observable: each bears this part of the largest change at its place.
 SHARED_CHANGE = 0.3
+
+#: Largest part of the last change by which a slowly converging sequence is extrapolated.
+LARGEST_REMAINDER = 5.0
 
 #: An item whose error falls by less than this factor converges too slowly for another level to be worth it.
 WORTHWHILE_GAIN = 3.0
@@ -21,29 +24,37 @@ WORTHWHILE_GAIN = 3.0
 
 @dataclass(frozen=True, eq=False)
 class Refined:
-    """Values and errors, both (item, ..., observable)."""
+    """Values and their errors, both (item, ..., observable)."""
 
     values: Reals
     errors: Reals
 
 
-def refine(solve: Callable[[int, Reals], Reals], items: Reals, *, levels: int, target: float) -> Refined:
-    """Solve every item (item,) at levels 0 and 1, and at further ones while its error exceeds `target`.
+def refine(
+    solve: Callable[[int, Reals], Reals], items: Reals, *, levels: int, target: float, floor: float
+) -> Refined:
+    """Solve every item (item,) at levels 0 and 1, and at further ones while its change exceeds `target`.
 
     solve : maps a level and some items to values (item, ..., observable)
-    The errors are the changes in the last refinement, each at least SHARED_CHANGE of the largest change of
-    all observables there, plus ERROR_FLOOR: they are the errors of the coarser of two levels.
+    floor : error that refinement cannot see
+    The errors are SAFETY times the changes in the last refinement, each at least SHARED_CHANGE of the
+    largest change of all observables there, plus `floor`. Where the changes of an item fall by a factor
+    g < 2 only, the rest of a geometric sequence is 1/(g - 1) times the last one, and so are the errors.
     """
     values = solve(0, items)
     errors = np.full(values.shape, np.inf)
+    changes = np.full(items.size, np.inf)
     pending = np.arange(items.size)
     for level in range(1, levels):
-        better, before = solve(level, items[pending]), _largest(errors[pending])
+        better, before = solve(level, items[pending]), changes[pending]
         change = np.abs(better - values[pending])
         shared = SHARED_CHANGE * change.max(axis=-1, keepdims=True)
-        errors[pending] = np.maximum(change, shared) + ERROR_FLOOR
+        after = _largest(change)
+        remainder = np.clip(after / np.maximum(before - after, 1e-300), 1.0, LARGEST_REMAINDER)
+        remainder = np.where(before < np.inf, remainder, 1.0).reshape(-1, *(1,) * (change.ndim - 1))
+        errors[pending] = SAFETY * remainder * np.maximum(change, shared) + floor
+        changes[pending] = after
         values[pending] = better
-        after = _largest(errors[pending])
         pending = pending[(after > target) & (after * WORTHWHILE_GAIN < before)]
         if not pending.size:
             break

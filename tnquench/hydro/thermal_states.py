@@ -4,11 +4,13 @@ from __future__ import annotations
 
 from collections.abc import Sequence
 from dataclasses import dataclass
+from itertools import product
 
 import numpy as np
 
 from tnquench.bethe.states import fermi, thermal_filling
 from tnquench.conventions import Reals
+from tnquench.errors import ConvergenceError
 from tnquench.hydro.mesh import RapidityMesh
 
 #: (beta, beta_field) of a thermal state exp(-beta H + beta_field S^z).
@@ -19,6 +21,9 @@ COEFFICIENT_TARGET = 1e-9
 
 #: A coordinate that varies less than this, relative to the parameters, does not vary.
 ROUNDING = 1e-13
+
+#: Largest error of a filling at the corners of the parameters.
+FILLING_TARGET = 2e-8
 
 #: Numbers of Chebyshev points tried in each parameter.
 POINT_COUNTS: tuple[int, ...] = (8, 16, 32, 64, 128)
@@ -78,18 +83,42 @@ def thermal_on_mesh(mesh: RapidityMesh, state: State) -> Reals:
 
 
 def thermal_states(mesh: RapidityMesh, beta: Reals, beta_field: Reals) -> ThermalStates:
-    """Return the thermal states around samples (sample,) of a profile, to COEFFICIENT_TARGET in the filling."""
+    """Return the thermal states around samples (sample,) of a profile, to FILLING_TARGET.
+
+    Raises ConvergenceError with the error left where the parameters cover too wide a range.
+    """
     parameters = _parameters(beta, beta_field)
-    orders = (
-        _sufficient_order(mesh, parameters, axis=0) if parameters.beta_span[1] else 1,
-        _sufficient_order(mesh, parameters, axis=1) if parameters.rest_span[1] else 1,
-    )
+    orders = [
+        _sufficient_order(mesh, parameters, axis=axis) if span[1] else 1
+        for axis, span in enumerate((parameters.beta_span, parameters.rest_span))
+    ]
+    while True:
+        states = _expanded(mesh, parameters, (orders[0], orders[1]))
+        error = _corner_error(mesh, states)
+        if error < FILLING_TARGET:
+            return states
+        if max(orders) >= POINT_COUNTS[-1]:
+            what = "expansion of the profile's thermal states"
+            raise ConvergenceError(what, residual=error, best=states)
+        orders = [2 * order if order > 1 else 1 for order in orders]
+
+
+def _expanded(mesh: RapidityMesh, parameters: Parameters, orders: tuple[int, int]) -> ThermalStates:
     coefficients = _expand(mesh, parameters, orders)
-    sizes = np.abs(coefficients).max(axis=(2, 3))
-    kept = [max(1, _needed(row)) for row in sizes]
+    kept = [max(1, _needed(row)) for row in np.abs(coefficients).max(axis=(2, 3))]
     return ThermalStates(
         parameters, tuple(row[:count] for row, count in zip(coefficients, kept, strict=True))
     )
+
+
+def _corner_error(mesh: RapidityMesh, states: ThermalStates) -> float:
+    """Return the largest error of a filling at the corners of the parameters, where it is largest."""
+    error = 0.0
+    for beta_unit, rest_unit in product((-1.0, 1.0), repeat=2):
+        state = states.parameters.state(beta_unit, rest_unit)
+        expanded = states.filling(*(np.full(mesh.shape, value) for value in state))
+        error = max(error, float(np.max(np.abs(expanded - thermal_on_mesh(mesh, state)))))
+    return error
 
 
 def _parameters(beta: Reals, beta_field: Reals) -> Parameters:
@@ -120,7 +149,7 @@ def _sufficient_order(mesh: RapidityMesh, parameters: Parameters, *, axis: int) 
 
 
 def _expand(mesh: RapidityMesh, parameters: Parameters, orders: tuple[int, int]) -> Reals:
-    """Return Chebyshev coefficients (first order, second order, string, point) from as many thermal states."""
+    """Return Chebyshev coefficients (order, order, string, point) from as many thermal states."""
     first, second = (np.cos(_chebyshev_angles(count)) for count in orders)
     values = np.array([[thermal_on_mesh(mesh, parameters.state(a, b)) for b in second] for a in first])
     to_first, to_second = (_chebyshev_transform(count) for count in orders)
