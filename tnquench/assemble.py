@@ -16,6 +16,7 @@ from tnquench.budget.verdict import SHARP_REACH
 from tnquench.config.rules import default_time_step
 from tnquench.config.schema import Config
 from tnquench.conventions import Reals, bond_positions, site_positions
+from tnquench.errors import ConvergenceError, InputError
 from tnquench.evolution.real_time import steps_between
 from tnquench.hydro.prediction import Prediction, predict_smooth, predict_step
 from tnquench.model import profiles
@@ -100,8 +101,15 @@ def build_prediction(config: Config) -> tuple[Prediction | None, str]:
     if any(sharp):
         if not all(_is_flat_or_sharp(profile) for profile in (config.start.beta, config.start.beta_field)):
             return None, "a sharp step beside a smooth profile has no prediction in this version"
-        return _step_prediction(config), ""
-    return _smooth_prediction(config), ""
+        predict = _step_prediction
+    else:
+        predict = _smooth_prediction
+    try:
+        return predict(config), ""
+    except InputError as refusal:  # a start the theory cannot take; the chain can be simulated all the same
+        return None, "; ".join(refusal.problems)
+    except ConvergenceError as failure:
+        return None, str(failure)
 
 
 def _step_prediction(config: Config) -> Prediction:

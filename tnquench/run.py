@@ -62,9 +62,9 @@ def run(config_file: Path, *, into: Path | None = None, threads: int = 1, watch:
     folder = into or DEFAULT_FOLDER / config_file.stem
     require_writable(folder)
     with threadpool_limits(1):
-        quantum = quantum_side(config, threads=threads, watch=watch)
         watch.stage("prediction", None)
         prediction, absence = build_prediction(config)
+        quantum = quantum_side(config, threads=threads, watch=watch)
         watch.stage("budget, dataset and report", None)
         pieces = run_pieces(config, config_file, quantum, prediction, absence)
     spent = {
