@@ -64,6 +64,8 @@ def run(config_file: Path, *, into: Path | None = None, threads: int = 1, watch:
     with threadpool_limits(1):
         watch.stage("prediction", None)
         prediction, absence = build_prediction(config)
+        if prediction is None:
+            watch.stage(f"no prediction: {absence}", None)
         quantum = quantum_side(config, threads=threads, watch=watch)
         watch.stage("budget, dataset and report", None)
         pieces = run_pieces(config, config_file, quantum, prediction, absence)

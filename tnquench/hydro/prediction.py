@@ -25,6 +25,9 @@ STEP_LEVELS: tuple[tuple[int, float], ...] = ((32, 0.11), (48, 0.085), (64, 0.07
 STEP_TARGET, STEP_FLOOR = 1e-8, 1e-10
 SMOOTH_TARGET, SMOOTH_FLOOR = 1e-6, 1e-8
 
+#: Kinks, as at ends where a profile is not flat, converge too slowly for more levels to be worth their cost.
+SMOOTH_GAIN = 1.5
+
 #: Least scale of a smooth profile, in lattice spacings.
 NARROWEST_SCALE = 0.3
 
@@ -128,8 +131,8 @@ def predict_smooth(
         )  # fmt: skip
     if start.scale < NARROWEST_SCALE:
         problem = (
-            f"[start] a profile changes within {start.scale:.2g} lattice spacings; for a smooth one the least is "
-            f"{NARROWEST_SCALE}: widen it, or make it a sharp step (width = 0)"
+            f"[start] a profile changes within {start.scale:.2g} lattice spacings; the least for a smooth "
+            f"one is {NARROWEST_SCALE}: widen it, or make it a sharp step (width = 0)"
         )
         subject = "prediction"
         raise InputError(subject, [problem])
@@ -140,6 +143,7 @@ def predict_smooth(
         levels=len(SMOOTH_LEVELS),
         target=SMOOTH_TARGET,
         floor=SMOOTH_FLOOR,
+        least_gain=SMOOTH_GAIN,
     )
     return _prediction(refined, sites.size, initial_light_cone(start), "characteristics", SMOOTH_REFERENCES)
 

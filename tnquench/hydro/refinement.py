@@ -16,10 +16,7 @@ SAFETY = 2.0
 SHARED_CHANGE = 0.3
 
 #: Largest part of the last change by which a slowly converging sequence is extrapolated.
-LARGEST_REMAINDER = 5.0
-
-#: An item whose error falls by less than this factor converges too slowly for another level to be worth it.
-WORTHWHILE_GAIN = 3.0
+LARGEST_REMAINDER = 2.0
 
 
 @dataclass(frozen=True, eq=False)
@@ -31,12 +28,19 @@ class Refined:
 
 
 def refine(
-    solve: Callable[[int, Reals], Reals], items: Reals, *, levels: int, target: float, floor: float
+    solve: Callable[[int, Reals], Reals],
+    items: Reals,
+    *,
+    levels: int,
+    target: float,
+    floor: float,
+    least_gain: float = 0.0,
 ) -> Refined:
     """Solve every item (item,) at levels 0 and 1, and at further ones while its change exceeds `target`.
 
     solve : maps a level and some items to values (item, ..., observable)
-    floor : error that refinement cannot see
+    floor : error that refinement cannot see; least_gain : an item whose change falls by less than this factor
+            is not refined further
     The errors are SAFETY times the changes in the last refinement, each at least SHARED_CHANGE of the
     largest change of all observables there, plus `floor`. Where the changes of an item fall by a factor
     g < 2 only, the rest of a geometric sequence is 1/(g - 1) times the last one, and so are the errors.
@@ -55,7 +59,7 @@ def refine(
         errors[pending] = SAFETY * remainder * np.maximum(change, shared) + floor
         changes[pending] = after
         values[pending] = better
-        pending = pending[(after > target) & (after * WORTHWHILE_GAIN < before)]
+        pending = pending[(after > target) & (least_gain * after < before)]
         if not pending.size:
             break
     return Refined(values, errors)
