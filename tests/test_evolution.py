@@ -126,7 +126,7 @@ def test_failed_divide_and_conquer_falls_back_and_is_counted(monkeypatch: pytest
         if options.get("lapack_driver") == "gesdd":
             message = "SVD did not converge"
             raise scipy.linalg.LinAlgError(message)
-        return genuine(block, **options)  # type: ignore[call-overload]
+        return genuine(block, **options)
 
     blocks = decaying_blocks(20, 20)
     expected = cut(blocks, CutRule(1e-8, bond_floor=1, method="svd"))

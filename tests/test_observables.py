@@ -154,7 +154,7 @@ def test_another_evolution_agrees_within_both_bounds() -> None:
         sites=sites,
         anisotropy=0.5,
         beta=beta,
-        times=record.times,
+        times=record.times.tolist(),
         time_step=0.1,
         discarded_weight=weight,
         preparation_steps=40,

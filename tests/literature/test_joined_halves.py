@@ -54,7 +54,8 @@ def test_free_fermion_halves(left: tuple[float, float], right: tuple[float, floa
     Regime: an infinite chain; rays inside, on the edge (square-root singularity) and outside the light cone.
     Tolerance: 1e-8, where the prediction stops to refine its rapidity grid (on the edge itself the densities
     are square roots of the distance, and rounding leaves that much). The claimed error must cover the true
-    one at 95 % of all points, the rule of every error budget here, and no claim may be wider than 1e-8.
+    one at 95 % of all points, the rule of every error budget here, and no claim may be wider than 3e-8: it is
+    twice the change in the last refinement, and at least that of its neighbours.
     """
     coupling, times = 1.2, np.array([5.0, 12.5])
     found = join(anisotropy=0.0, coupling=coupling, left=left, right=right, times=times)
@@ -66,7 +67,7 @@ def test_free_fermion_halves(left: tuple[float, float], right: tuple[float, floa
             exact = joined_halves(positions[place] / time, left=left, right=right, coupling=coupling)[name]
             difference = np.abs(row - exact)[inner]
             assert difference.max() < 1e-8, name
-            assert claimed.max() < 1e-8, f"{name}: the claim is too wide to be useful"
+            assert claimed.max() < 3e-8, f"{name}: the claim is too wide to be useful"
             covered.append(difference <= claimed[inner])
     assert np.concatenate(covered).mean() >= 0.95
     assert found.light_cone == pytest.approx((-coupling, coupling), rel=0, abs=1e-9)
