@@ -82,7 +82,7 @@ def test_folder_that_cannot_be_written_is_refused_before_the_run(tmp_path: Path,
     answer = call(command, file, "--into", file / "results")
     assert answer.code == 2
     assert answer.out == ""
-    assert answer.lines[-1] == "  cannot be written: Not a directory"
+    assert answer.lines[-1] == f"  cannot be written: {file} is a file, not a folder; name another place"
     assert list(tmp_path.iterdir()) == [file]
 
 

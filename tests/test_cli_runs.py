@@ -39,9 +39,9 @@ def test_run_prints_its_folder_alone(finished: tuple[Path, Answer]) -> None:
 
 def test_run_tells_each_stage_in_one_line_and_then_the_verdict(finished: tuple[Path, Answer]) -> None:
     _, answer = finished
-    expected = ["main run: 8 sites, t up to 0.5, discarded weight 1e-8, step 0.1667"]
+    expected = ["prediction", "main run: 8 sites, t up to 0.5, discarded weight 1e-8, step 0.1667"]
     expected += [f"companion {name}" for name in ("weight_10", "weight_100", "step_2", "length")]
-    expected += ["prediction", "budget, dataset and report"]
+    expected += ["budget, dataset and report"]
     assert answer.lines[: len(expected)] == expected
     assert "energy density" in answer.lines[len(expected)]
 
@@ -198,6 +198,8 @@ def test_interrupted_run_ends_cleanly(tmp_path: Path, sign: signal.Signals, thre
     file = config_file(tmp_path, until=500.0, discarded_weight=1e-14)
     process = start("run", file, "--into", tmp_path / "results", "--threads", threads)
     assert process.stderr is not None
+    assert process.stderr.readline() == "prediction\n"
+    assert process.stderr.readline().startswith("no prediction: [evolution] until = 500: light")
     assert process.stderr.readline().startswith("main run")
     time.sleep(0.5)
     process.send_signal(sign)

@@ -111,6 +111,22 @@ def test_subspace_grows_from_a_guess_that_holds_nothing() -> None:
     assert kept[0] <= kept[1] + 2
 
 
+def test_subspace_stays_orthonormal_where_blocks_hold_nothing() -> None:
+    """Zero blocks and blocks of low rank leave only rounding to sample when the bond floor asks for more."""
+    random = np.random.default_rng(4)
+    low_rank = random.standard_normal((20, 2)) @ random.standard_normal((2, 20))
+    blocks = [
+        low_rank / np.linalg.norm(low_rank),
+        np.zeros((20, 20)),
+        np.eye(20)[:, :3] @ np.eye(3, 20) * 1e-9,
+    ]
+    guess = [random.standard_normal((3, 20)), np.zeros((1, 20)), np.eye(3, 20)]
+    result = cut(blocks, CutRule(1e-10, bond_floor=32), guess=guess)
+    for block, left, right in zip(blocks, result.left, result.right, strict=True):
+        np.testing.assert_allclose(left.T @ left, np.eye(left.shape[1]), atol=1e-12)
+        np.testing.assert_allclose(left @ right, block, atol=1e-12)
+
+
 def test_bond_ceiling_keeps_the_largest_values_and_reports_the_loss() -> None:
     blocks = decaying_blocks(40, 40)
     values = np.sort(np.concatenate([np.linalg.svd(block, compute_uv=False) for block in blocks]))[::-1]

@@ -31,14 +31,15 @@ def test_verdict_agrees_with_the_arrays(tmp_path: Path) -> None:
         run.coordinates["bond"].values,
         run.coordinates["time"].values,
     )
-    joint = int(np.argmin(np.abs(x)))
     deviation: Reals = budget["euler_deviation"].values
-    resolved = (budget["euler_resolved"].values == 1) & window(run, "bond")
+    inside = window(run, "bond")
+    worst = int(np.argmax(np.abs(deviation[-1]) * inside[-1]))
+    resolved = (budget["euler_resolved"].values == 1) & inside
     sentence = headline(comparisons(run)[0])
     assert "Euler GHD misses the energy density" in sentence
     said = numbers_in(sentence.partition("; the deviation")[0])
-    assert said[0] == pytest.approx(abs(deviation[-1, joint]), rel=0.02)  # two digits are shown
-    assert said[1] == pytest.approx(float(budget["numerical"].values[-1, joint]), rel=0.35)  # one digit
+    assert said[0] == pytest.approx(abs(deviation[-1, worst]), rel=0.02)  # two digits are shown
+    assert said[1] == pytest.approx(float(budget["numerical"].values[-1, worst]), rel=0.35)  # one digit
     assert said[2] == t[-1]
     first = float(t[np.flatnonzero(resolved.any(axis=1))[0]])
     assert numbers_in(sentence.partition("resolved from t = ")[2])[0] == first
@@ -47,9 +48,10 @@ def test_verdict_agrees_with_the_arrays(tmp_path: Path) -> None:
     share = resolved[-1].sum() / np.count_nonzero(np.abs(x) <= outermost)
     assert numbers_in(sentence.partition(": at ")[2])[0] == pytest.approx(100 * share, abs=0.51)
     late = t >= 0.3 * t[-1]
-    slope = np.polyfit(np.log(t[late]), np.log(np.abs(deviation[late, joint])), 1)[0]
+    norm = np.sqrt((deviation**2 * inside).sum(axis=1) / np.maximum(inside.sum(axis=1), 1))
+    slope = np.polyfit(np.log(t[late]), np.log(norm[late]), 1)[0]
     assert "falls like" in sentence
-    assert numbers_in(sentence.partition("p = ")[2])[0] == pytest.approx(-slope, abs=0.006)
+    assert numbers_in(sentence.partition("p = ")[2])[0] == pytest.approx(-slope, abs=0.06)
 
 
 def test_nothing_resolved_is_said_with_what_is_excluded(tmp_path: Path) -> None:
@@ -98,22 +100,20 @@ def test_field_step_is_about_the_magnetisation(tmp_path: Path) -> None:
     run = open_run(written(tmp_path, field_step))
     sentence = headline(comparisons(run)[0], about=subject(settings_of(run)))
     deviation = run.budget["charge_density"]["euler_deviation"].values
-    place = SITES // 2 - 1 + int(np.argmax(np.abs(deviation[-1, SITES // 2 - 1 : SITES // 2 + 1])))
+    place = int(np.argmax(np.abs(deviation[-1]) * window(run, "site")[-1]))
     assert "misses the magnetisation by" in sentence
-    assert "next to the joint (x = " in sentence
     assert numbers_in(sentence)[0] == pytest.approx(abs(deviation[-1, place]), rel=0.02)
 
 
-def test_deviation_resolved_elsewhere_only_is_said_so(tmp_path: Path) -> None:
+def test_the_verdict_speaks_of_the_largest_resolved_deviation(tmp_path: Path) -> None:
     def blind_at_the_joint(pieces: dict[str, Any]) -> None:
         budget = pieces["groups"]["budget/energy_density"]
         budget["numerical"][:, SITES // 2 - 1] += 0.1
         budget["euler_resolved"][:, SITES // 2 - 1] = 0
 
     sentence = headline(comparisons(open_run(written(tmp_path, blind_at_the_joint)))[0])
-    assert "at the joint at t = 10/J to within 3 times the numerical error" in sentence
-    assert "elsewhere the deviation is resolved from t = 0.5/J on" in sentence
-    assert "like" not in sentence
+    assert "Euler GHD misses the energy density by" in sentence
+    assert "at the joint" not in sentence
 
 
 def test_power_law_finds_a_known_exponent() -> None:

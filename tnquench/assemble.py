@@ -89,23 +89,28 @@ def build_shorter(config: Config, *, weight: float, time_step: float) -> Quench 
     return None if sites is None else build_quench(config, weight=weight, time_step=time_step, sites=sites)
 
 
-def build_prediction(config: Config) -> tuple[Prediction | None, str]:
-    """Return the Euler prediction on the run's points, or None and the reason why there is none."""
+def no_prediction(config: Config) -> str:
+    """Return why a config has no Euler prediction, as far as can be told at no cost; empty if nothing is
+    against it."""
     if "euler" not in config.hydrodynamics.levels:
-        return None, "no hydrodynamic level was asked for"
+        return "no hydrodynamic level was asked for"
     try:
         supported_nu(config.chain.anisotropy)
     except UnsupportedAnisotropy as refusal:
-        return None, str(refusal)
-    sharp = [_is_sharp(profile) for profile in (config.start.beta, config.start.beta_field)]
-    if any(sharp):
-        if not all(_is_flat_or_sharp(profile) for profile in (config.start.beta, config.start.beta_field)):
-            return None, "a sharp step beside a smooth profile has no prediction in this version"
-        predict = _step_prediction
-    else:
-        predict = _smooth_prediction
+        return str(refusal)
+    profiles_ = (config.start.beta, config.start.beta_field)
+    if any(_is_sharp(profile) for profile in profiles_) and not all(_is_flat_or_sharp(p) for p in profiles_):
+        return "a sharp step beside a smooth profile has no prediction in this version"
+    return ""
+
+
+def build_prediction(config: Config) -> tuple[Prediction | None, str]:
+    """Return the Euler prediction on the run's points, or None and the reason why there is none."""
+    if reason := no_prediction(config):
+        return None, reason
+    joined = any(_is_sharp(profile) for profile in (config.start.beta, config.start.beta_field))
     try:
-        return predict(config), ""
+        return (_step_prediction if joined else _smooth_prediction)(config), ""
     except InputError as refusal:  # a start the theory cannot take; the chain can be simulated all the same
         return None, "; ".join(refusal.problems)
     except ConvergenceError as failure:
@@ -211,16 +216,10 @@ def _reach(profile: Any) -> float:
 
 
 def budget_settings(config: Config, quench: Quench) -> RunSettings:
-    """Return what the budget must know of a main run.
-
-    Without a prediction the light cone is drawn at pi/2 J max(1, |D|): no less than the spinon velocity
-    (pi/2) J sin(g)/g <= (pi/2) J of the gapless chain (J. des Cloizeaux and J. J. Pearson, Phys. Rev. 128,
-    2131 (1962), at D = 1; J. D. Johnson, S. Krinsky and B. M. McCoy, Phys. Rev. A 8, 2526 (1973)).
-    """
+    """Return what the budget must know of a main run."""
     return RunSettings(
         step_ratio=quench.steps / coarser_steps(quench.steps),
         trotter_order=quench.trotter_order,
         resolve_at=config.budget.resolve_at,
         reach=start_reach(config),
-        fallback_velocity=config.chain.coupling * max(1.0, abs(config.chain.anisotropy)) * 0.5 * np.pi,
     )

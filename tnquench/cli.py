@@ -23,13 +23,14 @@ from typing import Annotated, Any
 import typer
 from threadpoolctl import threadpool_limits
 
+from tnquench.assemble import no_prediction
 from tnquench.bethe.equilibrium import equilibrium
 from tnquench.bethe.strings import UnsupportedAnisotropy, supported_nu
 from tnquench.config.document import effective_toml, settings_page
 from tnquench.config.load import load_config
 from tnquench.config.schema import LATER_CHOICES
 from tnquench.dataset.integrity import check_run
-from tnquench.errors import TnquenchError, VerdictNegative
+from tnquench.errors import InputError, TnquenchError, VerdictNegative
 from tnquench.report.page import write_report
 from tnquench.run import forecast, hydro, run
 from tnquench.terminal.cost import cost_numbers, cost_rows
@@ -38,6 +39,8 @@ from tnquench.terminal.summary import show_findings
 from tnquench.terminal.table import aligned, equilibrium_rows
 
 PROGRAM = "tnquench"
+#: Largest beta times coupling of `thermo`; beyond it the solver meets the ground state to rounding.
+LARGEST_BETA = 1000.0
 
 #: A main run and its four companions: more processes would idle.
 MOST_THREADS = 5
@@ -166,6 +169,10 @@ def thermo_command(
     Energies are in the unit of the coupling. The energy is that of H without the field; the specific heat is
     taken at fixed field.
     """
+    if beta * coupling > LARGEST_BETA:
+        problem = f"--beta {beta:g}: beta times the coupling must be at most {LARGEST_BETA:g}"
+        subject = f"{PROGRAM} thermo"
+        raise InputError(subject, [problem])
     with threadpool_limits(1):
         state = equilibrium(anisotropy=anisotropy, beta=beta, field=field, coupling=coupling)
     heading = f"{model}, per site"
@@ -186,8 +193,10 @@ def check_command(
             raise VerdictNegative(str(path), findings)
         typer.echo(f"{path}: sound and complete")
     else:
-        settings = effective_toml(load_config(path))
-        typer.echo(f"# {path}: no problems; all settings in effect:\n\n{settings}", nl=False)
+        config = load_config(path)
+        typer.echo(f"# {path}: no problems; all settings in effect:\n\n{effective_toml(config)}", nl=False)
+        if reason := no_prediction(config):
+            typer.echo(f"{path}: without a prediction: {reason}", err=True)
 
 
 @app.command("report", epilog=f"Example: {PROGRAM} report results/demo")

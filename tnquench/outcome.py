@@ -208,12 +208,12 @@ def _outlook(config: Config, prediction: Prediction | None, absence: str) -> lis
     """Return events about the prediction: that there is none, or that its light cone meets the ends of the
     chain."""
     if prediction is None:
-        return [{"time": 0.0, "kind": "no_prediction", "detail": absence}]
+        return [{"kind": "no_prediction", "detail": absence}]
     arrival = 0.5 * (config.chain.sites - 1) / max(abs(edge) for edge in prediction.light_cone)
     if arrival >= config.evolution.until:
         return []
     detail = f"the fastest excitations from the middle reach the ends at t = {arrival:.3g}"
-    return [{"time": arrival, "kind": "light_cone_at_end", "detail": detail}]
+    return [{"kind": "light_cone_at_end", "detail": detail}]
 
 
 def _version(package: str) -> str:

@@ -150,7 +150,7 @@ def quantum_side(config: Config, *, threads: int, watch: Watch) -> QuantumSide:
         kind = "accuracy_reached" if error <= accuracy else "accuracy_missed"
         chosen = f"weight {quench.discarded_weight:.1e}, time step {quench.time_step:.3g}"
         detail = f"{chosen}: numerical error {error:.1e} at most, {accuracy:.1e} asked"
-        side = replace(side, events=({"time": 0.0, "kind": kind, "detail": detail},))
+        side = replace(side, events=({"kind": kind, "detail": detail},))
         if error <= accuracy:
             break
     return side

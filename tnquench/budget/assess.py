@@ -27,13 +27,15 @@ class PredictedLevel:
 
 @dataclass(frozen=True)
 class RunSettings:
-    """What the budget must know of the main run: ratio of the coarser to the main step, its order, k, |v| at
-    most."""
+    """What the budget must know of the main run.
+
+    step_ratio : the coarser companion's step over the main one; trotter_order : of both
+    resolve_at : k of the verdict; reach : how far from x = 0 the start varies
+    """
 
     step_ratio: float
     trotter_order: int
     resolve_at: float
-    fallback_velocity: float
     reach: float = SHARP_REACH
 
 
@@ -64,7 +66,9 @@ def quantum_sources(
         step_ratio=settings.step_ratio,
         order=settings.trotter_order,
     )
-    if SHORT in companions:
+    if SHORT not in companions:
+        found["length"] = sources.length_unknown(norm=main.norms[name], shape=values.shape)
+    else:
         noise = sources.WIDENING * sources.local_scale(loose - values) + found["truncation"]
         found["length"] = sources.length(long=loose, short=companions[SHORT].fields[name], noise=noise)
     return found
@@ -102,12 +106,11 @@ def assess(
     """Return the budget of every observable.
 
     predictions : by level; positions : of the "site"s and "bond"s. Where several levels are judged the larger
-    error of the predictions counts. Without a prediction the light-cone window follows
-    settings.fallback_velocity.
+    error of the predictions counts. Without a prediction the window is the whole chain but its ends.
     """
     cones = [level.light_cone for level in predictions.values()]
-    velocity = settings.fallback_velocity
-    cone = (min(c[0] for c in cones), max(c[1] for c in cones)) if cones else (-velocity, velocity)
+    cone = (min(c[0] for c in cones), max(c[1] for c in cones)) if cones else (0.0, 0.0)
+    reach = settings.reach if cones else float("inf")
     budgets = {}
     for name, place in OBSERVABLE_PLACES.items():
         found = quantum_sources(name, main, companions, settings)
@@ -125,7 +128,7 @@ def assess(
             bound=sources.truncation_bound(angle=main.angle, norm=main.norms[name], shape=values.shape),
             predictions={level: prediction.fields[name] for level, prediction in predictions.items()},
             window=light_cone_window(
-                times=main.times, positions=positions[place], light_cone=cone, reach=settings.reach
+                times=main.times, positions=positions[place], light_cone=cone, reach=reach
             ),
             times=main.times,
             resolve_at=settings.resolve_at,

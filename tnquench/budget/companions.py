@@ -49,13 +49,16 @@ def companion_quenches(main: Quench, *, shorter: Quench | None) -> dict[str, Que
 
 
 def loosened(quench: Quench, *, times: int) -> Quench:
-    """Return a quench with r^times its weight and half its bond floor as often: where the floor binds rather
-    than the weight, runs that differ by the weight alone would be identical and show no error at all.
+    """Return a quench with r^times its weight and, as often, half its bond floor and ceiling.
+
+    Where floor or ceiling bind rather than the weight, runs that differ by the weight alone would be
+    identical and show no error at all.
     """
     return replace(
         quench,
         discarded_weight=WEIGHT_RATIO**times * quench.discarded_weight,
         bond_floor=max(1, quench.bond_floor // 2**times),
+        bond_ceiling=max(1, quench.bond_ceiling // 2**times),
     )
 
 

@@ -11,7 +11,7 @@ from __future__ import annotations
 from dataclasses import dataclass
 
 import numpy as np
-from scipy.ndimage import uniform_filter
+from scipy.ndimage import maximum_filter1d, uniform_filter
 
 from tnquench.conventions import Reals
 
@@ -112,17 +112,25 @@ def length(*, long: Reals, short: Reals, noise: Reals) -> Reals:
     long : (time, place); short : (time, fewer places); noise : truncation error of these two runs at each
     point of the long chain, below which a difference says nothing. A point of the long chain takes the
     difference found in the short chain at the same distance from the end (the innermost one for points
-    further inside); that difference is the influence of the short chain's end, and so at least that of the
-    long chain's.
+    further inside): the influence of the short chain's end, and so at least that of the long chain's.
+    Differences oscillate in space and an end, once felt, stays felt: the largest of the neighbours and of all
+    earlier times counts.
     """
     missing = (long.shape[1] - short.shape[1]) // 2
     inner = slice(missing, missing + short.shape[1])
     excess = np.maximum(np.abs(short - long[:, inner]) - np.sqrt(2.0) * noise[:, inner], 0.0)
+    excess = np.maximum.accumulate(maximum_filter1d(excess, size=NEIGHBOURHOOD[1], axis=1), axis=0)
     depth = np.minimum(np.arange(long.shape[1]), np.arange(long.shape[1])[::-1])
     from_left = np.arange(long.shape[1]) == depth
     deepest = (short.shape[1] - 1) // 2
     reach = np.minimum(depth, deepest)
     return np.asarray(excess[:, np.where(from_left, reach, short.shape[1] - 1 - reach)])
+
+
+def length_unknown(*, norm: float, shape: tuple[int, int]) -> Reals:
+    """Return 2 ||O||, all that is known of the ends' influence where the chain is too short for a shorter
+    one."""
+    return np.full(shape, 2.0 * norm)
 
 
 def preparation(*, start_error: float, shape: tuple[int, int]) -> Reals:

@@ -82,7 +82,8 @@ class TableProfile(Section):
     values: Annotated[
         tuple[Annotated[float, Field(ge=-LARGEST_VALUE, le=LARGEST_VALUE)], ...], Strict(strict=False)
     ] = setting(
-        "the values; sites - 1 of them for beta, sites of them for beta_field",
+        "the values; sites - 1 of them for beta, sites of them for beta_field. Between them the prediction "
+        "interpolates monotonically (piecewise cubic), beyond them it goes on flat",
         unit=PROFILE_UNIT,
         default_rule="must be given, or file",
         remark="or give file in its place",

@@ -53,6 +53,9 @@ def _weight_or_accuracy(settings: Settings) -> Iterator[str]:
         yield "[evolution] discarded_weight: missing; give it, or accuracy in its place"
     if weight is not None and accuracy is not None:
         yield "[evolution] discarded_weight and accuracy: both given; keep one of them"
+    if accuracy is not None and settings["budget.companions"] == "none":
+        wanted = 'needs the companions that verify it; set companions = "full", or give a discarded_weight'
+        yield f'[budget] companions = "none": [evolution] accuracy {wanted}'
 
 
 def _times(settings: Settings) -> Iterator[str]:

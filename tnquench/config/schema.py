@@ -63,8 +63,9 @@ class Evolution(Section):
         le=1e-3,
     )
     accuracy: float | None = setting(
-        "largest numerical error wanted on any observable; the program chooses weight and time step by a "
-        "pilot run and verifies them by its error budget",
+        "largest error that truncation, time step, start and rounding may leave on any observable; the "
+        "program chooses weight and time step by pilot runs and verifies them by its error budget (what the "
+        "chain's ends and the prediction's grids contribute is reported, but no weight or step mends it)",
         default=None,
         default_rule="none; give it or discarded_weight",
         unit="J",

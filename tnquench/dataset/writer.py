@@ -200,7 +200,14 @@ def _refusing(path: Path) -> Iterator[None]:
         yield
     except (OSError, ValueError) as error:  # ValueError: a null byte in the name
         reason = getattr(error, "strerror", None) or str(error)
+        if isinstance(error, FileExistsError | NotADirectoryError):
+            reason = f"{_file_in_the_way(path.parent)} is a file, not a folder; name another place"
         raise InputError(str(path), [f"cannot be written: {reason}"], consequence="") from error
+
+
+def _file_in_the_way(folder: Path) -> Path:
+    """Return the part of a path that should be a folder and is not."""
+    return next((part for part in (folder, *folder.parents) if part.exists() and not part.is_dir()), folder)
 
 
 def _beside(path: Path) -> Path:

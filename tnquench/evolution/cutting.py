@@ -37,6 +37,9 @@ OUTSIDE_SHARE = 0.3
 #: A charge that misses less than this share of what is allowed outside needs no more directions.
 IDLE_SHARE = 0.05
 
+#: Largest overlap of new directions with a basis that counts as orthogonal.
+ORTHOGONALITY = 1e-13
+
 #: Random directions added to a basis that misses too much: at least this many, and this fraction of its size.
 EXTRA_DIRECTIONS, EXTRA_FRACTION = 4, 0.1
 
@@ -194,6 +197,12 @@ def _by_subspace(
     frames = [_frame(block, rows) for block, rows in zip(blocks, guess, strict=True)]
     norms = [float(np.vdot(block, block)) for block in blocks]
     extra = EXTRA_FRACTION
+    if sum(len(image) for _, image in frames) < rule.bond_floor + EXTRA_DIRECTIONS * len(blocks):
+        portion = rule.bond_floor // len(blocks) + EXTRA_DIRECTIONS  # the floor is filled whatever is missing
+        frames = [
+            _grown(block, *frame, max(0, portion - len(frame[1])), rule.random)
+            for block, frame in zip(blocks, frames, strict=True)
+        ]
     while True:
         held = [float(np.vdot(image, image)) for _, image in frames]
         missing = [norm - inside for norm, inside in zip(norms, held, strict=True)]
@@ -205,7 +214,8 @@ def _by_subspace(
         if sum(missing) <= allowed or not open_ends:
             break
         for charge in open_ends:
-            frames[charge] = _grown(blocks[charge], *frames[charge], extra, rule.random)
+            portion = max(EXTRA_DIRECTIONS, int(extra * len(frames[charge][1])))
+            frames[charge] = _grown(blocks[charge], *frames[charge], portion, rule.random)
         extra *= 2.0
     spectra = []
     for orthonormal, image in frames:
@@ -223,13 +233,17 @@ def _frame(block: Reals, rows: Reals) -> tuple[Reals, Reals]:
 
 
 def _grown(
-    block: Reals, orthonormal: Reals, image: Reals, extra: float, random: np.random.Generator
+    block: Reals, orthonormal: Reals, image: Reals, portion: int, random: np.random.Generator
 ) -> tuple[Reals, Reals]:
-    """Add directions of the residual block - orthonormal @ image to a basis, up to the rank of the block."""
-    held = len(image)
-    fresh = min(min(block.shape) - held, max(EXTRA_DIRECTIONS, int(extra * held)))
+    """Add so many directions of the residual block - orthonormal @ image to a basis, up to the rank."""
+    fresh = min(min(block.shape) - len(image), portion)
+    if fresh == 0:
+        return orthonormal, image
     probe = random.standard_normal((block.shape[1], fresh))
     sample = block @ probe - orthonormal @ (image @ probe)
     new, _ = np.linalg.qr(sample / np.maximum(np.linalg.norm(sample, axis=0), np.finfo(np.float64).tiny))
     new, _ = np.linalg.qr(new - orthonormal @ (orthonormal.T @ new))  # rounding left a trace of the old basis
+    if len(image) and np.abs(orthonormal.T @ new).max() > ORTHOGONALITY:
+        # nothing but rounding is left of the block: any directions serve, as long as they are orthogonal
+        new = np.linalg.qr(np.hstack([orthonormal, new]))[0][:, len(image) :]
     return np.hstack([orthonormal, new]), np.vstack([image, new.T @ block])

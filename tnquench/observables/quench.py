@@ -139,7 +139,7 @@ def simulate(quench: Quench, *, report: Callable[[Progress], None] | None = None
         detail = (
             f"state within {start.distance:.1e} of the exact start, {quench.preparation_distance:.1e} asked"
         )
-        events.insert(0, {"time": 0.0, "kind": "preparation", "detail": detail})
+        events.insert(0, {"kind": "preparation", "detail": detail})
     return diary.record(
         norms={name: largest_norm(members) for name, members in operators.items()},
         start=start,

@@ -86,13 +86,10 @@ class Comparison:
 
     @property
     def window(self) -> Verdicts:
-        """Points inside the light cone at each time (all points where no cone is known), (time, place)."""
-        if self.light_cone is None:
-            return np.ones((self.times.size, self.positions.size), dtype=np.bool_)
+        """Points inside the light cone, all but the ends where no cone is known, (time, place)."""
+        cone, reach = (self.light_cone, self.reach) if self.light_cone else ((0.0, 0.0), float("inf"))
         return np.asarray(
-            light_cone_window(
-                times=self.times, positions=self.positions, light_cone=self.light_cone, reach=self.reach
-            ),
+            light_cone_window(times=self.times, positions=self.positions, light_cone=cone, reach=reach),
             dtype=np.bool_,
         )
 

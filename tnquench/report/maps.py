@@ -10,6 +10,7 @@ from matplotlib.colors import Colormap, Normalize, SymLogNorm
 from matplotlib.figure import FigureBase
 from matplotlib.ticker import MaxNLocator
 
+from tnquench.budget.verdict import SHARP_REACH
 from tnquench.conventions import Reals
 from tnquench.report.canvas import DIVERGING, EDGE, HEAT, INK, UNRESOLVED, Panel, Plate, axes_at
 from tnquench.report.comparison import Comparison
@@ -45,10 +46,10 @@ def map_note(field: Comparison) -> str:
     said = []
     if field.quantum is not None and field.prediction is not None:
         said.append("Chain and prediction share one colour scale.")
-    if field.light_cone is not None:
+    if field.light_cone is not None and np.isfinite(field.reach):
         left, right = (plain(float(f"{velocity:.4g}")) for velocity in field.light_cone)
-        unit = f" {field.units.symbol('coupling')}".rstrip()
-        said.append(f"Dashed: the light cone x = v t of the prediction, v = {left}{unit} and {right}{unit}.")
+        unit = f" {field.units.symbol('energy')}".rstrip()
+        said.append(f"Dashed: the light cone of the prediction, velocities {left}{unit} and {right}{unit}.")
     if field.resolved is not None:
         said.append(
             f"Grey: unresolved, |deviation| at most {plain(field.resolve_at)} times the numerical error."
@@ -116,9 +117,10 @@ def _mesh(
 
 
 def _light_cone(axes: Axes, field: Comparison, colour: str) -> None:
-    """Draw x = v t for both edges."""
-    if field.light_cone is None:
+    """Draw the edges of the light cone from where the start varies, unless it varies everywhere."""
+    if field.light_cone is None or not np.isfinite(field.reach):
         return
     last = float(field.times[-1])
-    for velocity in field.light_cone:
-        axes.plot([0, velocity * last], [0, last], "--", color=colour, lw=1.0)
+    rim = field.reach - SHARP_REACH
+    for velocity, start in zip(field.light_cone, (-rim, rim), strict=True):
+        axes.plot([start, start + velocity * last], [0, last], "--", color=colour, lw=1.0)

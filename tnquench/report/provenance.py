@@ -52,7 +52,10 @@ def event_rows(run: Run) -> list[tuple[str, str, str]]:
 def event_remarks(events: list[tuple[str, str, str]]) -> list[str]:
     """Return what stands beside the verdict about the events: each of a few, or their number and kinds."""
     if len(events) <= FEW:
-        return [f"{kind.capitalize()}, t = {time}: {detail}" for time, kind, detail in events]
+        return [
+            f"{kind.capitalize()}: {detail}" if time == DASH else f"{kind.capitalize()}, t = {time}: {detail}"
+            for time, kind, detail in events
+        ]
     kinds = ", ".join(dict.fromkeys(kind for _, kind, _ in events))
     return [f"The run recorded {len(events)} events ({kinds}), listed below."]
 

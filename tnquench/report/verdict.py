@@ -15,14 +15,21 @@ FIT_FROM = 0.3
 FIT_SAMPLES = 5
 #: An exponent less certain than this is not worth a sentence.
 EXPONENT_ERROR = 0.25
+#: Nor is one that differs by more than twice this between the early and the late half of the fit.
+SLOPE_SPREAD = 0.25
 
 
 @dataclass(frozen=True)
 class PowerLaw:
-    """A fit |values| ~ time^-exponent between two times, with the standard error of the exponent."""
+    """A fit |values| ~ time^-exponent between two times.
+
+    error : standard error of the exponent; spread : half the difference of the exponents of the two halves of
+    the samples, which a curve that is no power law makes large
+    """
 
     exponent: float
     error: float
+    spread: float
     first: float
     last: float
 
@@ -44,20 +51,15 @@ def headline(fields: list[Comparison], *, about: str = "energy_density") -> str:
         )
     if field.prediction is None or field.deviation is None:
         return _without_prediction(field)
-    place = joint(field) if field.joined else largest(field.deviation[-1:], field.window[-1:])[1]
+    last = field.window[-1:]
+    if field.resolved is not None and np.any(field.resolved[-1:] & last):
+        last = field.resolved[-1:] & last
+    place = largest(field.deviation[-1:], last)[1]
     if field.numerical is None or field.resolved is None:
         return _without_companions(field, place)
     if not np.any(field.resolved & field.judged):
         return _nothing_resolved(field)
     return _resolved(field, place, field.resolved & field.judged)
-
-
-def joint(field: Comparison) -> int:
-    """Return the index of the place nearest to x = 0; of two, the one with the larger last deviation."""
-    distance = np.abs(field.positions)
-    nearest = np.flatnonzero(distance <= distance.min() + 1e-9)
-    values = field.known if field.deviation is None else field.deviation
-    return int(nearest[np.argmax(np.abs(values[-1, nearest]))])
 
 
 def power_law(times: Reals, values: Reals, usable: Verdicts) -> PowerLaw | None:
@@ -69,13 +71,23 @@ def power_law(times: Reals, values: Reals, usable: Verdicts) -> PowerLaw | None:
     chosen = usable & (times > 0) & (times >= FIT_FROM * times[-1]) & (values != 0)
     if np.count_nonzero(chosen) < FIT_SAMPLES:
         return None
-    logarithm = np.log(times[chosen])
-    centred = logarithm - logarithm.mean()
-    height = np.log(np.abs(values[chosen]))
-    slope = float(centred @ height / (centred @ centred))
-    rest = height - height.mean() - slope * centred
-    error = float(np.sqrt(rest @ rest / (rest.size - 2) / (centred @ centred)))
-    return PowerLaw(-slope, error, float(times[chosen][0]), float(times[chosen][-1]))
+    logarithm, height = np.log(times[chosen]), np.log(np.abs(values[chosen]))
+    slope, error = _line(logarithm, height)
+    half = logarithm.size // 2
+    early, late = (
+        _line(logarithm[: half + 1], height[: half + 1])[0],
+        _line(logarithm[half:], height[half:])[0],
+    )
+    first, last = float(times[chosen][0]), float(times[chosen][-1])
+    return PowerLaw(-slope, error, 0.5 * abs(early - late), first, last)
+
+
+def _line(x: Reals, y: Reals) -> tuple[float, float]:
+    """Return the slope of a least-squares line and its standard error."""
+    centred = x - x.mean()
+    slope = float(centred @ y / (centred @ centred))
+    rest = y - y.mean() - slope * centred
+    return slope, float(np.sqrt(rest @ rest / max(rest.size - 2, 1) / (centred @ centred)))
 
 
 def largest(values: Reals, among: Verdicts) -> tuple[int, int]:
@@ -126,7 +138,7 @@ def _resolved(field: Comparison, place: int, resolved: Verdicts) -> str:
             f"{theory} gives the {said} {_at(field, place)} to within "
             f"{plain(field.resolve_at)} times the numerical error (deviation {at_place}, error {error})"
         )
-    return f"{opening}; {_history(field, place, resolved)}{_trend(field, place, resolved)}."
+    return f"{opening}; {_history(field, place, resolved)}{_trend(field, resolved)}."
 
 
 def _history(field: Comparison, place: int, resolved: Verdicts) -> str:
@@ -151,18 +163,19 @@ def _history(field: Comparison, place: int, resolved: Verdicts) -> str:
     return f"{since} ({_when(field)}: {dense} in {stretch})"
 
 
-def _trend(field: Comparison, place: int, resolved: Verdicts) -> str:
-    """Say how the deviation at one place moves with time, if a power law describes it."""
+def _trend(field: Comparison, resolved: Verdicts) -> str:
+    """Say how the deviation's norm moves with time, if one power law describes it."""
     assert field.deviation is not None
-    law = power_law(field.times, field.deviation[:, place], resolved[:, place])
-    if law is None or law.error > EXPONENT_ERROR:
+    law = power_law(field.times, field.norm(field.deviation), np.any(resolved, axis=1))
+    if law is None or law.error > EXPONENT_ERROR or law.spread > SLOPE_SPREAD:
         return ""
     span = f"{plain(law.first)} ≤ t ≤ {plain(law.last)}"
+    norm = "its root mean square over the light cone"
     if abs(law.exponent) < max(0.1, 2 * law.error):
-        return f", and stays at about the same size {_where(field, place)} over {span}"
+        return f", and {norm} stays about the same over {span}"
     verb, sign = ("falls", "1/t") if law.exponent > 0 else ("grows", "t")
-    power = measured(abs(law.exponent), max(law.error, 0.01))
-    return f", and {_where(field, place)} {verb} like {sign}ᵖ with p = {power} (fit over {span})"
+    power = measured(abs(law.exponent), max(law.error, law.spread, 0.01))
+    return f", and {norm} {verb} like {sign}ᵖ with p = {power} (fit over {span})"
 
 
 def _nothing_resolved(field: Comparison) -> str:
@@ -209,7 +222,7 @@ def _without_prediction(field: Comparison) -> str:
     said = OBSERVABLE_NAMES[field.name]
     opening = f"No prediction was computed for this chain: the run gives its {said} up to {_when(field)}"
     if field.numerical is not None:
-        time, place = largest(field.numerical, np.ones_like(field.window))
+        time, place = largest(field.numerical, field.window)
         worst = quantity(float(field.numerical[time, place]), field.unit)
         return f"{opening} with a numerical error up to {worst} ({_at(field, place, time)})."
     if field.bound is not None:
@@ -224,5 +237,6 @@ def remarks(zero: list[Comparison]) -> list[str]:
     """Return what the verdict leaves out; zero : observables that vanish by symmetry."""
     if not zero:
         return []
-    names = " and ".join(OBSERVABLE_NAMES[field.name] for field in zero)
+    *others, last = (OBSERVABLE_NAMES[field.name] for field in zero)
+    names = f"{', '.join(others)} and {last}" if others else last
     return [f"Zero by symmetry, hence not drawn: {names}."]
