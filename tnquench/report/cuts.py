@@ -147,7 +147,7 @@ def _stretch(axes: Axes, field: Comparison, index: int) -> str:
     if 0 < threshold < largest / 5:
         axes.set_yscale("symlog", linthresh=threshold, linscale=0.8)
         axes.set_ylim(-2.0 * largest, 2.0 * largest)
-        symmetric_decades(axes.yaxis, threshold=threshold, largest=2.0 * largest, most=2)
+        symmetric_decades(axes.yaxis, threshold=threshold, largest=2.0 * largest, room=0.14)
         return typeset(field.unit)
     axes.set_ylim(-1.25 * largest, 1.25 * largest)
     return linear(axes.yaxis, largest, field.unit, ticks=5)

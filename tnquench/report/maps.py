@@ -108,7 +108,7 @@ def _mesh(
     bar.outline.set_linewidth(0.5)
     unit = typeset(field.unit)
     if isinstance(scale, SymLogNorm):
-        symmetric_decades(bar_axes.yaxis, threshold=float(scale.linthresh), largest=highest, most=4)
+        symmetric_decades(bar_axes.yaxis, threshold=float(scale.linthresh), largest=highest, room=0.08)
     else:
         unit = linear(bar_axes.yaxis, max(abs(lowest), abs(highest)), field.unit)
     bar_axes.set_title(unit, fontsize=9, loc="center", pad=5)

@@ -80,11 +80,22 @@ def logarithmic(axes: Axes, low: float, high: float) -> None:
     axes.yaxis.set_major_formatter(FuncFormatter(decade_label))
 
 
-def symmetric_decades(axis: Axis, *, threshold: float, largest: float, most: int) -> None:
-    """Label a symmetric logarithmic axis at zero and at up to `most` powers of ten on each side."""
+def symmetric_decades(axis: Axis, *, threshold: float, largest: float, room: float) -> None:
+    """Label a symmetric logarithmic axis at zero and at powers of ten on each side, as many as have room.
+
+    room : height of a label with its margin, as a fraction of the whole axis
+    """
     powers = 10.0 ** np.arange(np.ceil(np.log10(threshold) - 1e-9), np.floor(np.log10(largest)) + 1)
-    powers = powers[:: max(1, -(-powers.size // most))]
-    axis.set_major_locator(FixedLocator([*(-powers[::-1]), 0.0, *powers]))
+    transform = axis.get_transform()
+    whole = 2.0 * float(transform.transform(np.array([largest]))[0])
+    kept: list[float] = []
+    above = whole
+    for power in powers[::-1]:
+        height = float(transform.transform(np.array([power]))[0])
+        if min(above - height, height) >= room * whole:
+            kept.append(float(power))
+            above = height
+    axis.set_major_locator(FixedLocator([*(-power for power in kept), 0.0, *kept[::-1]]))
     axis.set_minor_locator(NullLocator())
     axis.set_major_formatter(FuncFormatter(decade_label))
 
