@@ -17,6 +17,7 @@ from itertools import pairwise
 import numpy as np
 
 from tnquench.conventions import Integers, Reals
+from tnquench.evolution.orthogonal import orthonormal_and_factor
 from tnquench.model.grading import Grading
 
 
@@ -93,7 +94,7 @@ def _step_right(state: ChainState) -> None:
     columns = state.sector_slices(here + 1)
     isometries, factors = [], []
     for block in columns:
-        q, r = np.linalg.qr(tensor[:, :, block].reshape(multiplicity * left, -1))
+        q, r = orthonormal_and_factor(tensor[:, :, block].reshape(multiplicity * left, -1))
         isometries.append(q.reshape(multiplicity, left, -1))
         factors.append(r)
     state.tensors[here] = np.concatenate(isometries, axis=2)
@@ -113,7 +114,7 @@ def _step_left(state: ChainState) -> None:
     isometries, factors = [], []
     for block in rows:
         flat = tensor[:, block, :].transpose(0, 2, 1).reshape(multiplicity * right, -1)
-        q, r = np.linalg.qr(flat)
+        q, r = orthonormal_and_factor(flat)
         isometries.append(q.reshape(multiplicity, right, -1).transpose(0, 2, 1))
         factors.append(r.T)
     state.tensors[here] = np.concatenate(isometries, axis=1)

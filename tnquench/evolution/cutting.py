@@ -16,6 +16,7 @@ import numpy as np
 from scipy.linalg import LinAlgError, svd
 
 from tnquench.conventions import Reals
+from tnquench.evolution.orthogonal import orthonormal
 
 METHODS = ("subspace", "gram", "svd")
 
@@ -178,7 +179,7 @@ def _by_gram(block: Reals) -> _Spectrum:
     _, vectors = np.linalg.eigh(block.T @ block)
     # an eigenvector of a tiny eigenvalue is mapped to a short, inaccurate vector: QR makes the set
     # orthonormal again
-    mapped, _ = np.linalg.qr(block @ vectors[:, ::-1])
+    mapped = orthonormal(block @ vectors[:, ::-1])
     image = mapped.T @ block
     return _Spectrum(mapped, image, np.square(image).sum(axis=1))
 
@@ -218,9 +219,9 @@ def _by_subspace(
             frames[charge] = _grown(blocks[charge], *frames[charge], portion, rule.random)
         extra *= 2.0
     spectra = []
-    for orthonormal, image in frames:
+    for basis, image in frames:
         weights, rotation = np.linalg.eigh(image @ image.T)
-        spectra.append(_Spectrum(orthonormal, image, np.maximum(weights[::-1], 0.0), rotation[:, ::-1]))
+        spectra.append(_Spectrum(basis, image, np.maximum(weights[::-1], 0.0), rotation[:, ::-1]))
     return spectra, max(sum(missing), 0.0)
 
 
@@ -228,22 +229,22 @@ def _frame(block: Reals, rows: Reals) -> tuple[Reals, Reals]:
     """Return an orthonormal basis of the block's image of `rows`, and the block seen in it."""
     image = block @ rows[: min(block.shape)].T
     lengths = np.linalg.norm(image, axis=0)
-    orthonormal, _ = np.linalg.qr(image / np.where(lengths > 0.0, lengths, 1.0))
-    return orthonormal, orthonormal.T @ block
+    basis = orthonormal(image / np.where(lengths > 0.0, lengths, 1.0))
+    return basis, basis.T @ block
 
 
 def _grown(
-    block: Reals, orthonormal: Reals, image: Reals, portion: int, random: np.random.Generator
+    block: Reals, basis: Reals, image: Reals, portion: int, random: np.random.Generator
 ) -> tuple[Reals, Reals]:
-    """Add so many directions of the residual block - orthonormal @ image to a basis, up to the rank."""
+    """Add so many directions of the residual block - basis @ image to a basis, up to the block's rank."""
     fresh = min(min(block.shape) - len(image), portion)
     if fresh == 0:
-        return orthonormal, image
+        return basis, image
     probe = random.standard_normal((block.shape[1], fresh))
-    sample = block @ probe - orthonormal @ (image @ probe)
-    new, _ = np.linalg.qr(sample / np.maximum(np.linalg.norm(sample, axis=0), np.finfo(np.float64).tiny))
-    new, _ = np.linalg.qr(new - orthonormal @ (orthonormal.T @ new))  # rounding left a trace of the old basis
-    if len(image) and np.abs(orthonormal.T @ new).max() > ORTHOGONALITY:
+    sample = block @ probe - basis @ (image @ probe)
+    new = orthonormal(sample / np.maximum(np.linalg.norm(sample, axis=0), np.finfo(np.float64).tiny))
+    new = orthonormal(new - basis @ (basis.T @ new))  # rounding left a trace of the old basis
+    if len(image) and np.abs(basis.T @ new).max() > ORTHOGONALITY:
         # nothing but rounding is left of the block: any directions serve, as long as they are orthogonal
-        new = np.linalg.qr(np.hstack([orthonormal, new]))[0][:, len(image) :]
-    return np.hstack([orthonormal, new]), np.vstack([image, new.T @ block])
+        new = orthonormal(np.hstack([basis, new]))[:, len(image) :]
+    return np.hstack([basis, new]), np.vstack([image, new.T @ block])
