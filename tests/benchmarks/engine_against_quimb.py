@@ -17,7 +17,7 @@ import numpy as np
 import quimb.tensor as qtn
 from threadpoolctl import threadpool_limits
 
-from tests.oracles.quimb_chain import SPIN_X, SPIN_Y, SPIN_Z
+from tests.oracles.exact_chain import SPIN_X, SPIN_Y, SPIN_Z
 from tnquench.conventions import Reals, bond_positions
 from tnquench.evolution.chain_state import ChainState
 from tnquench.evolution.cutting import CutRule
