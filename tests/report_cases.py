@@ -101,7 +101,7 @@ def window(run: Run, place: str) -> np.ndarray:
     theory = run.hydrodynamics["euler"]
     t, x = run.coordinates["time"].values[:, None], run.coordinates[place].values[None, :]
     edges = theory.attrs["light_cone_left"] * t - 1.5, theory.attrs["light_cone_right"] * t + 1.5
-    interior = np.abs(x) <= np.abs(x).max() - 4.0
+    interior = np.abs(x).max() - np.abs(x) >= 4.0
     return np.asarray((x >= edges[0]) & (x <= edges[1]) & (t > 0) & interior)
 
 

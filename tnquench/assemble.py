@@ -32,6 +32,9 @@ FEWEST_STEPS = 2
 #: A tangent or a Gaussian counts as flat beyond so many of its widths.
 FLAT_BEYOND = 3.0
 
+#: Shortest chain for which a prediction is made.
+FEWEST_PREDICTED = 4
+
 _SHAPES: dict[str, Callable[..., Reals]] = {
     "uniform": profiles.uniform,
     "step": profiles.step,
@@ -98,6 +101,10 @@ def no_prediction(config: Config) -> str:
         supported_nu(config.chain.anisotropy)
     except UnsupportedAnisotropy as refusal:
         return str(refusal)
+    if config.chain.sites < FEWEST_PREDICTED:
+        return (
+            f"{config.chain.sites} sites are no hydrodynamic system; predictions begin at {FEWEST_PREDICTED}"
+        )
     profiles_ = (config.start.beta, config.start.beta_field)
     if any(_is_sharp(profile) for profile in profiles_) and not all(_is_flat_or_sharp(p) for p in profiles_):
         return "a sharp step beside a smooth profile has no prediction in this version"

@@ -141,18 +141,24 @@ def quantum_side(config: Config, *, threads: int, watch: Watch) -> QuantumSide:
     if accuracy is not None:
         watch.stage("pilot runs", None)
     weight, time_step = chosen_settings(config)
-    for repeat in range(REPEATS + 1):
-        quench = build_quench(config, weight=weight / TIGHTENING**repeat, time_step=time_step)
+    for _ in range(REPEATS + 1):
+        quench = build_quench(config, weight=weight, time_step=time_step)
         side = simulate_all(quench, planned_companions(config, quench), threads=threads, watch=watch)
-        if accuracy is None or not side.companions:
+        if accuracy is None:
             break
-        error = quantum_error(side.main, side.companions, budget_settings(config, quench))
+        error, source = quantum_error(side.main, side.companions, budget_settings(config, quench))
         kind = "accuracy_reached" if error <= accuracy else "accuracy_missed"
         chosen = f"weight {quench.discarded_weight:.1e}, time step {quench.time_step:.3g}"
-        detail = f"{chosen}: numerical error {error:.1e} at most, {accuracy:.1e} asked"
+        largest = f"mostly {source.replace('_', ' ')}"
+        detail = f"{chosen}: numerical error {error:.1e} at most ({largest}), {accuracy:.1e} asked"
         side = replace(side, events=({"kind": kind, "detail": detail},))
-        if error <= accuracy:
+        step_is_fixed = source == "time_step" and config.evolution.time_step is not None
+        if error <= accuracy or step_is_fixed:
             break
+        if source == "time_step":
+            time_step = quench.time_step / 2.0
+        else:
+            weight = quench.discarded_weight / TIGHTENING
     return side
 
 

@@ -45,7 +45,7 @@ def test_energy_at_the_joint_approaches_the_euler_value_like_one_over_time(two_t
     Source: B. Bertini, M. Collura, J. De Nardis, M. Fagotti, Phys. Rev. Lett. 117, 207201 (2016), and O. A.
     Castro-Alvaredo, B. Doyon, T. Yoshimura, Phys. Rev. X 6, 041065 (2016): the ray profile is reached at
     large times; an initial excess of finite energy on a ray that carries quasiparticles then decays like 1/t.
-    Size near 6e-3 J at t = 10: from an independent trial implementation, no published source.
+    Size near 6e-3 J at t = 10: our own measurement, no published source.
     Regime: D = 0.5, beta 0.5 | 2, the light cone (velocities up to 1.2 J) stays inside 56 sites until t = 10.
     Tolerance: coarse, 0.15 in the power and 15 % in size, for a fit from t = 5 to 10.
     """

@@ -81,18 +81,21 @@ def _truncated(record: QuantumRecord, name: str) -> sources.TruncatedRun:
 
 def quantum_error(
     main: QuantumRecord, companions: Mapping[str, QuantumRecord], settings: RunSettings
-) -> float:
-    """Return the largest error that weight, step, start and rounding leave on any observable, anywhere and
-    ever.
+) -> tuple[float, str]:
+    """Return the largest error that weight, step, start and rounding leave anywhere, and its largest source.
 
     The influence of the ends is left out: no weight or step can reduce it.
     """
-    worst = 0.0
+    worst, named = 0.0, "truncation"
     for name in main.fields:
         found = quantum_sources(name, main, companions, settings)
-        total = sum(values for source, values in found.items() if source != "length")
-        worst = max(worst, float(np.max(total)))
-    return worst
+        found.pop("length")
+        total = np.sum(list(found.values()), axis=0)
+        place = np.unravel_index(int(total.argmax()), total.shape)
+        if total[place] > worst:
+            worst = float(total[place])
+            named = max((float(values[place]), source) for source, values in found.items())[1]
+    return worst, named
 
 
 def assess(
@@ -130,6 +133,7 @@ def assess(
             window=light_cone_window(
                 times=main.times, positions=positions[place], light_cone=cone, reach=reach
             ),
+            positions=positions[place],
             times=main.times,
             resolve_at=settings.resolve_at,
         )

@@ -20,10 +20,10 @@ from scipy.optimize import nnls
 from tnquench.budget import sources
 from tnquench.budget.companions import coarser_steps, loosened
 from tnquench.conventions import Reals
+from tnquench.model.grading import derive_grading
 from tnquench.observables.quench import Progress, QuantumRecord, Quench, simulate
 
-#: Weights of the pilot runs, the looser first; they never go below ten times the weight of the run they stand
-#: for.
+#: Weights of the pilot runs, the looser first. A forecast's are never below ten times the weight of its run.
 FORECAST_WEIGHTS = (1e-6, 1e-7)
 ACCURACY_WEIGHTS = (1e-6, 1e-7)
 
@@ -101,13 +101,14 @@ def forecast_quench(quench: Quench, *, companions: dict[str, Quench], seconds: f
 
     main, bonds = cost(quench)
     largest = bonds.max(axis=1)
-    state = _state_bytes(bonds[-1])
+    copies = derive_grading((*quench.chain.bond_terms, *quench.start_terms)).multiplicity
+    state = copies * _state_bytes(bonds[-1])
     return Forecast(
         times=samples,
         bond_dimension=largest,
         main_seconds=main,
         companion_seconds=sum(cost(run)[0] for run in companions.values()),
-        memory_bytes=_process_bytes() + state + WORKSPACE_ARRAYS * 8.0 * float(largest[-1]) ** 2,
+        memory_bytes=_process_bytes() + state + WORKSPACE_ARRAYS * 8.0 * copies * float(largest[-1]) ** 2,
         state_bytes=state,
         pilot_seconds=time.perf_counter() - began,
         pilot_time=pilots[1].times[-1],

@@ -146,7 +146,11 @@ def arithmetic(*, cuts: Reals, norm: float, shape: tuple[int, int]) -> Reals:
 
 
 def truncation_bound(*, angle: Reals, norm: float, shape: tuple[int, int]) -> Reals:
-    """Return the rigorous bound 2 ||O|| sin(min(sum of arcsin sqrt(w), pi/2)) on the truncation error.
+    """Return the rigorous bound 2 ||O|| sin(min(sum of arcsin sqrt(w), pi/2)) on the real-time truncation
+    error.
+
+    It holds relative to the evolution of the same prepared start by the same gates without cuts; the start's
+    own error and the time step are not in it.
 
     angle : sum over all cuts up to each time, shape (time,). Each cut in exact canonical form turns the unit
     vector by arcsin sqrt(w) and angles between unit vectors obey the triangle inequality.

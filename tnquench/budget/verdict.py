@@ -29,14 +29,20 @@ SHARP_REACH = 1.5
 #: Spacings next to an open end, where the chain feels its end already at t = 0.
 END_MARGIN = 4.0
 
+#: A chain of fewer places has no interior to speak of.
+SHORT_CHAIN = 12
+
 
 @dataclass(frozen=True)
 class LevelVerdict:
     """The comparison with one hydrodynamic level.
 
-    deviation (time, place): quantum minus prediction; resolved (time, place): where it exceeds the numerical
-    error deviation_norm (time,): root mean square over the light-cone window; resolved_share (time,): share
-    of its points first_resolved_time: first sample with a resolved point, nan if there is none
+    deviation (time, place) : quantum minus prediction
+    resolved (time, place) : where it exceeds the numerical error, away from the open ends
+    deviation_norm (time,) : root mean square over the light-cone window
+    resolved_share (time,) : share of the window's points
+    first_resolved_time : first sample after the start with a resolved point in the window, nan if there is
+    none; at t = 0 only the start's own mismatch is resolved
     """
 
     deviation: Reals
@@ -48,11 +54,13 @@ class LevelVerdict:
 
 @dataclass(frozen=True)
 class ObservableBudget:
-    """Errors of one observable: error (source, time, place), their numerical sum and the rigorous truncation
-    bound.
+    """Errors of one observable and the verdict on each level.
 
-    numerical_norm (time,): root mean square over the light-cone window; dominant_source (time,): index of the
-    largest
+    error (source, time, place) : by source; numerical (time, place) : sum of all but the physical ones
+    bound (time, place) : rigorous bound on the real-time truncation
+    numerical_norm (time,) : root mean square over the light-cone window
+    dominant_source (time,) : index of the largest source there
+    levels : verdict by hydrodynamic level
     """
 
     error: Reals
@@ -70,14 +78,19 @@ def light_cone_window(
 
     light_cone : leftmost and rightmost velocity
     reach : distance from x = 0 up to which the start itself varies; infinite where it varies everywhere
-    The last END_MARGIN spacings before each open end are left out wherever the window does not consist of
-    them alone.
+    The last END_MARGIN spacings before each open end are left out.
     """
     left, right = light_cone
     clock, place = times[:, None], positions[None, :]
     inside = (place >= left * clock - reach) & (place <= right * clock + reach)
-    interior = np.abs(place) <= np.abs(positions).max() - END_MARGIN
-    return np.asarray(inside & interior if (inside & interior).any(axis=1).all() else inside)
+    return np.asarray(inside & interior(positions)[None, :])
+
+
+def interior(positions: Reals) -> np.ndarray:
+    """Return which places (place,) lie more than END_MARGIN from the open ends; all of them in a short
+    chain."""
+    depth = np.abs(positions).max() - np.abs(positions)
+    return np.asarray((depth >= END_MARGIN) | (len(positions) < SHORT_CHAIN))
 
 
 def window_norm(values: Reals, window: np.ndarray) -> Reals:
@@ -92,6 +105,7 @@ def judge_observable(
     bound: Reals,
     predictions: Mapping[str, Reals],
     window: np.ndarray,
+    positions: Reals,
     times: Reals,
     resolve_at: float,
 ) -> ObservableBudget:
@@ -99,8 +113,8 @@ def judge_observable(
 
     quantum, every source, bound, every prediction : (time, place); sources missing from the mapping count as
     zero
-    window : (time, place) of bool; resolve_at : k, a deviation counts as resolved beyond k times the
-    numerical error
+    window : (time, place) of bool; positions : (place,); resolve_at : k, a deviation counts as resolved
+    beyond k times the numerical error
     """
     error = np.stack([np.broadcast_to(sources.get(name, 0.0), quantum.shape) for name in ERROR_SOURCES])
     numerical_rows = [index for index, name in enumerate(ERROR_SOURCES) if name not in PHYSICAL_SOURCES]
@@ -113,19 +127,21 @@ def judge_observable(
         numerical_norm=window_norm(numerical, window),
         dominant_source=np.array(numerical_rows)[norms.argmax(axis=0)],
         levels={
-            level: _level_verdict(quantum - prediction, numerical, window, times, resolve_at)
+            level: _level_verdict(
+                quantum - prediction, resolve_at * numerical, window, interior(positions), times
+            )
             for level, prediction in predictions.items()
         },
     )
 
 
 def _level_verdict(
-    deviation: Reals, numerical: Reals, window: np.ndarray, times: Reals, resolve_at: float
+    deviation: Reals, threshold: Reals, window: np.ndarray, judgeable: np.ndarray, times: Reals
 ) -> LevelVerdict:
-    """Compare a deviation with k times the numerical error, point by point."""
-    resolved = np.abs(deviation) > resolve_at * numerical
+    """Compare a deviation with k times the numerical error, point by point, away from the open ends."""
+    resolved = (np.abs(deviation) > threshold) & judgeable[None, :]
     inside = resolved & window
-    seen = inside.any(axis=1)
+    seen = inside.any(axis=1) & (times > 0.0)
     return LevelVerdict(
         deviation=deviation,
         resolved=resolved,

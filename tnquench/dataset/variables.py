@@ -148,7 +148,7 @@ def _budget_variables(name: str) -> dict[str, Variable]:
     dims, units, said = observable.dims, observable.units, observable.long_name
     table = {
         "error": Variable(("source", *dims), units, f"error of the {said} by source"),
-        "bound": Variable(dims, units, f"rigorous bound on the truncation error of the {said}"),
+        "bound": Variable(dims, units, f"rigorous bound on the real-time truncation error of the {said}"),
         "numerical": Variable(dims, units, f"summed numerical error of the {said}"),
         "numerical_norm": Variable(("time",), units, f"numerical error of the {said}, {RMS}"),
         "dominant_source": Variable(("time",), "1", f"largest source of error of the {said}", "int64"),

@@ -52,6 +52,7 @@ class Cut:
     left : (rows, kept) isometries; right : (kept, columns), of unit norm together
     discarded_weight : lost squared norm as a fraction of the whole
     norm : norm of the uncut tensor
+    uncertainty : rounding of the discarded weight where it is a difference of norms
     fallbacks : number of singular value decompositions that needed the slower driver
     """
 
@@ -60,6 +61,7 @@ class Cut:
     discarded_weight: float
     norm: float
     fallbacks: int = 0
+    uncertainty: float = 0.0
 
 
 @dataclass
@@ -126,7 +128,10 @@ def cut(blocks: list[Reals], rule: CutRule, *, guess: list[Reals] | None = None)
         spectra = [_by_gram(block) for block in blocks]
     else:
         spectra, outside = _by_subspace(blocks, guess, rule, total)
-    return _keep_largest(spectra, rule, total=total, outside=outside, fallbacks=fallbacks)
+    result = _keep_largest(spectra, rule, total=total, outside=outside, fallbacks=fallbacks)
+    if method == "subspace" and guess is not None:
+        result.uncertainty = float(np.finfo(np.float64).eps) * len(blocks)
+    return result
 
 
 def _keep_largest(

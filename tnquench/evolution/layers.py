@@ -45,8 +45,10 @@ class CutLedger:
     def enter(self, bond: int, result: Cut, rule: CutRule) -> None:
         """Add one cut."""
         self.discarded_weight[bond] += result.discarded_weight
-        self.angle[bond] += np.arcsin(np.sqrt(min(result.discarded_weight, 1.0)))
-        self.ceiling_cuts[bond] += result.discarded_weight > rule.weight_target * (1.0 + 1e-9) + 1e-15
+        self.angle[bond] += np.arcsin(np.sqrt(min(result.discarded_weight + result.uncertainty, 1.0)))
+        self.ceiling_cuts[bond] += (
+            result.discarded_weight > rule.weight_target * (1.0 + 1e-9) + result.uncertainty
+        )
         self.fallbacks += result.fallbacks
         self.log_norm += float(np.log(result.norm))
         self.cuts += 1

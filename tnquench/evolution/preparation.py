@@ -6,7 +6,7 @@ rho_0 = exp(-K)/Z, so sigma is proportional to exp(-K/2), reached by exp(-K/4) o
 from __future__ import annotations
 
 from collections.abc import Sequence
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 from math import log
 
 from tnquench.evolution.chain_state import ChainState, distance, infinite_temperature
@@ -20,17 +20,21 @@ from tnquench.model.pauli import Operator
 SCHEME = SCHEMES[4]
 FEWEST_STEPS, MOST_STEPS = 2, 512
 
-#: Error of a state as a fraction of its distance from the one with twice the step: 1/(2^order - 1) in the
-#: limit of small steps, here with a factor 2 to spare, and far more cautious while only one distance is
+#: Each refinement halves the step and divides the weight of the cuts by this, so that both errors shrink.
+TIGHTENING = 100.0
+TIGHTEST_WEIGHT = 1e-22
+
+#: Error of a state as a fraction of its distance from the coarser one: in the limit 1/(2^order - 1) for the
+#: step and 1/sqrt(TIGHTENING) for the cuts, here with room to spare, and more while only one distance is
 #: known.
-LEAST_SHARE, SHARE_AT_FIRST = 2.0 / (2**SCHEME.order - 1), 0.25
+LEAST_SHARE, SHARE_AT_FIRST = 2.0 / (2**SCHEME.order - 1), 0.3
 
 
 @dataclass(frozen=True)
 class Preparation:
     """The start and what is known of it.
 
-    state : unit vector proportional to exp(-K/2); coarser : the same with steps twice as long
+    state : unit vector proportional to exp(-K/2); coarser : the same, one refinement earlier
     error_share : estimated error of the state as a fraction of its difference from the coarser one
     distance : estimated norm of its difference from the exact start; an expectation value moves by at most
                2 distance times the operator's norm, now and at any later time
@@ -52,19 +56,20 @@ class Preparation:
 def prepare(
     terms: Sequence[Operator], *, sites: int, grading: Grading, distance_target: float, rule: CutRule
 ) -> Preparation:
-    """Prepare the start, halving the step until the state is within `distance_target` of the exact one.
+    """Prepare the start, refining it until the state is within `distance_target` of the exact one.
 
     terms : k_j with sum_j k_j = K, one operator a bond; distance_target : norm of the state's allowed error
-    rule  : how bonds are cut on the way
-    The distance of the last two states measures the coarser one's error; the finer one's is smaller by
-    2^order while the Trotter error dominates, but errors of the cuts do not shrink, so the estimate takes the
-    ratio of the last two distances where that is larger (and a cautious share while there is only one). If
-    halving no longer helps, the last state is returned with `reached` false.
+    rule  : how bonds are cut at first
+    Each refinement halves the step and tightens the cuts. The distance of the last two states measures the
+    coarser one's error; the finer one's is taken as the ratio of the last two distances, but no less than the
+    scheme and the cuts promise. If refining no longer helps, which is what a bond ceiling that binds looks
+    like, the last state is returned with `reached` false.
     """
     steps, previous = FEWEST_STEPS, float("inf")
     state, ledger = _imaginary_evolution(terms, sites, grading, steps, rule)
     while True:
         steps *= 2
+        rule = replace(rule, weight_target=max(rule.weight_target / TIGHTENING, TIGHTEST_WEIGHT))
         coarser, (state, ledger) = state, _imaginary_evolution(terms, sites, grading, steps, rule)
         apart = distance(coarser, state)
         share = SHARE_AT_FIRST if previous == float("inf") else min(max(LEAST_SHARE, apart / previous), 1.0)

@@ -111,7 +111,7 @@ def simulate(quench: Quench, *, report: Callable[[Progress], None] | None = None
         sites=chain.sites,
         grading=grading,
         distance_target=quench.preparation_distance,
-        rule=CutRule(quench.preparation_weight),
+        rule=CutRule(quench.preparation_weight, bond_ceiling=quench.bond_ceiling, method=quench.cutting),
     )
     operators = chain.observables()
     meter = LocalObservables(operators, sites=chain.sites, grading=grading)
@@ -151,7 +151,7 @@ def simulate(quench: Quench, *, report: Callable[[Progress], None] | None = None
 
 
 def _start_error(meter: LocalObservables, start: Preparation) -> dict[str, float]:
-    """Estimate each observable's error in the start from the state prepared with steps twice as long.
+    """Estimate each observable's error in the start from the state one refinement earlier.
 
     A current vanishes at t = 0 by symmetry but inherits the error of its density later, so both share the
     larger one.

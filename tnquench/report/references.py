@@ -6,8 +6,6 @@ from collections.abc import Iterable
 
 #: Key -> full citation. Only works the numbers rest on, or that a method is named after.
 REFERENCES: dict[str, str] = {
-    "barthel_2020": "T. Barthel and Y. Zhang, Optimized Lie-Trotter-Suzuki decompositions for two and three "
-    "non-commuting terms, Ann. Phys. 418, 168165 (2020).",
     "bertini_2016": "B. Bertini, M. Collura, J. De Nardis and M. Fagotti, Transport in out-of-equilibrium "
     "XXZ chains: "
     "exact profiles of charges and currents, Phys. Rev. Lett. 117, 207201 (2016).",
@@ -53,7 +51,7 @@ QUANTUM_KEYS: tuple[str, ...] = (
 )
 
 #: Behind the Suzuki-Trotter scheme of each order, and behind each method that cuts a bond.
-TROTTER_KEYS: dict[int, tuple[str, ...]] = {2: ("strang_1968",), 4: ("mclachlan_1995", "barthel_2020")}
+TROTTER_KEYS: dict[int, tuple[str, ...]] = {2: ("strang_1968",), 4: ("mclachlan_1995",)}
 CUT_KEYS: dict[str, tuple[str, ...]] = {"subspace": ("unfried_2023",)}
 
 #: Behind every prediction at Euler scale for a chain solved by the Bethe ansatz.

@@ -43,7 +43,10 @@ def budget_plate(fields: list[Comparison]) -> Plate:
     caption = "Root mean square over the points inside the light cone"
     if any(field.errors for field in fields):
         caption += ", sources in the order of their size at the end"
-    caption += ". Dashed grey: the rigorous bound on the truncation error, which holds without any estimate."
+    caption += (
+        ". Dashed grey: the rigorous bound on what the cuts of the real-time evolution can do, which needs "
+        "no estimate (start and step are not in it)."
+    )
     if any(field.deviation is not None and field.errors for field in fields):
         caption += " Where the black line leaves the shaded sum, it is the theory that fails."
     return Plate("budget", "Error budget", caption, panels, columns=2)

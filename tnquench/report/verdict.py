@@ -183,7 +183,7 @@ def _nothing_resolved(field: Comparison) -> str:
     assert field.deviation is not None
     assert field.numerical is not None
     time, place = largest(field.deviation, field.judged)
-    claim = float(np.max((np.abs(field.deviation) + field.numerical)[field.judged]))
+    claim = float(np.max((np.abs(field.deviation) + field.resolve_at * field.numerical)[field.judged]))
     return (
         f"No deviation is resolved: {theory} agrees with the {said} within {plain(field.resolve_at)} times "
         "the numerical "
