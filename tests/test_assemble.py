@@ -6,6 +6,7 @@ from collections.abc import Callable
 from dataclasses import dataclass, replace
 from math import cos, exp, inf, pi, sqrt, tanh
 from pathlib import Path
+from typing import Any
 
 import numpy as np
 import pytest
@@ -28,7 +29,8 @@ from tnquench.dataset.reader import open_run
 from tnquench.hydro.prediction import Prediction
 from tnquench.model.chain import start_terms, xxz_chain
 from tnquench.observables.quench import Quench, simulate
-from tnquench.run import REPEATS, SILENT, TIGHTENING, Watch, quantum_side, run
+from tnquench.outcome import QuantumSide
+from tnquench.run import SILENT, Watch, quantum_side, run
 
 COUPLING = 1.7
 #: Tables without any symmetry.
@@ -348,6 +350,7 @@ def test_smooth_prediction_is_free_streaming(name: str) -> None:
         anisotropy=0.0,
         evolution="until = 3.0\nevery = 3.0\ndiscarded_weight = 1e-9",
     )
+    tolerance = 2e-4 if "tables" in name else 1e-7  # a table has kinks at the ends, where it goes on flat
     prediction = predicted(config)
     assert prediction.method == "characteristics"
     for observable in OBSERVABLE_PLACES:
@@ -358,7 +361,7 @@ def test_smooth_prediction_is_free_streaming(name: str) -> None:
             error = np.abs(prediction.fields[observable][index, inside] - exact)
             claimed = prediction.grid_error[observable][index, inside]
             assert np.all(error <= claimed + 1e-7), observable
-            print(name, observable, time, error.max(), claimed.max())
+            assert error.max() < tolerance, observable
 
 
 BUMP = '{shape="bump", base=1.0, height=-0.5, width=2.0}'
@@ -369,15 +372,15 @@ BUMP = '{shape="bump", base=1.0, height=-0.5, width=2.0}'
     [
         ({"levels": "[]"}, "no hydrodynamic level"),
         ({"anisotropy": 0.3}, "0.3"),
+        ({"sites": 3}, "3 sites are no hydrodynamic system"),
         ({"beta_field": BUMP}, "sharp step beside a smooth profile"),
         ({"beta": BUMP, "beta_field": SHARP_FIELD}, "sharp step beside a smooth profile"),
         ({"beta_field": '{shape="step", left=0.0, right=1.0, width=2.0}'}, "sharp step beside a smooth"),
     ],
     ids=str,
 )
-def test_reasons_against_a_prediction(changes: dict[str, str], reason: str) -> None:
-    settings = {"beta": SHARP_BETA} | changes
-    config = config_of(**settings)  # type: ignore[arg-type]
+def test_reasons_against_a_prediction(changes: dict[str, Any], reason: str) -> None:
+    config = config_of(**({"beta": SHARP_BETA} | changes))
     assert reason in no_prediction(config)
     assert build_prediction(config) == (None, no_prediction(config))
 
@@ -456,14 +459,8 @@ def test_an_accuracy_is_met_and_said_to_be(tmp_path: Path) -> None:
     assert "1.0e-04 asked" in event["detail"]
 
 
-def test_a_missed_accuracy_tightens_the_weight_and_is_admitted() -> None:
-    """A step held far too long: every repeat cuts less, none can help, and the last one says so."""
-    config = config_of(
-        beta=SHARP_BETA,
-        sites=6,
-        evolution="until = 2.0\nevery = 1.0\naccuracy = 1e-6\ntime_step = 0.58",
-        levels="[]",
-    )
+def missed(config: Config) -> tuple[QuantumSide, list[Quench]]:
+    """The quantum side of a config whose accuracy is out of reach, and every main quench that was tried."""
     mains: list[Quench] = []
 
     def stage(name: str, quench: Quench | None) -> None:
@@ -472,10 +469,45 @@ def test_a_missed_accuracy_tightens_the_weight_and_is_admitted() -> None:
             mains.append(quench)
 
     side = quantum_side(config, threads=1, watch=Watch(stage=stage, progress=SILENT.progress))
-    assert len(mains) == REPEATS + 1 == 3
-    weights = np.array([main.discarded_weight for main in mains])
-    np.testing.assert_allclose(weights[:-1] / weights[1:], TIGHTENING)
-    assert {main.steps for main in mains} == {2}
     assert side.quench == mains[-1]
     assert [event["kind"] for event in side.events] == ["accuracy_missed"]
-    assert f"weight {weights[-1]:.1e}, time step 0.5" in str(side.events[0]["detail"])
+    chosen = f"weight {mains[-1].discarded_weight:.1e}, time step {mains[-1].time_step:.3g}"
+    assert chosen in str(side.events[0]["detail"])
+    return side, mains
+
+
+def hard_config(extra: str = "") -> Config:
+    return config_of(
+        beta=SHARP_BETA,
+        beta_field=SHARP_FIELD,
+        evolution=f"until = 1.0\nevery = 0.5\naccuracy = 1e-9\n{extra}",
+        levels="[]",
+    )
+
+
+def test_a_step_held_too_long_is_admitted_at_once() -> None:
+    """No weight mends a step that the config holds: nothing is repeated, and the event names the step."""
+    side, mains = missed(hard_config("time_step = 0.25"))
+    assert [main.time_step for main in mains] == [0.25]
+    assert "mostly time step" in str(side.events[0]["detail"])
+
+
+@pytest.mark.parametrize(
+    ("pilots", "weights", "steps"),
+    [
+        ((1e-6, 0.05), (1e-6, 1e-7, 1e-8), (0.05, 0.05, 0.05)),
+        ((1e-15, 0.25), (1e-15, 1e-15, 1e-15), (0.25, 0.125, 0.0625)),
+    ],
+    ids=["weight", "step"],
+)
+def test_repeats_mend_the_largest_source(
+    monkeypatch: pytest.MonkeyPatch,
+    pilots: tuple[float, float],
+    weights: tuple[float, ...],
+    steps: tuple[float, ...],
+) -> None:
+    """Pilot runs that chose badly: each repeat cuts less, or steps less, and the last one is admitted."""
+    monkeypatch.setattr("tnquench.run.choose_settings", lambda *_, **__: pilots)
+    _, mains = missed(hard_config())
+    assert [main.discarded_weight for main in mains] == pytest.approx(weights)
+    assert [main.time_step for main in mains] == pytest.approx(steps)
