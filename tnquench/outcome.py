@@ -16,7 +16,7 @@ import numpy as np
 
 from tnquench.assemble import budget_settings, sample_times, start_reach
 from tnquench.budget.assess import PredictedLevel, assess
-from tnquench.budget.verdict import SOURCE_KINDS, ObservableBudget
+from tnquench.budget.verdict import SHARP_REACH, SOURCE_KINDS, ObservableBudget
 from tnquench.config.document import effective_toml
 from tnquench.config.schema import Config
 from tnquench.conventions import ERROR_SOURCES, Reals, bond_positions, site_positions
@@ -209,10 +209,14 @@ def _outlook(config: Config, prediction: Prediction | None, absence: str) -> lis
     chain."""
     if prediction is None:
         return [{"kind": "no_prediction", "detail": absence}]
-    arrival = 0.5 * (config.chain.sites - 1) / max(abs(edge) for edge in prediction.light_cone)
+    rim = start_reach(config) - SHARP_REACH
+    if not np.isfinite(rim):
+        return []
+    way = max(0.5 * (config.chain.sites - 1) - rim, 0.0)
+    arrival = way / max(abs(edge) for edge in prediction.light_cone)
     if arrival >= config.evolution.until:
         return []
-    detail = f"the fastest excitations from the middle reach the ends at t = {arrival:.3g}"
+    detail = f"the fastest excitations from where the start varies reach the ends at t = {arrival:.3g}"
     return [{"kind": "light_cone_at_end", "detail": detail}]
 
 

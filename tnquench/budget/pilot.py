@@ -67,7 +67,7 @@ class _TimeIsUpError(Exception):
 
 @dataclass
 class _Pilot:
-    """What a pilot run showed: dimension of each bond (bond,) at each sample, and every half layer's cost."""
+    """What a pilot run showed after every half layer: time, dimension of each bond (bond,), and the cost."""
 
     times: list[float]
     bonds: list[Reals]
@@ -79,7 +79,7 @@ class _Pilot:
 def forecast_quench(quench: Quench, *, companions: dict[str, Quench], seconds: float = 15.0) -> Forecast:
     """Estimate the cost of a quench and its companions from two short pilot runs of loose weight.
 
-    seconds : most that the second pilot may take; where it stops early its bonds are extrapolated in time
+    seconds : most that each pilot may take; where one stops early its bonds are extrapolated in time
     """
     began = time.perf_counter()
     weights = [

@@ -109,12 +109,12 @@ def time_step(*, fine: Reals, coarse: Reals, step_ratio: float, order: int) -> R
 def length(*, long: Reals, short: Reals, noise: Reals) -> Reals:
     """Estimate the influence of the ends from a run of equal weight on a shorter chain with the same centre.
 
-    long : (time, place); short : (time, fewer places); noise : truncation error of these two runs at each point
-    of the long chain, below which a difference says nothing. A point of the long chain takes the difference
-    found in the short chain at the same distance from the end (the innermost one for points further inside).
-    Where the profile is flat up to the ends that is what the long chain's end does too; where it still varies
-    there it is an order of magnitude. Differences oscillate in space and an end, once felt, stays felt: the
-    largest of the neighbours and of all earlier times counts.
+    long : (time, place); short : (time, fewer places); noise : truncation error of these two runs at each
+    point of the long chain, below which a difference says nothing. A point of the long chain takes the
+    difference found in the short chain at the same distance from the end (the innermost one for points
+    further inside). Where the profile is flat up to the ends that is what the long chain's end does too;
+    where it still varies there it is an order of magnitude. Differences oscillate in space and an end, once
+    felt, stays felt: the largest of the neighbours and of all earlier times counts.
     """
     missing = (long.shape[1] - short.shape[1]) // 2
     inner = slice(missing, missing + short.shape[1])
