@@ -4,8 +4,8 @@ Run: python -m tests.benchmarks.engine_against_quimb [until] [anisotropy]   (6 a
 
 xxz, 64 sites, beta 0.5 | 2 coupled, discarded weight 1e-10, order 2, dt = 0.1. Both sides start from the same
 prepared state and use the same real gates and the same relative discarded weight; no bond floor, so that both
-cut alike. quimb gets the real vector of sigma with local dimension 4. Absolute times depend on the machine; the
-ratios are the result.
+cut alike. quimb gets the real vector of sigma with local dimension 4.
+Absolute times depend on the machine; the ratios are the result.
 """
 
 from __future__ import annotations
