@@ -199,6 +199,7 @@ def test_numbers_of_the_evolution_arrive() -> None:
     assert (quench.every, quench.samples, quench.steps, quench.trotter_order) == (0.5, 6, 5, 2)
     assert (quench.bond_ceiling, quench.cutting, quench.discarded_weight) == (77, "svd", 1e-9)
     assert quench.preparation_distance < sqrt(1e-9)
+    assert quench.preparation_weight < 1e-9
     assert build_quench(config, weight=1e-9, time_step=5.0).steps == 2, "the coarser companion needs a step"
     settings = budget_settings(config, quench)
     assert settings.step_ratio == pytest.approx(5 / 2)
@@ -364,6 +365,25 @@ def test_smooth_prediction_is_free_streaming(name: str) -> None:
             assert error.max() < tolerance, observable
 
 
+def test_a_step_in_the_field_alone_joins_halves() -> None:
+    uniform = '{shape="uniform", value=0.4}'
+    prediction = predicted(config_of(beta=uniform, beta_field=SHARP_FIELD, sites=16))
+    assert prediction.method.startswith("joined halves")
+
+
+def test_a_table_goes_on_flat_beyond_its_ends() -> None:
+    """The end sites lie half a spacing outside the bonds: beta there is that of the last bond."""
+    _, beta, beta_field, _, _ = SMOOTH["tables on a line"]
+    prediction = predicted(
+        config_of(beta=beta, beta_field=beta_field, sites=RAMP_SITES, anisotropy=0.0, evolution=EVOLUTION)
+    )
+    for end in (0, -1):
+        exact = infinite_chain(
+            beta=BETA_RAMP[end], field=FIELD_RAMP[end] / BETA_RAMP[end], coupling=COUPLING
+        )["magnetisation"]
+        assert prediction.fields["charge_density"][0, end] == pytest.approx(exact, abs=1e-7)
+
+
 BUMP = '{shape="bump", base=1.0, height=-0.5, width=2.0}'
 
 
@@ -445,7 +465,10 @@ def test_an_accuracy_is_met_and_said_to_be(tmp_path: Path) -> None:
         ),
         encoding="utf-8",
     )
-    result = open_run(run(file, into=tmp_path / "result"))
+    stages: list[str] = []
+    watch = Watch(stage=lambda name, _: stages.append(name), progress=SILENT.progress)
+    result = open_run(run(file, into=tmp_path / "result", watch=watch))
+    assert stages.count("main run") == 1, "nothing is repeated once the accuracy is met"
     exact = exact_of(case, np.array([0.0, 0.5, 1.0]))
     for name in OBSERVABLE_PLACES:
         assert np.abs(result.quantum[name].to_numpy() - exact[name]).max() <= 1e-4, name
