@@ -23,7 +23,7 @@ class CutLedger:
     """What the cuts have cost since the start.
 
     discarded_weight : sum of discarded weights of each bond, shape (bond,)
-    angle            : sum of arcsin sqrt(w) of each bond, shape (bond,)
+    angle            : sum of arcsin sqrt(w) of each bond, w with its rounding, shape (bond,)
     ceiling_cuts     : cuts of each bond at which the bond ceiling kept the weight above its target, shape
     (bond,)
     fallbacks        : singular value decompositions that needed the slower driver
