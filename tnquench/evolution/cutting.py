@@ -23,7 +23,7 @@ METHODS = ("subspace", "gram", "svd")
 #: Below this relative weight Gram matrices and differences of norms drown in rounding (1e-16 a term).
 GRAM_FLOOR = 1e-12
 
-#: Fewest singular values kept whatever the weight: below it a cut costs the same, and in a nearly uniform
+#: Fewest singular values kept whatever the weight: below it a cut costs little less, and in a nearly uniform
 #: region a few values hold everything, so that errors of cuts at any weight would be alike and companions
 #: would not see them.
 BOND_FLOOR = 32
@@ -52,7 +52,7 @@ class Cut:
     left : (rows, kept) isometries; right : (kept, columns), of unit norm together
     discarded_weight : lost squared norm as a fraction of the whole
     norm : norm of the uncut tensor
-    uncertainty : rounding of the discarded weight where it is a difference of norms
+    uncertainty : rounding of the discarded weight where it comes from norms or Gram matrices
     fallbacks : number of singular value decompositions that needed the slower driver
     """
 
@@ -71,7 +71,7 @@ class CutRule:
     weight_target : squared norm that one cut may lose, relative
     bond_ceiling  : most singular values kept; when it binds the lost weight exceeds the target
     bond_floor    : fewest singular values kept (as long as they are not rounding), whatever the target: small
-                    bonds cost nothing, and cutting them leaves errors that no longer shrink smoothly with the
+                    bonds cost little, and cutting them leaves errors that no longer shrink smoothly with the
                     weight
     method        : `subspace`, `gram` or `svd`
     random        : source of the directions that `subspace` adds to its warm start
@@ -129,7 +129,7 @@ def cut(blocks: list[Reals], rule: CutRule, *, guess: list[Reals] | None = None)
     else:
         spectra, outside = _by_subspace(blocks, guess, rule, total)
     result = _keep_largest(spectra, rule, total=total, outside=outside, fallbacks=fallbacks)
-    if method == "subspace" and guess is not None:
+    if method != "svd":
         result.uncertainty = float(np.finfo(np.float64).eps) * len(blocks)
     return result
 

@@ -164,11 +164,8 @@ def _start_error(meter: LocalObservables, start: Preparation) -> dict[str, float
 
 
 def largest_norm(operators: Sequence[Operator]) -> float:
-    """Return the largest operator norm of an observable's operators; equal operators are diagonalised
-    once."""
-    return max(
-        (operator_norm(operator) for operator in operators[: min(4, len(operators))] if operator), default=0.0
-    )
+    """Return the largest operator norm of an observable's operators, 0 if none acts anywhere."""
+    return max((operator_norm(operator) for operator in operators if operator), default=0.0)
 
 
 def _progress_reporter(
