@@ -165,3 +165,12 @@ def test_small_words() -> None:
     assert measured(0.9812, 0.0234) == "0.98 ± 0.02"
     assert [percent(1.0), percent(0.999), percent(0.001), percent(0.0)] == ["100%", "99%", "under 1%", "0%"]
     assert [duration(4.2), duration(200.0), duration(18_600.0)] == ["4.2 s", "3 min 20 s", "5 h 10 min"]
+
+
+def test_power_law_admits_a_bent_curve() -> None:
+    """A fall that levels off fits some line in the logarithms; the two halves of the fit betray it."""
+    times = np.linspace(0.0, 12.0, 25)
+    values = np.divide(1.0, np.minimum(times, 7.0), out=np.zeros(25), where=times > 0)
+    law = power_law(times, values, np.ones(25, dtype=np.bool_))
+    assert law is not None
+    assert law.spread > 0.25

@@ -17,6 +17,8 @@ FIT_SAMPLES = 5
 EXPONENT_ERROR = 0.25
 #: Nor is one that differs by more than twice this between the early and the late half of the fit.
 SLOPE_SPREAD = 0.25
+#: Exponents this small, uncertainty included, describe something that stays as it is.
+STEADY = 0.15
 
 
 @dataclass(frozen=True)
@@ -171,10 +173,13 @@ def _trend(field: Comparison, resolved: Verdicts) -> str:
         return ""
     span = f"{plain(law.first)} ≤ t ≤ {plain(law.last)}"
     norm = "its root mean square over the light cone"
-    if abs(law.exponent) < max(0.1, 2 * law.error):
+    uncertainty = max(law.error, law.spread, 0.01)
+    if abs(law.exponent) + uncertainty < STEADY:
         return f", and {norm} stays about the same over {span}"
+    if abs(law.exponent) < 2 * uncertainty:
+        return ""  # neither steady nor a law
     verb, sign = ("falls", "1/t") if law.exponent > 0 else ("grows", "t")
-    power = measured(abs(law.exponent), max(law.error, law.spread, 0.01))
+    power = measured(abs(law.exponent), uncertainty)
     return f", and {norm} {verb} like {sign}ᵖ with p = {power} (fit over {span})"
 
 
