@@ -8,9 +8,10 @@ import pytest
 from tests.oracles import exact_chain
 from tnquench.conventions import bond_positions, site_positions
 from tnquench.model import profiles
-from tnquench.model.chain import share_among_bonds, start_terms, xxz_chain
+from tnquench.model.chain import share_among_bonds, start_terms
 from tnquench.model.grading import derive_grading
 from tnquench.model.pauli import X, Y, Z, add, commutator, dense, multiply, operator_norm, scale, string
+from tnquench.model.spins import xxz_chain
 
 SITES = 5
 
@@ -48,7 +49,8 @@ def test_operator_norm_of_a_bond_is_the_singlet_energy() -> None:
 def test_site_terms_keep_their_sum_when_shared_among_bonds() -> None:
     chain = xxz_chain(sites=4, anisotropy=1.0)
     fields = tuple(
-        scale(charge, weight) for charge, weight in zip(chain.charges, (1.0, -2.0, 3.0, 0.5), strict=True)
+        scale(charge, weight)
+        for charge, weight in zip(chain.charges["charge_density"], (1.0, -2.0, 3.0, 0.5), strict=True)
     )
     shared = share_among_bonds(fields)
     assert dict(add(*shared)) == pytest.approx(dict(add(*fields)))
@@ -57,7 +59,7 @@ def test_site_terms_keep_their_sum_when_shared_among_bonds() -> None:
 
 def test_start_exponent_lowers_the_energy_of_spins_along_the_field() -> None:
     chain = xxz_chain(sites=2, anisotropy=0.0)
-    (term,) = start_terms(chain, beta=[2.0], beta_charge=[1.0, 0.0])
+    (term,) = start_terms(chain, beta=[2.0], potentials={"charge_density": [1.0, 0.0]})
     assert term[string((0, Z))] == pytest.approx(-0.5)
     assert term[string((0, X), (1, X))] == pytest.approx(0.5)
 
@@ -66,7 +68,7 @@ def test_grading_has_four_sectors_without_and_two_with_a_field() -> None:
     chain = xxz_chain(sites=6, anisotropy=0.5)
     plain = derive_grading(chain.bond_terms)
     assert (plain.sectors, plain.multiplicity) == (4, 1)
-    along_z = derive_grading((*chain.bond_terms, *chain.charges))
+    along_z = derive_grading((*chain.bond_terms, *chain.charges["charge_density"]))
     assert (along_z.sectors, along_z.multiplicity) == (2, 2)
     assert along_z.charge_of[0] == along_z.charge_of[Z] == 0
     assert along_z.charge_of[X] == along_z.charge_of[Y] == 1

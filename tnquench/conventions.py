@@ -4,7 +4,7 @@ hbar = k_B = lattice spacing = 1. Energies are in units of the coupling that the
 inverse. Sites i = 0..L-1 sit at x_i = i - (L-1)/2; bond j joins sites j and j+1 and sits at x_j = j + 1/2 -
 (L-1)/2. Ends are open. Spin operators are S = sigma/2. Currents follow from the continuity equations
 dq_i/dt = J_{i-1} - J_i (charge current J on bonds) and dh_j/dt = K_j - K_{j+1} (energy current K on sites,
-K_j = i[h_{j-1}, h_j], zero at both ends).
+K_j = i[h_{j-1}, h_j] where bond terms reach no farther than their bond, zero at both ends).
 """
 
 from __future__ import annotations
@@ -15,12 +15,23 @@ from numpy.typing import NDArray
 Reals = NDArray[np.float64]
 Integers = NDArray[np.int64]
 
-#: Where each observable lives: on the sites or on the bonds of the chain.
+#: Where each observable lives: on the sites or on the bonds of the chain. A run holds those of its model.
 OBSERVABLE_PLACES: dict[str, str] = {
     "energy_density": "bond",
     "energy_current": "site",
     "charge_density": "site",
     "charge_current": "bond",
+    "magnetisation": "site",
+    "spin_current": "bond",
+    "double_occupancy": "site",
+    "transverse_magnetisation": "site",
+}
+
+#: The current that carries each conserved density.
+CURRENTS: dict[str, str] = {
+    "energy_density": "energy_current",
+    "charge_density": "charge_current",
+    "magnetisation": "spin_current",
 }
 
 #: Order of the error sources along the `source` axis of every budget.

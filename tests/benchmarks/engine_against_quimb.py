@@ -25,7 +25,8 @@ from tnquench.evolution.cutting import CutRule
 from tnquench.evolution.preparation import prepare
 from tnquench.evolution.real_time import evolve
 from tnquench.evolution.trotter import SCHEMES
-from tnquench.model.chain import start_terms, xxz_chain
+from tnquench.model.chain import start_terms
+from tnquench.model.spins import xxz_chain
 from tnquench.model.grading import derive_grading
 from tnquench.model.profiles import step
 from tnquench.observables.local import LocalObservables

@@ -1,63 +1,84 @@
-"""A spin chain as its bond terms in Pauli strings; every local observable follows from them.
+"""A chain as its bond terms in Pauli strings; every local observable follows from them.
 
-Currents are never written by hand: the continuity equations of `conventions` give K_j = i[h_{j-1}, h_j] for
-the energy and, since q_i + q_{i+1} commutes with h_i, J_i = -i[h_i, q_i] for the charge.
+Currents are never written by hand. The flow of the energy through site j is what reaches the bonds right of
+it, K_j = sum_{l >= j} dh_l/dt = sum_{k < j <= l} i[h_k, h_l], and likewise J_i = i[H, sum_{l > i} q_l] for a
+charge: the continuity equations of `conventions`, for terms of any reach.
 """
 
 from __future__ import annotations
 
-from dataclasses import dataclass
+from collections.abc import Mapping, Sequence
+from dataclasses import dataclass, field
+from functools import cached_property
 
-from tnquench.model.pauli import Operator, X, Y, Z, add, commutator, scale, string
+from tnquench.conventions import CURRENTS
+from tnquench.model.pauli import Operator, add, commutator, scale, support
 
 
 @dataclass(frozen=True)
 class Chain:
-    """Bond terms h_j, j = 0..L-2, with sum_j h_j = H, and the conserved charge's densities q_i, i =
-    0..L-1."""
+    """An open chain and what is measured on it.
+
+    sites      : number L of sites; qubits_per_site : qubits of each, site i holds those from i times that on
+    bond_terms : h_j, j = 0..L-2, with sum_j h_j = H
+    charges    : conserved densities q_i, i = 0..L-1, by the observable's name (a key of `CURRENTS`); each
+                 bond term conserves them
+    densities  : further local observables on sites, by name; nothing carries them
+    """
 
     sites: int
     bond_terms: tuple[Operator, ...]
-    charges: tuple[Operator, ...]
+    charges: Mapping[str, tuple[Operator, ...]] = field(default_factory=dict)
+    densities: Mapping[str, tuple[Operator, ...]] = field(default_factory=dict)
+    qubits_per_site: int = 1
+
+    @cached_property
+    def reach(self) -> int:
+        """Largest distance of two bonds whose terms share a site; a bond term may reach beyond its bond."""
+        spans = [
+            (bond, *(qubit // self.qubits_per_site for qubit in support(term)))
+            for bond, term in enumerate(self.bond_terms)
+            if term
+        ]
+        leftwards = max((bond - first for bond, first, _ in spans), default=0)
+        rightwards = max((last - bond for bond, _, last in spans), default=1)
+        return leftwards + rightwards
 
     def energy_current(self, site: int) -> Operator:
-        """Return K_j = i[h_{j-1}, h_j] on `site` j; zero on both ends."""
-        if site in (0, self.sites - 1):
-            return {}
-        return scale(commutator(self.bond_terms[site - 1], self.bond_terms[site]), 1j)
+        """Return K_j on `site` j, the energy that flows from the bonds left of it to those right of it."""
+        return add(
+            *(
+                scale(commutator(self.bond_terms[before], self.bond_terms[after]), 1j)
+                for before in range(max(site - self.reach, 0), site)
+                for after in range(site, min(before + self.reach + 1, self.sites - 1))
+            )
+        )
 
-    def charge_current(self, bond: int) -> Operator:
-        """Return J_i = -i[h_i, q_i] on `bond` i, the flow of charge from site i to site i + 1."""
-        return scale(commutator(self.bond_terms[bond], self.charges[bond]), -1j)
+    def charge_current(self, name: str, bond: int) -> Operator:
+        """Return J_i on `bond` i, the flow of the charge `name` from the sites up to i to those beyond."""
+        near = range(max(bond - self.reach, 0), min(bond + self.reach + 1, self.sites - 1))
+        beyond = self.charges[name][bond + 1 : bond + 2 + 2 * self.reach]
+        return add(
+            *(
+                scale(commutator(self.bond_terms[place], charge), 1j)
+                for place in near
+                for charge in beyond[: place + self.reach - bond]
+            )
+        )
 
     def observables(self) -> dict[str, tuple[Operator, ...]]:
         """Return every local observable by its name in the dataset, one operator a site or bond."""
-        return {
+        found = {
             "energy_density": self.bond_terms,
             "energy_current": tuple(self.energy_current(site) for site in range(self.sites)),
-            "charge_density": self.charges,
-            "charge_current": tuple(self.charge_current(bond) for bond in range(self.sites - 1)),
         }
+        for name, densities in self.charges.items():
+            found[name] = densities
+            found[CURRENTS[name]] = tuple(self.charge_current(name, bond) for bond in range(self.sites - 1))
+        return found | dict(self.densities)
 
 
-def xxz_chain(*, sites: int, anisotropy: float, coupling: float = 1.0) -> Chain:
-    """Return the chain h_j = J [SxSx + SySy + D SzSz] with S = sigma/2 and charge q_i = S^z_i.
-
-    sites : number L of sites, at least 2; anisotropy : D; coupling : J, the unit of energy.
-    """
-    quarter = 0.25 * coupling
-    bonds = tuple(
-        add(
-            {string((j, X), (j + 1, X)): quarter},
-            {string((j, Y), (j + 1, Y)): quarter},
-            scale({string((j, Z), (j + 1, Z)): quarter}, anisotropy),
-        )
-        for j in range(sites - 1)
-    )
-    return Chain(sites=sites, bond_terms=bonds, charges=tuple({string((i, Z)): 0.5} for i in range(sites)))
-
-
-def share_among_bonds(site_terms: tuple[Operator, ...]) -> tuple[Operator, ...]:
+def share_among_bonds(site_terms: Sequence[Operator]) -> tuple[Operator, ...]:
     """Spread on-site terms over the bonds: half to each adjacent bond, wholly to the only bond at an end.
 
     site_terms : one operator a site (L of them); returns one operator a bond (L - 1), with the same sum.
@@ -73,19 +94,24 @@ def share_among_bonds(site_terms: tuple[Operator, ...]) -> tuple[Operator, ...]:
 
 
 def start_terms(
-    chain: Chain, *, beta: list[float], beta_charge: list[float] | None = None
+    chain: Chain,
+    *,
+    beta: Sequence[float],
+    potentials: Mapping[str, Sequence[float]] | None = None,
+    energy: Sequence[Operator] | None = None,
 ) -> tuple[Operator, ...]:
     """Return k_j with sum_j k_j = K of the start rho_0 = exp(-K)/Z, one operator a bond.
 
-    beta : inverse temperature of each bond (L - 1); beta_charge : product of inverse temperature and field
-    (or chemical potential) at each site (L), which lowers the energy: K = sum_j beta_j h_j - sum_i (beta h)_i
-    q_i.
+    beta : inverse temperature of each bond (L - 1)
+    potentials : for each charge, by name, the product of inverse temperature and field or chemical potential
+    at each site (L), which lowers the energy: K = sum_j beta_j h_j - sum_i (beta h)_i q_i
+    energy : the h_j of the start where they are not those of H
     """
     thermal = [
         scale(term, inverse_temperature)
-        for term, inverse_temperature in zip(chain.bond_terms, beta, strict=True)
+        for term, inverse_temperature in zip(energy or chain.bond_terms, beta, strict=True)
     ]
-    if beta_charge is None:
-        return tuple(thermal)
-    fields = tuple(scale(charge, -value) for charge, value in zip(chain.charges, beta_charge, strict=True))
-    return tuple(add(term, field) for term, field in zip(thermal, share_among_bonds(fields), strict=True))
+    for name, values in (potentials or {}).items():
+        fields = [scale(charge, -value) for charge, value in zip(chain.charges[name], values, strict=True)]
+        thermal = [add(term, share) for term, share in zip(thermal, share_among_bonds(fields), strict=True)]
+    return tuple(thermal)

@@ -37,6 +37,11 @@ class Grading:
         """Number of local operators that share a charge."""
         return int(self.members.shape[1])
 
+    @property
+    def qubits_per_site(self) -> int:
+        """Number of qubits of one site."""
+        return (len(self.charge_of).bit_length() - 1) // 2
+
 
 def string_charge(term: PauliString, *, qubits_per_site: int = 1) -> int:
     """Return the XOR over all sites of the local operators of a Pauli string: its charge before any
