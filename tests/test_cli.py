@@ -118,16 +118,11 @@ BAD_LINES = [
     (("run", "a.toml", "--threads", "two"), "Invalid value for '--threads'"),
     (("run", "a.toml", "--into"), "--into"),
     (("forecast", "a.toml", "--into", "x"), "No such option: --into"),
-    (("thermo", "xxz", "--beta", "1"), "Missing option '--anisotropy'"),
-    (("thermo", "ising", *THERMO[2:]), '"ising": not available in this version; available: "xxz"'),
-    (("thermo", "xyz", *THERMO[2:]), '"xyz": no such model; available: "xxz"'),
-    ((*THERMO[:3], "0.6", *THERMO[4:]), "the nearest are 0.5 and 0.707106781187"),
-    ((*THERMO[:3], "nan", *THERMO[4:]), "anisotropy nan is not supported"),
-    ((*THERMO[:5], "-1"), "-1.0 is not positive"),
-    ((*THERMO[:5], "0"), "0.0 is not positive"),
+    (("thermo", "xyz", *THERMO[2:]), '"xyz": no such model; available: xxz, ising, fermion, hubbard'),
+    ((*THERMO[:3], "nan", *THERMO[4:]), "nan is not a finite number"),
     ((*THERMO[:5], "inf"), "inf is not a finite number"),
-    ((*THERMO, "--field", "nan"), "nan is not a finite number"),
-    ((*THERMO, "--coupling", "0"), "0.0 is not positive"),
+    ((*THERMO[:5], "1:2"), "1:2 is neither a number nor FROM:TO:COUNT"),
+    ((*THERMO, "--field", "much"), "'much' is not a number"),
 ]
 
 
@@ -178,7 +173,8 @@ def test_settings_page_goes_to_standard_output() -> None:
 @pytest.mark.parametrize("file", sorted(CONFIGS.glob("*.toml")), ids=lambda file: file.stem)
 def test_checked_config_is_printed_as_toml_that_means_the_same(file: Path) -> None:
     answer = call("check", file)
-    assert (answer.code, answer.err) == (0, "")
+    assert answer.code == 0
+    assert answer.err == "" or answer.err.startswith(f"{file}: without a prediction: ")
     assert read_config(answer.out, subject="printed") == load_config(file)
 
 

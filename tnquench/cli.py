@@ -7,7 +7,6 @@ program, 2 bad input, 4 a check whose answer is no, 130 interrupted.
 from __future__ import annotations
 
 import json
-import math
 import os
 import sys
 import traceback
@@ -24,23 +23,20 @@ import typer
 from threadpoolctl import threadpool_limits
 
 from tnquench.assemble import no_prediction
-from tnquench.bethe.equilibrium import equilibrium
-from tnquench.bethe.strings import UnsupportedAnisotropy, supported_nu
+from tnquench.bethe.thermo import THERMO_MODELS
 from tnquench.config.document import effective_toml, settings_page
 from tnquench.config.load import load_config
-from tnquench.config.schema import LATER_CHOICES
 from tnquench.dataset.integrity import check_run
-from tnquench.errors import InputError, TnquenchError, VerdictNegative
+from tnquench.errors import TnquenchError, VerdictNegative
 from tnquench.report.page import write_report
 from tnquench.run import forecast, hydro, run
 from tnquench.terminal.cost import cost_numbers, cost_rows
 from tnquench.terminal.display import watching
 from tnquench.terminal.summary import show_findings
 from tnquench.terminal.table import aligned, equilibrium_rows
+from tnquench.terminal.thermo import Scan, answer_thermo, plot_scan, scan_rows
 
 PROGRAM = "tnquench"
-#: Largest beta times coupling of `thermo`; beyond it the solver meets the ground state to rounding.
-LARGEST_BETA = 1000.0
 
 #: A main run and its four companions: more processes would idle.
 MOST_THREADS = 5
@@ -61,34 +57,23 @@ app = typer.Typer(
 )
 
 
-def _number(value: float) -> float:
-    if not math.isfinite(value):
-        message = f"{value} is not a finite number"
-        raise typer.BadParameter(message)
-    return value
-
-
-def _positive(value: float) -> float:
-    if not _number(value) > 0.0:
-        message = f"{value} is not positive"
-        raise typer.BadParameter(message)
-    return value
-
-
 def _model(name: str) -> str:
-    if name != "xxz":
-        reason = "not available in this version" if name in LATER_CHOICES["chain.model"] else "no such model"
-        message = f'"{name}": {reason}; available: "xxz"'
+    if name not in THERMO_MODELS:
+        message = f'"{name}": no such model; available: {", ".join(THERMO_MODELS)}'
         raise typer.BadParameter(message)
     return name
 
 
-def _anisotropy(value: float) -> float:
+def _scan(text: str) -> Scan:
     try:
-        supported_nu(value)
-    except UnsupportedAnisotropy as refusal:
+        return Scan.parse(text)
+    except ValueError as refusal:
         raise typer.BadParameter(str(refusal)) from refusal
-    return value
+
+
+def _setting(meaning: str) -> Any:
+    """Return an option that takes a number or a scan."""
+    return typer.Option(help=meaning, parser=_scan, metavar="X", show_default=False)
 
 
 ConfigFile = Annotated[Path, typer.Argument(metavar="CONFIG", help="TOML file with the settings.")]
@@ -97,7 +82,6 @@ Threads = Annotated[
     int | None,
     typer.Option(metavar="N", min=1, help=f"Processes at once; default: one a core, at most {MOST_THREADS}."),
 ]
-Anisotropy = Annotated[float, typer.Option(help="D: 0 or ±cos(pi/nu), nu = 3..8.", callback=_anisotropy)]
 AsJson = Annotated[bool, typer.Option("--json", help="Print JSON.")]
 
 
@@ -155,28 +139,48 @@ def hydro_command(config: ConfigFile, into: Into = None) -> None:
     typer.echo(str(folder))
 
 
-@app.command("thermo", epilog=f"Example: {PROGRAM} thermo xxz --anisotropy 0.5 --beta 2 --field 0.1")
+@app.command("thermo", epilog=f"Example: {PROGRAM} thermo xxz --anisotropy 0.5 --beta 0.1:5:50")
 def thermo_command(
-    model: Annotated[str, typer.Argument(metavar="MODEL", help="Model of the chain: xxz.", callback=_model)],
-    anisotropy: Anisotropy,
-    beta: Annotated[float, typer.Option(help="Inverse temperature.", callback=_positive)],
-    field: Annotated[float, typer.Option(help="h of exp[-beta (H - h S^z)].", callback=_number)] = 0.0,
-    coupling: Annotated[float, typer.Option(help="J.", callback=_positive)] = 1.0,
+    model: Annotated[
+        str, typer.Argument(metavar="MODEL", help=f"{', '.join(THERMO_MODELS)}.", callback=_model)
+    ],
+    beta: Annotated[Scan | None, _setting("Inverse temperature.")] = None,
+    anisotropy: Annotated[Scan | None, _setting("D (xxz).")] = None,
+    coupling: Annotated[Scan | None, _setting("J (xxz, ising); default 1.")] = None,
+    transverse_field: Annotated[Scan | None, _setting("g (ising).")] = None,
+    hopping: Annotated[Scan | None, _setting("t_h (fermion, hubbard); default 1.")] = None,
+    repulsion: Annotated[Scan | None, _setting("V (fermion), U (hubbard).")] = None,
+    field: Annotated[Scan | None, _setting("h of exp[-beta (H - h S^z)] (xxz, hubbard).")] = None,
+    mu: Annotated[Scan | None, _setting("mu of exp[-beta (H - mu N)] (fermion, hubbard).")] = None,
     as_json: AsJson = False,
+    plot: Annotated[
+        Path | None, typer.Option(metavar="FILE", help="Save a plot of a scan: svg, pdf or png.")
+    ] = None,
 ) -> None:
-    """Print equilibrium values per site with their numerical errors, from the Bethe ansatz.
+    """Print equilibrium values per site with their numerical errors.
 
-    Energies are in the unit of the coupling. The energy is that of H without the field; the specific heat is
-    taken at fixed field.
+    X is a number, or FROM:TO:COUNT for a scan of one option. Energies are in the unit of J or t_h. The energy
+    is that of H without field and mu; the specific heat is taken at fixed field and mu. Magnetisation is that
+    of S^z, for ising of sigma^z; the susceptibility is its derivative by h (ising: by g; fermion: that of the
+    density by mu).
     """
-    if beta * coupling > LARGEST_BETA:
-        problem = f"--beta {beta:g}: beta times the coupling must be at most {LARGEST_BETA:g}"
-        subject = f"{PROGRAM} thermo"
-        raise InputError(subject, [problem])
+    options = {
+        "beta": beta, "anisotropy": anisotropy, "coupling": coupling, "transverse_field": transverse_field,
+        "hopping": hopping, "repulsion": repulsion, "field": field, "mu": mu,
+    }  # fmt: skip
     with threadpool_limits(1):
-        state = equilibrium(anisotropy=anisotropy, beta=beta, field=field, coupling=coupling)
-    heading = f"{model}, per site"
-    typer.echo(_as_json(state.as_dict()) if as_json else aligned(equilibrium_rows(state, heading=heading)))
+        found = answer_thermo(model, options)
+    if plot is not None:
+        plot_scan(found, plot)
+    for failure in found.failures:
+        typer.echo(f"{PROGRAM} thermo: {failure}", err=True)
+    if as_json:
+        typer.echo(_as_json(found.as_dict()))
+    elif found.scanned:
+        typer.echo(aligned(scan_rows(found)))
+    else:
+        unit = {"coupling": "J", "hopping": "t_h"}[THERMO_MODELS[model].scale]
+        typer.echo(aligned(equilibrium_rows(found.found[0], heading=f"{model}, per site", unit=unit)))
 
 
 @app.command("check", epilog=f"Example: {PROGRAM} check configs/demo.toml")

@@ -2,19 +2,16 @@
 
 from __future__ import annotations
 
-from collections.abc import Sequence
+from collections.abc import Mapping, Sequence
 from math import floor, log10
+from typing import Protocol
 
-from tnquench.bethe.equilibrium import KEYS, Equilibrium
-
-#: Units of the equilibrium quantities, J being the unit in which the coupling is given.
+#: Units of the equilibrium quantities, `{}` being the unit in which the coupling is given; others have none.
 EQUILIBRIUM_UNITS = {
-    "free_energy": "J",
-    "energy": "J",
-    "entropy": "1",
-    "magnetisation": "1",
-    "specific_heat": "1",
-    "susceptibility": "1/J",
+    "free_energy": "{}",
+    "energy": "{}",
+    "susceptibility": "1/{}",
+    "compressibility": "1/{}",
 }
 
 #: Most decimals shown: no double has more to tell.
@@ -28,14 +25,25 @@ def aligned(rows: Sequence[Sequence[str]]) -> str:
     return "\n".join(line.rstrip() for line in lines)
 
 
-def equilibrium_rows(state: Equilibrium, *, heading: str) -> list[tuple[str, ...]]:
-    """Return the equilibrium quantities as rows of name, value, error and unit, under a row of headings."""
+class Tabled(Protocol):
+    """Equilibrium quantities of one state, whatever its model: each `<key>` with its `<key>_error`."""
+
+    def as_dict(self) -> Mapping[str, float]:
+        """Return the quantities by name."""
+        ...
+
+
+def equilibrium_rows(state: Tabled, *, heading: str, unit: str = "J") -> list[tuple[str, ...]]:
+    """Return the equilibrium quantities as rows of name, value, error and unit, under a row of headings.
+
+    unit : symbol of the unit of energy
+    """
     numbers = state.as_dict()
     rows: list[tuple[str, ...]] = [(heading, " value", "error", "unit")]
-    for key in KEYS:
+    for key in (key for key in numbers if f"{key}_error" in numbers):
         value, error = numbers[key], numbers[f"{key}_error"]
-        digits = with_digits(value, error)
-        rows.append((key.replace("_", " "), digits, f"{error:.1e}", EQUILIBRIUM_UNITS[key]))
+        in_units = EQUILIBRIUM_UNITS.get(key, "1").format(unit)
+        rows.append((key.replace("_", " "), with_digits(value, error), f"{error:.1e}", in_units))
     return rows
 
 
@@ -43,4 +51,5 @@ def with_digits(value: float, error: float) -> str:
     """Return a value with all digits that its error leaves and one more; a minus sign or a blank in front."""
     if not 0.0 < error < 1.0:
         return f"{value: .15g}"
-    return f"{value: .{min(MOST_DECIMALS, 1 - floor(log10(error)))}f}"
+    decimals = min(MOST_DECIMALS, 1 - floor(log10(error)))
+    return f"{round(value, decimals) + 0.0: .{decimals}f}"  # adding zero takes the sign from a zero
