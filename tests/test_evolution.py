@@ -18,9 +18,10 @@ from tnquench.evolution.layers import CutLedger, apply_layer
 from tnquench.evolution.preparation import prepare
 from tnquench.evolution.real_time import evolve, steps_between
 from tnquench.evolution.trotter import SCHEMES, half_layers
-from tnquench.model.chain import Chain, start_terms, xxz_chain
+from tnquench.model.chain import Chain, start_terms
 from tnquench.model.grading import Grading, derive_grading
 from tnquench.model.profiles import step
+from tnquench.model.spins import xxz_chain
 from tnquench.observables.local import LocalObservables
 
 

@@ -1,4 +1,4 @@
-"""Half layers of gates applied by a sweep of the orthogonality centre, and the ledger of what the cuts cost.
+"""Layers of gates applied by a sweep of the orthogonality centre, and the ledger of what the cuts cost.
 
 The chain is in exact mixed canonical form at every cut, so each discarded weight is the true loss of squared
 norm and the angles arcsin sqrt(w) add up to a rigorous bound on the distance from the uncut state.
@@ -57,7 +57,7 @@ class CutLedger:
 def apply_layer(state: ChainState, gates: Mapping[int, Gate], rule: CutRule, ledger: CutLedger) -> None:
     """Apply gates on non-overlapping bonds in one sweep, from the end nearer to the centre to the other end.
 
-    gates : bond -> gate, all even or all odd bonds. The centre ends at the far end of the sweep.
+    gates : bond -> gate, on even bonds alone or odd bonds alone. The centre ends at the far end of the sweep.
     Raises StateError if the state no longer holds finite numbers.
     """
     last = state.sites - 1

@@ -13,7 +13,9 @@ from tnquench.evolution.chain_state import ChainState
 from tnquench.evolution.cutting import CutRule
 from tnquench.evolution.gates import Gate, real_time_gate
 from tnquench.evolution.layers import CutLedger, apply_layer
-from tnquench.evolution.trotter import TrotterScheme, half_layers
+from tnquench.evolution.splitting import LayerGates, plan, split
+from tnquench.evolution.trotter import TrotterScheme
+from tnquench.model.grading import Grading
 from tnquench.model.pauli import Operator
 
 
@@ -49,29 +51,28 @@ def evolve(
 ) -> Iterator[Moment]:
     """Yield the state at times 0, every, ..., samples * every; it is evolved in place.
 
-    terms : bond terms h_j of H; time_step : largest step, shortened so that whole steps fill `every`
-    after_layer : called after each half layer with the share of time passed, the state and the ledger
-    Raises StateError if the state no longer holds finite numbers.
+    terms : bond terms h_j of H, on one site, two neighbours, or sites i and i + 2; time_step : largest step,
+    shortened so that whole steps fill `every`
+    after_layer : called after each layer of gates with the time reached, counting all layers of a sampling
+    interval as equally long, the state and the ledger
+    Raises StateError if the state no longer holds finite numbers, ValueError for terms on other sites.
     """
     ledger = CutLedger.empty(state.sites)
     yield Moment(0.0, state, ledger)
     steps = steps_between(every=every, time_step=time_step)
-    layers = half_layers(scheme, steps)
-    known: dict[tuple[int, float], dict[int, Gate]] = {}
+    groups = split(terms, sites=state.sites, qubits_per_site=state.grading.qubits_per_site)
+    layers = plan(groups, scheme, steps)
+    gates = LayerGates(groups, state.grading, _exponential(state.grading, every / steps))
     for sample in range(samples):
-        for done, (parity, fraction) in enumerate(layers, start=1):
-            key = (parity, round(fraction, 14))
-            if key not in known:
-                known[key] = _layer_gates(terms, parity, fraction * every / steps, state)
-            apply_layer(state, known[key], rule, ledger)
+        for done, layer in enumerate(layers, start=1):
+            apply_layer(state, gates.of(layer), rule, ledger)
             if after_layer is not None:
                 after_layer((sample + done / len(layers)) * every, state, ledger)
         yield Moment((sample + 1) * every, state, ledger)
 
 
-def _layer_gates(terms: Sequence[Operator], parity: int, time: float, state: ChainState) -> dict[int, Gate]:
-    """Return the gates of one half layer."""
-    return {
-        bond: real_time_gate(terms[bond], time=time, first=bond, grading=state.grading)
-        for bond in range(parity, state.sites - 1, 2)
-    }
+def _exponential(grading: Grading, step: float) -> Callable[[Operator, int, float], Gate]:
+    """Return the function (term, first site, fraction of a step) -> real-time gate."""
+    return lambda term, first, fraction: real_time_gate(
+        term, time=fraction * step, first=first, grading=grading
+    )

@@ -1,18 +1,22 @@
-"""Suzuki-Trotter schemes as cited coefficients of alternating half layers."""
+"""Suzuki-Trotter schemes as cited coefficients of alternating layers, for two and more groups of terms.
+
+A palindrome a1 b1 a2 b2 ... of exponentials of two groups is the composition chi(alpha_1 h) chi*(alpha_2 h)
+chi(alpha_3 h) ... of the first-order step chi(h) = exp(h G_1) ... exp(h G_m), here with m = 2, and its
+adjoint chi*, with alpha_1 = a1, alpha_2 = b1 - alpha_1, alpha_3 = a2 - alpha_2, ... With the same alpha it
+has the same order for any number m of groups: R. I. McLachlan, SIAM J. Sci. Comput. 16, 151 (1995).
+"""
 
 from __future__ import annotations
 
 from dataclasses import dataclass
 from math import sqrt
 
-EVEN, ODD = 0, 1
-
 
 @dataclass(frozen=True)
 class TrotterScheme:
-    """One time step as a palindrome of half layers: even bonds first, then odd, alternating.
+    """One time step as a palindrome of layers of two groups of terms, the first group first, alternating.
 
-    order : order in the time step; coefficients : fractions of the step, even bonds at even places
+    order : order in the time step; coefficients : fractions of the step, the first group at even places
     source : where the coefficients come from
     """
 
@@ -40,19 +44,25 @@ SCHEMES: dict[int, TrotterScheme] = {
 }
 
 
-def half_layers(scheme: TrotterScheme, steps: int) -> list[tuple[int, float]]:
-    """Return the half layers (parity of their bonds, fraction of a step) of `steps` steps, adjacent ones
-    merged.
+def half_layers(scheme: TrotterScheme, steps: int, *, groups: int = 2) -> list[tuple[int, float]]:
+    """Return the layers (group of terms, fraction of a step) of `steps` steps, adjacent ones merged.
 
-    The last layer of a step and the first of the next act on the same bonds, so n steps of a scheme with m
-    layers need only n (m - 1) + 1 layers.
+    groups : how many groups of commuting terms make up the whole, at least two. The first and the last group
+    take the scheme's coefficients; the groups between are passed to and fro with the composition's.
+    The last layer of a step and the first of the next act with the same terms, so n steps of a scheme with m
+    coefficients need n (m - 1) (groups - 1) + 1 layers.
     """
-    layers: list[tuple[int, float]] = []
-    for _ in range(steps):
-        for place, fraction in enumerate(scheme.coefficients):
-            parity = place % 2
-            if layers and layers[-1][0] == parity:
-                layers[-1] = (parity, layers[-1][1] + fraction)
-            else:
-                layers.append((parity, fraction))
+    between = range(1, groups - 1)
+    step: list[tuple[int, float]] = []
+    alpha = 0.0
+    for place, coefficient in enumerate(scheme.coefficients[:-1]):
+        forward = place % 2 == 0
+        alpha = coefficient - alpha
+        step.append((0 if forward else groups - 1, coefficient))
+        step += [(group, alpha) for group in (between if forward else reversed(between))]
+    step.append((0, scheme.coefficients[-1]))
+    layers = step[:]
+    for _ in range(steps - 1):
+        layers[-1] = (0, layers[-1][1] + step[0][1])
+        layers += step[1:]
     return layers
