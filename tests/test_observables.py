@@ -12,8 +12,10 @@ from tests.oracles.exact_chain import exact_evolution
 from tests.oracles.free_fermions import free_evolution
 from tests.oracles.quimb_chain import quimb_evolution
 from tnquench.conventions import Reals, bond_positions, site_positions
-from tnquench.model.chain import start_terms, xxz_chain
+from tnquench.model.chain import Chain, start_terms
+from tnquench.model.fermions import hubbard_chain
 from tnquench.model.profiles import bump, step
+from tnquench.model.spins import ising_chain, xxz_chain
 from tnquench.observables.quench import QuantumRecord, Quench, simulate
 
 
@@ -22,7 +24,8 @@ def quench(
 ) -> Quench:
     """A quench sampled every 0.5 with small fourth-order steps unless told otherwise."""
     chain = xxz_chain(sites=sites, anisotropy=anisotropy)
-    terms = start_terms(chain, beta=beta.tolist(), beta_charge=None if field is None else field.tolist())
+    potentials = {} if field is None else {"charge_density": field.tolist()}
+    terms = start_terms(chain, beta=beta.tolist(), potentials=potentials)
     defaults = {
         "every": 0.5,
         "samples": 4,
@@ -69,7 +72,7 @@ def test_short_chain_agrees_with_exact_diagonalisation(kind: str, anisotropy: fl
     np.testing.assert_allclose(
         record.operator_entanglement, exact["operator_entanglement"], rtol=0.0, atol=1e-6
     )
-    np.testing.assert_allclose(record.total_energy, exact["total_energy"], rtol=0.0, atol=1e-6)
+    np.testing.assert_allclose(record.totals["total_energy"], exact["total_energy"], rtol=0.0, atol=1e-6)
     assert record.log_partition_function == pytest.approx(float(exact["log_partition_function"]), abs=1e-7)
 
 
@@ -92,6 +95,62 @@ def test_sites_at_two_is_a_chain_too() -> None:
     )
     for name, values in record.fields.items():
         np.testing.assert_allclose(values, exact[name], rtol=0.0, atol=1e-8, err_msg=name)
+
+
+def short_quench(chain: Chain, **potentials: list[float]) -> Quench:
+    """One coarse step of a chain of any model from a warm start."""
+    beta = np.linspace(0.4, 0.8, chain.sites - 1).tolist()
+    return Quench(
+        chain=chain,
+        start_terms=start_terms(chain, beta=beta, potentials=potentials),
+        every=0.2,
+        samples=1,
+        steps=2,
+        trotter_order=2,
+        discarded_weight=1e-10,
+        preparation_weight=1e-14,
+        preparation_distance=1e-5,
+    )
+
+
+@pytest.fixture(scope="module")
+def short_hubbard_chain() -> QuantumRecord:
+    return simulate(short_quench(hubbard_chain(sites=3, repulsion=4.0), magnetisation=[0.3, -0.1, 0.2]))
+
+
+def test_totals_are_those_of_the_conserved_densities(short_hubbard_chain: QuantumRecord) -> None:
+    """Energy, particles and magnetisation of a Hubbard chain, but neither currents nor double occupancy."""
+    totals, fields = short_hubbard_chain.totals, short_hubbard_chain.fields
+    sources = {
+        "total_energy": "energy_density",
+        "total_charge": "charge_density",
+        "total_magnetisation": "magnetisation",
+    }
+    assert set(totals) == set(sources)
+    for name, density in sources.items():
+        np.testing.assert_array_equal(totals[name], fields[density].sum(axis=1))
+        assert np.ptp(totals[name]) < (1e-3 if name == "total_energy" else 1e-12)
+    assert abs(totals["total_magnetisation"][0]) > 0.05
+    assert np.abs(totals["total_charge"]).max() < 1e-12  # half filled by particle-hole symmetry
+
+
+def test_a_chain_without_a_charge_has_its_energy_alone() -> None:
+    record = simulate(short_quench(ising_chain(sites=4, transverse_field=0.7)))
+    assert set(record.totals) == {"total_energy"}
+    assert set(record.fields) == {"energy_density", "energy_current", "transverse_magnetisation"}
+
+
+def test_a_current_shares_the_error_of_its_density_in_the_start(short_hubbard_chain: QuantumRecord) -> None:
+    """Each current vanishes in the start, so its own change says nothing; double occupancy has no current."""
+    error = short_hubbard_chain.start_error
+    assert set(error) == set(short_hubbard_chain.fields)
+    assert np.abs(short_hubbard_chain.fields["energy_current"][0]).max() < 1e-12
+    assert error["energy_current"] == error["energy_density"] > 1e-12
+    assert error["spin_current"] == error["magnetisation"] > 1e-12
+    assert error["charge_current"] == error["charge_density"] < 1e-12
+    others = [error[name] for name in error if name != "double_occupancy"]
+    assert error["double_occupancy"] not in others
+    assert error["double_occupancy"] > 1e-12
 
 
 @pytest.fixture(scope="module")

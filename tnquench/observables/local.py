@@ -1,60 +1,85 @@
-"""Expectation values of local operators from the reduced operator table of a few neighbouring sites.
+"""Expectation values of local operators, string by string, in one sweep of the orthogonality centre.
 
-For sigma = sum psi(p) P_p (P_p products of normalised Pauli matrices) an expectation value is
-<O> = Tr(sigma O sigma) = sum_{p,p'} psi(p') Tr(P_p' O P_p) psi(p). A Pauli string only permutes the P_p with
-a phase, and everything outside its window is contracted by orthonormality around the centre.
+A Pauli string is closed at the site in its middle: when the centre gets there, the string's letters left and
+right of it are environments (`environments.py`), and all strings with the same letters share them. With M the
+centre tensor times a left environment (of the ket) and N the centre tensor times a right one (of the bra),
+the string's value is a sum of overlaps of blocks of M and N with the phases of its middle letter. All
+overlaps of one site are a few matrix products, so a further string costs next to nothing once its
+environments are there.
 """
 
 from __future__ import annotations
 
-from collections.abc import Mapping, Sequence
+from collections.abc import Iterator, Mapping, Sequence
 from dataclasses import dataclass
-from itertools import product
 
 import numpy as np
 
 from tnquench.conventions import Integers, Reals
 from tnquench.evolution.chain_state import ChainState, move_centre
 from tnquench.model.grading import Grading
-from tnquench.model.pauli import PHASE, Operator, support
+from tnquench.model.pauli import Operator
+from tnquench.observables.environments import Environments, LetterTable
+from tnquench.observables.strings import (
+    LEFT,
+    RIGHT,
+    Letters,
+    PlacedString,
+    closing_sites,
+    placed_string,
+    sides,
+)
+
+#: Coefficient of a string in the operator of an observable at a place.
+Uses = dict[tuple[str, int], float]
 
 
 @dataclass(frozen=True)
-class LocalWindow:
-    """All observables of one window of sites as one matrix on its flattened operator tables.
+class Closing:
+    """The strings that are closed at one site.
 
-    first, width : the sites; names : (observable, place) of each row; matrix : (rows, sum of squared table
-    sizes)
+    left, right : letters of the environments in use on each side, the farthest first; none for the identity
+    index, weight : each string's expectation value as a weighted sum of entries of the flattened `overlaps`,
+    shape (strings, entries)
+    places : the (observable, place) to which the strings add; mixing : their coefficients (places, strings)
     """
 
-    first: int
-    width: int
-    names: tuple[tuple[str, int], ...]
-    matrix: Reals
+    left: tuple[Letters, ...]
+    right: tuple[Letters, ...]
+    index: Integers
+    weight: Reals
+    places: tuple[tuple[str, int], ...]
+    mixing: Reals
 
 
 class LocalObservables:
     """Measures a fixed set of local operators in one sweep through the chain."""
 
     def __init__(self, operators: Mapping[str, Sequence[Operator]], *, sites: int, grading: Grading) -> None:
-        """operators : name -> one operator a place, each on at most three neighbouring sites."""
-        self.shapes = {name: len(members) for name, members in operators.items()}
-        self.width = min(3, sites)
-        self.tables = [operator_tuples(grading, charge, self.width) for charge in range(grading.sectors)]
-        gathered: dict[int, list[tuple[str, int, Operator]]] = {}
-        for name, members in operators.items():
-            for place, operator in enumerate(members):
-                if operator:
-                    first = min(support(operator)[0], sites - self.width)
-                    gathered.setdefault(first, []).append((name, place, operator))
-        self.windows = [self._window(first, rows) for first, rows in sorted(gathered.items())]
+        """operators : name -> one Hermitian operator a place, each on a few neighbouring sites.
 
-    def _window(self, first: int, rows: list[tuple[str, int, Operator]]) -> LocalWindow:
-        """Tabulate the operators of one window."""
-        matrix = np.array(
-            [_flat_elements(operator, first, self.width, self.tables) for _, _, operator in rows]
-        )
-        return LocalWindow(first, self.width, tuple((name, place) for name, place, _ in rows), matrix)
+        Strings of a charge are left out: the symmetries of the state forbid them an expectation value.
+        Raises ValueError if an operator acts outside the chain.
+        """
+        self.shapes = {name: len(members) for name, members in operators.items()}
+        self.constants = {name: np.zeros(places) for name, places in self.shapes.items()}
+        self.table = LetterTable(grading)
+        uses: dict[PlacedString, Uses] = {}
+        for name, place, term, coefficient in _terms(operators):
+            if not term:
+                self.constants[name][place] += coefficient  # the identity: sigma has unit norm
+                continue
+            string = placed_string(term, qubits_per_site=grading.qubits_per_site)
+            if not 0 <= string[0] <= sites - len(string[1]):
+                message = f"{name}, place {place}: operator acts outside a chain of {sites} sites"
+                raise ValueError(message)
+            if self.table.charge(string[1]) == 0:
+                uses.setdefault(string, {})[name, place] = coefficient
+        self.closings = {
+            site: _closing(site, {string: uses[string] for string in strings}, self.table)
+            for site, strings in closing_sites(uses).items()
+        }
+        self.depth = max((len(each) // 2 for _, each in uses), default=0)
 
     def measure(self, state: ChainState) -> tuple[dict[str, Reals], Reals]:
         """Return name -> expectation values (place,), and the entanglement entropy of each bond (nats, shape
@@ -62,94 +87,110 @@ class LocalObservables:
 
         Moves the centre of the state through the chain to its other end; the state itself does not change.
         """
-        values = {name: np.zeros(places) for name, places in self.shapes.items()}
+        values = {name: constants.copy() for name, constants in self.constants.items()}
         entropies = np.zeros(state.sites - 1)
+        environments = Environments(state, self.table, depth=self.depth)
         backwards = 2 * state.centre > state.sites - 1
-        windows = {window.first + (self.width - 1 if backwards else 0): window for window in self.windows}
-        order = range(state.sites - 1, -1, -1) if backwards else range(state.sites)
-        move_centre(state, order[0])
-        for site in order:
+        for site in range(state.sites - 1, -1, -1) if backwards else range(state.sites):
             move_centre(state, site)
+            environments.follow_centre()
             if site < state.sites - 1:
                 entropies[site] = bond_entropy(state, site)
-            if site in windows:
-                window = windows[site]
-                flat = np.concatenate(
-                    [table.ravel() for table in reduced_tables(state, window.first, self.tables)]
-                )
-                for (name, place), value in zip(window.names, window.matrix @ flat, strict=True):
-                    values[name][place] = value
+            closing = self.closings.get(site)
+            if closing is not None:
+                flat = overlaps(environments, site, closing).ravel()
+                expectations = np.einsum("se,se->s", closing.weight, flat[closing.index])
+                for (name, place), value in zip(closing.places, closing.mixing @ expectations, strict=True):
+                    values[name][place] += value
         return values, entropies
 
 
-def operator_tuples(grading: Grading, charge: int, width: int) -> Integers:
-    """Return all products of `width` local operators of a total charge, shape (number, width)."""
-    return np.array(
-        [
-            letters
-            for letters in product(range(len(grading.charge_of)), repeat=width)
-            if np.bitwise_xor.reduce(grading.charge_of[list(letters)]) == charge
-        ],
-        dtype=np.int64,
+def _terms(
+    operators: Mapping[str, Sequence[Operator]],
+) -> Iterator[tuple[str, int, tuple[tuple[int, int], ...], float]]:
+    """Yield observable, place, Pauli string and coefficient of every term."""
+    for name, members in operators.items():
+        for place, operator in enumerate(members):
+            for term, coefficient in operator.items():
+                yield name, place, term, complex(coefficient).real
+
+
+def _closing(site: int, uses: Mapping[PlacedString, Uses], table: LetterTable) -> Closing:
+    """Tabulate the strings closed at `site`."""
+    split = [sides(string, site) for string in uses]
+    left, right = sorted({each for each, _, _ in split}), sorted({each for _, _, each in split})
+    size = 2 * table.grading.multiplicity * len(left), 2 * table.grading.multiplicity * len(right)
+    entries = [
+        _entries(letter, left.index(before), right.index(after), table.charge(before), size, table)
+        for before, letter, after in split
+    ]
+    places = sorted({place for members in uses.values() for place in members})
+    return Closing(
+        tuple(left),
+        tuple(right),
+        index=np.array([index for index, _ in entries]),
+        weight=np.array([weight for _, weight in entries]),
+        places=tuple(places),
+        mixing=np.array([[members.get(place, 0.0) for members in uses.values()] for place in places]),
     )
 
 
-def _flat_elements(operator: Operator, first: int, width: int, tables: Sequence[Integers]) -> Reals:
-    """Return Re Tr(P_p' O P_p) for all p', p of each charge, flattened in the order of the tables."""
-    parts = []
-    for letters in tables:
-        place = {tuple(row): index for index, row in enumerate(letters.tolist())}
-        elements = np.zeros((len(letters), len(letters)))
-        for term, coefficient in operator.items():
-            string = [dict(term).get(first + offset, 0) for offset in range(width)]
-            for index, row in enumerate(letters.tolist()):
-                image = place.get(tuple(a ^ b for a, b in zip(string, row, strict=True)))
-                if image is not None:
-                    phase = np.prod([PHASE[a, b] for a, b in zip(string, row, strict=True)])
-                    elements[image, index] += (coefficient * phase).real
-        parts.append(elements.ravel())
-    return np.concatenate(parts)
+def _entries(
+    letter: int, left: int, right: int, charge: int, size: tuple[int, int], table: LetterTable
+) -> tuple[Integers, Reals]:
+    """Return where a string's overlaps stand in the flattened result of `overlaps`, and their weights.
 
-
-def reduced_tables(state: ChainState, first: int, tables: Sequence[Integers]) -> list[Reals]:
-    """Return for each charge c the matrix sum_{l,r} psi(p', l, r) psi(p, l, r) over operator products p of
-    charge c.
-
-    The centre must lie inside the window of sites `first` .. `first + width - 1`; tables : from
-    `operator_tuples`.
+    letter : the middle one; left, right : positions of its environments; charge : of the letters left of it
+    size : numbers of rows and columns of the overlaps
+    The real part of phase(b, p) (M + i M')(N + i N') is sign (M N - M' N') where the middle letter b and the
+    ket's operator p commute, and -sign (M N' + M' N) where they do not.
     """
-    totals = [np.zeros((len(letters), len(letters))) for letters in tables]
-    for charge, size in enumerate(state.bonds[first]):
-        if not size:
-            continue
-        amplitudes = _window_amplitudes(state, first, tables[0].shape[1], charge)
-        for total, letters in enumerate(tables):
-            stacked = np.stack([amplitudes[tuple(row)].ravel() for row in letters.tolist()])
-            totals[total] += stacked @ stacked.T
-    return totals
+    copies = np.arange(table.grading.multiplicity)
+    charges = np.arange(table.grading.sectors)
+    bra_left, ket_right = charges[:, None, None], charges[None, :, None]
+    ket = table.grading.members[bra_left ^ charge ^ ket_right, copies]
+    commute, sign, bra_copy = table.commute[letter, ket], table.sign[letter, ket], table.copy_of[letter ^ ket]
+    corner = (bra_left * len(charges) + ket_right) * size[0]
+    index, weight = [], []
+    for part in (0, 1):  # of M; N takes the same where the letters commute, the other one elsewhere
+        row = corner + (2 * left + part) * len(copies) + copies
+        column = (2 * right + np.where(commute, part, 1 - part)) * len(copies) + bra_copy
+        index.append((row * size[1] + column).ravel())
+        weight.append(np.where(commute, sign * (1 - 2 * part), -sign).ravel())
+    return np.concatenate(index), np.concatenate(weight)
 
 
-def _window_amplitudes(
-    state: ChainState, first: int, width: int, charge: int
-) -> dict[tuple[int, ...], Reals]:
-    """Return psi(p, l, r) for all products p of local operators, l of one charge and r of the charge p leads
-    to."""
-    grading = state.grading
-    rows = state.sector_slices(first)[charge]
-    partial: dict[tuple[int, ...], tuple[int, Reals | None]] = {(): (charge, None)}
-    for site in range(first, first + width):
-        tensor, into, onto = state.tensors[site], state.sector_slices(site), state.sector_slices(site + 1)
-        grown: dict[tuple[int, ...], tuple[int, Reals | None]] = {}
-        for letters, (middle, amplitude) in partial.items():
-            for step, members in enumerate(grading.members):
-                for copy, local in enumerate(members.tolist()):
-                    block = tensor[copy, into[middle] if amplitude is not None else rows, onto[middle ^ step]]
-                    grown[(*letters, local)] = (
-                        middle ^ step,
-                        block if amplitude is None else amplitude @ block,
-                    )
-        partial = grown
-    return {letters: amplitude for letters, (_, amplitude) in partial.items() if amplitude is not None}
+def overlaps(environments: Environments, site: int, closing: Closing) -> Reals:
+    """Return the overlaps of the centre's blocks times left environments with those times right environments.
+
+    Shape (bra's left charge, ket's right charge, rows, columns). A row is (left environment, real or
+    imaginary part, copy of the ket's operator), a column (right environment, part, copy of the bra's
+    operator). One left charge is done at a time, which bounds the memory in use.
+    """
+    blocks = environments.site(site)
+    sectors, _, copies, *size = blocks.shape
+    charges = np.arange(sectors)
+    left = [environments.beside(site, LEFT, letters) if letters else None for letters in closing.left]
+    right = [environments.beside(site, RIGHT, letters) if letters else None for letters in closing.right]
+    rows = np.zeros((sectors, len(left), 2, copies, *size))
+    columns = np.zeros((sectors, len(right), 2, copies, *size))
+    found = np.empty((sectors, sectors, 2 * len(left) * copies, 2 * len(right) * copies))
+    for bra_left in range(sectors):
+        for row, known in enumerate(left):
+            if known is None:
+                rows[:, row, 0] = blocks[bra_left]
+            else:
+                ket_left = bra_left ^ known.charge
+                np.matmul(known.parts[None, :, None, ket_left], blocks[ket_left, :, None], out=rows[:, row])
+        for column, known in enumerate(right):
+            if known is None:
+                columns[:, column, 0] = blocks[bra_left]
+            else:
+                bras = blocks[bra_left, charges ^ known.charge]
+                np.matmul(bras[:, None], known.parts.swapaxes(0, 1)[:, :, None], out=columns[:, column])
+        flat = columns.reshape(sectors, found.shape[3], -1).swapaxes(1, 2)
+        np.matmul(rows.reshape(sectors, found.shape[2], -1), flat, out=found[bra_left])
+    return found
 
 
 def bond_entropy(state: ChainState, site: int) -> float:

@@ -3,12 +3,12 @@
 from __future__ import annotations
 
 import time
-from collections.abc import Callable, Sequence
+from collections.abc import Callable, Iterable, Mapping, Sequence
 from dataclasses import dataclass
 
 import numpy as np
 
-from tnquench.conventions import Integers, Reals
+from tnquench.conventions import CURRENTS, Integers, Reals
 from tnquench.evolution.chain_state import ChainState
 from tnquench.evolution.cutting import BOND_FLOOR, CutRule
 from tnquench.evolution.layers import CutLedger
@@ -73,8 +73,8 @@ class QuantumRecord:
     cuts so far
     norms : largest operator norm of each observable; start_distance : estimated norm of the start's error;
     start_error : estimated error of each observable in the start
-    total_energy, total_charge (time,); events : what the user must know, with its time; seconds,
-    cpu_seconds : wall and processor time; cuts (time,) : real-time cuts made so far
+    totals : each conserved total (time,), by name: see `conserved_totals`; events : what the user must know,
+    with its time; seconds, cpu_seconds : wall and processor time; cuts (time,) : real-time cuts made so far
     """
 
     times: Reals
@@ -88,8 +88,7 @@ class QuantumRecord:
     start_error: dict[str, float]
     start_steps: int
     log_partition_function: float
-    total_energy: Reals
-    total_charge: Reals
+    totals: dict[str, Reals]
     events: tuple[dict[str, object], ...]
     seconds: float
     cpu_seconds: float
@@ -105,7 +104,7 @@ def simulate(quench: Quench, *, report: Callable[[Progress], None] | None = None
     """
     began, cpu = time.perf_counter(), time.process_time()
     chain = quench.chain
-    grading = derive_grading((*chain.bond_terms, *quench.start_terms))
+    grading = derive_grading((*chain.bond_terms, *quench.start_terms), qubits_per_site=chain.qubits_per_site)
     start = prepare(
         quench.start_terms,
         sites=chain.sites,
@@ -141,6 +140,7 @@ def simulate(quench: Quench, *, report: Callable[[Progress], None] | None = None
         )
         events.insert(0, {"kind": "preparation", "detail": detail})
     return diary.record(
+        charges=tuple(chain.charges),
         norms={name: largest_norm(members) for name, members in operators.items()},
         start=start,
         start_error=start_error,
@@ -154,13 +154,25 @@ def _start_error(meter: LocalObservables, start: Preparation) -> dict[str, float
     """Estimate each observable's error in the start from the state one refinement earlier.
 
     A current vanishes at t = 0 by symmetry but inherits the error of its density later, so both share the
-    larger one.
+    larger one; what no current carries stands alone.
     """
     fine, _ = meter.measure(start.state)
     coarse, _ = meter.measure(start.coarser)
     change = {name: start.error_share * float(np.abs(fine[name] - coarse[name]).max()) for name in fine}
-    family = {name: name.split("_")[0] for name in change}
-    return {name: max(change[other] for other in change if family[other] == family[name]) for name in change}
+    pairs = [pair for pair in CURRENTS.items() if change.keys() >= set(pair)]
+    return change | {name: max(change[each] for each in pair) for pair in pairs for name in pair}
+
+
+def conserved_totals(fields: Mapping[str, Reals], charges: Iterable[str]) -> dict[str, Reals]:
+    """Return the total energy and the total of each charge, (time,), by name.
+
+    fields : observable -> (time, place); charges : the conserved densities among them beside the energy's
+    The name is that of the density: total_energy, total_charge, total_magnetisation.
+    """
+    return {
+        f"total_{name.removesuffix('_density')}": fields[name].sum(axis=1)
+        for name in ("energy_density", *charges)
+    }
 
 
 def largest_norm(operators: Sequence[Operator]) -> float:
@@ -227,6 +239,7 @@ class _Diary:
     def record(
         self,
         *,
+        charges: Sequence[str],
         norms: dict[str, float],
         start: Preparation,
         start_error: dict[str, float],
@@ -234,7 +247,7 @@ class _Diary:
         seconds: float,
         cpu_seconds: float,
     ) -> QuantumRecord:
-        """Return all rows as arrays."""
+        """Return all rows as arrays; charges : names of the conserved densities beside the energy's."""
         table = {name: np.array(rows) for name, rows in self.rows.items()}
         fields = {name: table[name] for name in self.meter.shapes}
         return QuantumRecord(
@@ -249,8 +262,7 @@ class _Diary:
             start_error=start_error,
             start_steps=start.steps,
             log_partition_function=start.log_partition_function,
-            total_energy=fields["energy_density"].sum(axis=1),
-            total_charge=fields["charge_density"].sum(axis=1),
+            totals=conserved_totals(fields, charges),
             events=events,
             seconds=seconds,
             cpu_seconds=cpu_seconds,
