@@ -2,7 +2,7 @@
 
 from __future__ import annotations
 
-from collections.abc import Callable
+from collections.abc import Callable, Sequence
 
 import numpy as np
 
@@ -10,12 +10,15 @@ from tnquench.budget.assess import PredictedLevel, RunSettings, assess
 from tnquench.budget.companions import COARSE, LOOSE, LOOSER, SHORT
 from tnquench.budget.verdict import ObservableBudget
 from tnquench.conventions import ERROR_SOURCES, OBSERVABLE_PLACES, Reals, bond_positions, site_positions
-from tnquench.model.chain import start_terms, xxz_chain
+from tnquench.model.chain import start_terms
+from tnquench.model.spins import xxz_chain
 from tnquench.observables.quench import QuantumRecord, Quench
 
 SITES, SHORTER, SAMPLES = 16, 12, 6
 NORMS = {"energy_density": 0.5, "energy_current": 0.25, "charge_density": 0.4, "charge_current": 0.3}
 START_ERROR = {"energy_density": 1e-7, "energy_current": 2e-7, "charge_density": 3e-7, "charge_current": 4e-7}
+#: The observables of a run of the XXZ chain.
+NAMES = tuple(NORMS)
 CUTS = 100.0 * np.arange(SAMPLES)
 SETTINGS = RunSettings(step_ratio=3.0, trotter_order=4, resolve_at=3.0)
 ROUNDING = 2.0**-52
@@ -41,13 +44,19 @@ def unchanged(_name: str, values: Reals) -> Reals:
 
 
 def record(
-    perturb: Perturb = unchanged, *, sites: int = SITES, weight: float = 1e-8, samples: int = SAMPLES
+    perturb: Perturb = unchanged,
+    *,
+    sites: int = SITES,
+    weight: float = 1e-8,
+    samples: int = SAMPLES,
+    names: Sequence[str] = NAMES,
 ) -> QuantumRecord:
     """A run whose fields are functions of time and position alone, so that chains of all lengths agree."""
     times = np.arange(samples, dtype=np.float64)
     fields = {}
-    for row, (name, place) in enumerate(OBSERVABLE_PLACES.items()):
-        values = np.cos(0.3 * times[:, None] + 0.2 * (row + 1) * positions_of(sites)[place][None, :])
+    for row, name in enumerate(names):
+        place = positions_of(sites)[OBSERVABLE_PLACES[name]]
+        values = np.cos(0.3 * times[:, None] + 0.2 * (row + 1) * place[None, :])
         fields[name] = perturb(name, values)
     lost = weight * times[:, None] * (1.0 + np.arange(sites - 1)[None, :] / sites)
     return QuantumRecord(
@@ -57,13 +66,12 @@ def record(
         operator_entanglement=np.zeros((samples, sites - 1)),
         discarded_weight=lost,
         angle=0.01 * times,
-        norms=NORMS,
+        norms={name: NORMS.get(name, 1.0) for name in names},
         start_distance=1e-7,
-        start_error=START_ERROR,
+        start_error={name: START_ERROR.get(name, 5e-7) for name in names},
         start_steps=8,
         log_partition_function=0.0,
-        total_energy=np.zeros(samples),
-        total_charge=np.zeros(samples),
+        totals={"total_energy": np.zeros(samples), "total_charge": np.zeros(samples)},
         events=(),
         seconds=1.0,
         cpu_seconds=1.0,
@@ -123,7 +131,7 @@ def free_quench(sites: int = 12) -> Quench:
     field = np.where(site_positions(sites) < 0.0, 0.8, -0.3)
     return Quench(
         chain=chain,
-        start_terms=start_terms(chain, beta=beta.tolist(), beta_charge=field.tolist()),
+        start_terms=start_terms(chain, beta=beta.tolist(), potentials={"charge_density": field.tolist()}),
         every=0.5,
         samples=4,
         steps=3,

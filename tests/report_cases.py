@@ -10,8 +10,7 @@ from typing import Any
 
 import numpy as np
 
-from tests.synthetic_run import synthetic_pieces
-from tnquench.conventions import OBSERVABLE_PLACES
+from tests.synthetic_run import NAMES, synthetic_pieces
 from tnquench.dataset.reader import Run
 from tnquench.dataset.writer import write_run
 from tnquench.report.page import write_report
@@ -46,9 +45,9 @@ class Page(HTMLParser):
         return [attrs["src"] or "" for tag, attrs in self.tags if tag == "img"]
 
 
-def written(folder: Path, *changes: Change, companions: bool = True) -> Path:
-    """Write a synthetic dataset after some changes to its pieces."""
-    pieces = synthetic_pieces(sites=SITES, times=TIMES, companions=companions)
+def written(folder: Path, *changes: Change, **choices: Any) -> Path:
+    """Write a synthetic dataset after some changes to its pieces; choices as of `synthetic_pieces`."""
+    pieces = synthetic_pieces(**{"sites": SITES, "times": TIMES, **choices})
     for change in changes:
         change(pieces)
     folder.mkdir(exist_ok=True)
@@ -75,7 +74,7 @@ def no_magnetisation(pieces: dict[str, Any]) -> None:
 
 
 def nothing_resolved(pieces: dict[str, Any]) -> None:
-    for name in OBSERVABLE_PLACES:
+    for name in NAMES:
         budget = pieces["groups"][f"budget/{name}"]
         budget["numerical"] = budget["numerical"] + 0.5 * np.abs(budget["euler_deviation"])
         budget["euler_resolved"] = np.zeros_like(budget["euler_resolved"])
@@ -84,7 +83,7 @@ def nothing_resolved(pieces: dict[str, Any]) -> None:
 def no_prediction(pieces: dict[str, Any]) -> None:
     del pieces["groups"]["hydrodynamics/euler"]
     del pieces["attributes"]["hydrodynamics/euler"]
-    for name in OBSERVABLE_PLACES:
+    for name in NAMES:
         budget = pieces["groups"][f"budget/{name}"]
         pieces["groups"][f"budget/{name}"] = {
             key: rows for key, rows in budget.items() if not key.startswith("euler_")

@@ -12,6 +12,7 @@ from typing import Any
 import numpy as np
 
 from tnquench.conventions import (
+    CURRENTS,
     ERROR_SOURCES,
     OBSERVABLE_PLACES,
     PHYSICAL_SOURCES,
@@ -31,12 +32,26 @@ SOURCE_SIZES = dict(zip(ERROR_SOURCES, (1.0, 0.3, 0.02, 0.01, 1e-8, 0.1, 0.0, 2.
 MEASURED_ONLY = ("error", "numerical", "numerical_norm", "dominant_source", "euler_resolved")
 PREDICTED_ONLY = ("euler_deviation", "euler_deviation_norm", "euler_resolved")
 
+#: Observables of each model, settings of [chain] and further profiles of [start].
+ENERGY, CHARGE = ("energy_density", "energy_current"), ("charge_density", "charge_current")
+MODELS: dict[str, tuple[tuple[str, ...], str, str]] = {
+    "xxz": (ENERGY + CHARGE, "anisotropy = 0.5", ""),
+    "ising": ((*ENERGY, "transverse_magnetisation"), "transverse_field = 0.5", ""),
+    "fermion": (ENERGY + CHARGE, "repulsion = 1.0", "beta_mu"),
+    "hubbard": (
+        (*ENERGY, *CHARGE, "magnetisation", "spin_current", "double_occupancy"),
+        "repulsion = 4.0",
+        "beta_mu beta_field",
+    ),
+}
+NAMES = MODELS["xxz"][0]
+
 CONFIG_TOML = """\
 title = "Synthetic numbers for format tests"
 [chain]
-model = "xxz"
+model = "{model}"
 sites = {sites}
-anisotropy = 0.5
+{parameters}
 [start.beta]
 shape = "step"
 left = 0.5
@@ -47,6 +62,19 @@ every = 0.5
 discarded_weight = 1e-8
 time_step = 0.2
 """
+PROFILE_TOML = """\
+[start.{name}]
+shape = "step"
+left = 0.4
+right = -0.4
+"""
+
+
+def config_toml(*, sites: int, model: str = "xxz") -> str:
+    """The config that a made-up dataset claims to come from."""
+    _, parameters, profiles = MODELS[model]
+    text = CONFIG_TOML.format(sites=sites, model=model, parameters=parameters)
+    return text + "".join(PROFILE_TOML.format(name=name) for name in profiles.split())
 
 
 def write_synthetic_run(folder: Path, **choices: Any) -> Path:
@@ -55,45 +83,58 @@ def write_synthetic_run(folder: Path, **choices: Any) -> Path:
 
 
 def synthetic_pieces(
-    *, sites: int = 32, times: int = 21, companions: bool = True, prediction: bool = True
+    *,
+    sites: int = 32,
+    times: int = 21,
+    companions: bool = True,
+    prediction: bool = True,
+    model: str = "xxz",
 ) -> dict[str, Any]:
     """Return the keyword arguments of `write_run` for a made-up dataset.
 
     Without companions the budget has no measured errors and no verdict, without a prediction no deviation.
+    Densities without a current are never predicted.
     """
     time: Reals = 0.5 * np.arange(times, dtype=np.float64)
     places: dict[str, Reals] = {"site": site_positions(sites), "bond": bond_positions(sites)}
-    predicted = {name: front(name, time, places[place]) for name, place in OBSERVABLE_PLACES.items()}
+    names = MODELS[model][0]
+    smooth = {name: front(name, time, places[OBSERVABLE_PLACES[name]]) for name in names}
     quantum: dict[str, Reals] = {
-        name: predicted[name] + wiggle(name, time, places[place]) for name, place in OBSERVABLE_PLACES.items()
+        name: values + wiggle(name, time, places[OBSERVABLE_PLACES[name]]) for name, values in smooth.items()
     }
+    predicted = {name: values for name, values in smooth.items() if prediction and is_conserved(name)}
     groups: dict[str, dict[str, Any]] = {"quantum": quantum | growth(time, places["bond"], quantum)}
     attributes: dict[str, dict[str, Any]] = {}
     if prediction:
         groups["hydrodynamics/euler"] = predicted | prediction_errors(predicted)
         attributes["hydrodynamics/euler"] = prediction_attributes()
-    left_out = (() if companions else MEASURED_ONLY) + (() if prediction else PREDICTED_ONLY)
-    for name in OBSERVABLE_PLACES:
-        rows = budget(quantum[name] - predicted[name], time)
+    for name in names:
+        left_out = (() if companions else MEASURED_ONLY) + (() if name in predicted else PREDICTED_ONLY)
+        rows = budget(quantum[name] - smooth[name], time)
         groups[f"budget/{name}"] = {row: values for row, values in rows.items() if row not in left_out}
         attributes[f"budget/{name}"] = budget_attributes()
     for name, weight in COMPANION_WEIGHTS.items() if companions else ():
-        groups[f"companions/{name}"] = companion(name, time, sites)
+        groups[f"companions/{name}"] = companion(name, time, sites, names)
         attributes[f"companions/{name}"] = companion_attributes(name, weight, sites)
     return {
         "coordinates": {"time": time, **places, "source": list(ERROR_SOURCES)},
         "groups": groups,
         "attributes": attributes,
-        "provenance": provenance(sites),
+        "provenance": provenance(sites, model),
     }
+
+
+def is_conserved(name: str) -> bool:
+    return name in CURRENTS or name in CURRENTS.values()
 
 
 def front(name: str, time: Reals, place: Reals) -> Reals:
     """A step that widens linearly in time (densities), or a bump at the joint (currents)."""
     width = (1.0 + FRONT_VELOCITY * time)[:, None]
     scaled = place[None, :] / width
-    if name.endswith("density"):
-        return {"energy_density": -0.2, "charge_density": 0.05}[name] + 0.06 * np.tanh(-1.5 * scaled)
+    if not name.endswith("current"):
+        base = {"energy_density": -0.2, "charge_density": 0.05, "magnetisation": 0.02}.get(name, 0.2)
+        return base + 0.06 * np.tanh(-1.5 * scaled)
     values: Reals = 0.04 * np.exp(-1.5 * scaled**2) * np.tanh(time)[:, None]
     if name == "energy_current":
         values[:, [0, -1]] = 0.0
@@ -110,6 +151,13 @@ def wiggle(name: str, time: Reals, place: Reals) -> Reals:
     return values
 
 
+TOTALS = {
+    "energy_density": ("total_energy", 1e-7),
+    "charge_density": ("total_charge", 1e-9),
+    "magnetisation": ("total_magnetisation", 1e-8),
+}
+
+
 def growth(time: Reals, bond: Reals, quantum: dict[str, Reals]) -> dict[str, Any]:
     """Bond dimension, entanglement and discarded weight growing inside the front; slight drifts."""
     inside = 1.0 / (1.0 + np.exp(np.abs(bond)[None, :] - FRONT_VELOCITY * time[:, None] - 2.0))
@@ -118,8 +166,11 @@ def growth(time: Reals, bond: Reals, quantum: dict[str, Reals]) -> dict[str, Any
         "bond_dimension": np.rint(4.0 * np.exp(1.5 * entanglement)).astype(np.int64),
         "operator_entanglement": entanglement,
         "discarded_weight": 1e-8 * time[:, None] * inside,
-        "total_energy": np.full(time.size, quantum["energy_density"][0].sum()) * (1.0 + 1e-7 * time),
-        "total_charge": np.full(time.size, quantum["charge_density"][0].sum()) * (1.0 + 1e-9 * time),
+        **{
+            total: quantum[density][0].sum() * (1.0 + drift * time)
+            for density, (total, drift) in TOTALS.items()
+            if density in quantum
+        },
     }
 
 
@@ -163,13 +214,13 @@ def budget_attributes() -> dict[str, Any]:
     return kinds | {"first_resolved_time": 0.5, "resolve_at": RESOLVE_AT}
 
 
-def companion(name: str, time: Reals, sites: int) -> dict[str, Reals]:
+def companion(name: str, time: Reals, sites: int, observables: tuple[str, ...]) -> dict[str, Reals]:
     """The made-up front again, shorter by a quarter where the companion is the one of another length."""
     length = companion_sites(name, sites)
     places = {"site": site_positions(length), "bond": bond_positions(length)}
     fields = {
-        observable: front(observable, time, places[place]) + wiggle(observable, time, places[place])
-        for observable, place in OBSERVABLE_PLACES.items()
+        observable: front(observable, time, place) + wiggle(observable, time, place)
+        for observable, place in ((each, places[OBSERVABLE_PLACES[each]]) for each in observables)
     }
     own_places = {"site_length": places["site"], "bond_length": places["bond"]}
     return fields | own_places if length != sites else fields
@@ -188,9 +239,9 @@ def companion_attributes(name: str, weight: float, sites: int) -> dict[str, Any]
     }
 
 
-def provenance(sites: int) -> dict[str, Any]:
+def provenance(sites: int, model: str) -> dict[str, Any]:
     return {
-        "config_toml": CONFIG_TOML.format(sites=sites),
+        "config_toml": config_toml(sites=sites, model=model),
         "config_file": "synthetic.toml",
         "title": "Synthetic numbers for format tests",
         "versions": {"tnquench": "0.0.0", "numpy": "0.0.0"},

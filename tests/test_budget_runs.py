@@ -142,13 +142,13 @@ def test_totals_are_those_of_energy_and_of_charge() -> None:
     charge = exact["charge_density"].sum(axis=1)
     assert charge[0] > 0.5 > 0.0 > exact["total_energy"][0]
     for energies, charges in (
-        (main.total_energy, main.total_charge),
+        (main.totals["total_energy"], main.totals["total_charge"]),
         (group["total_energy"], group["total_charge"]),
     ):
         np.testing.assert_allclose(energies, exact["total_energy"], atol=1e-3)
         np.testing.assert_allclose(charges, charge, atol=1e-3)
-    np.testing.assert_allclose(main.total_energy, main.fields["energy_density"].sum(axis=1), rtol=1e-12)
-    np.testing.assert_allclose(main.total_charge, main.fields["charge_density"].sum(axis=1), rtol=1e-12)
+    for total, density in (("total_energy", "energy_density"), ("total_charge", "charge_density")):
+        np.testing.assert_allclose(main.totals[total], main.fields[density].sum(axis=1), rtol=1e-12)
 
 
 @pytest.mark.parametrize(

@@ -8,6 +8,7 @@ import numpy as np
 import pytest
 
 from tests.budget_cases import (
+    NAMES,
     SAMPLES,
     positions_of,
     record,
@@ -32,13 +33,14 @@ def verdict_budgets(
     """Budgets of a chain of 30 sites whose numerical error is ERROR; deviations at (sample, position)."""
     main = replace(
         record(sites=LONG),
-        norms=dict.fromkeys(OBSERVABLE_PLACES, 0.0),
-        start_error=dict.fromkeys(OBSERVABLE_PLACES, ERROR),
+        norms=dict.fromkeys(NAMES, 0.0),
+        start_error=dict.fromkeys(NAMES, ERROR),
     )
     runs = {name: main for name in (LOOSE, LOOSER, COARSE)}
     runs[SHORT] = record(sites=LONG - 4)
     predicted, errors = {}, {}
-    for name, place in OBSERVABLE_PLACES.items():
+    for name in NAMES:
+        place = OBSERVABLE_PLACES[name]
         predicted[name] = main.fields[name].copy()
         errors[name] = np.zeros_like(predicted[name])
         for target, entries in ((predicted[name], deviations), (errors[name], grid or {})):

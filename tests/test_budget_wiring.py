@@ -13,6 +13,7 @@ from tests.budget_cases import (
     END_NOISE,
     LOOSE_NOISE,
     LOOSER_NOISE,
+    NAMES,
     NORMS,
     ROUNDING,
     SAMPLES,
@@ -30,8 +31,8 @@ from tests.budget_cases import (
 )
 from tnquench.budget import sources
 from tnquench.budget.assess import PredictedLevel
-from tnquench.budget.companions import SHORT
-from tnquench.conventions import ERROR_SOURCES, OBSERVABLE_PLACES, Reals
+from tnquench.budget.companions import COARSE, LOOSE, LOOSER, SHORT
+from tnquench.conventions import ERROR_SOURCES, Reals
 
 
 def claimed_truncation(name: str) -> Reals:
@@ -164,7 +165,46 @@ def test_two_levels_are_judged_in_the_union_of_their_light_cones() -> None:
             [(-0.2, 2.0)],
         )
     )
-    for name in OBSERVABLE_PLACES:
+    for name in NAMES:
         np.testing.assert_allclose(union[name], alone[name], rtol=1e-12)
         assert abs(left[name] - alone[name]).max() > 1e-4
         assert abs(right[name] - alone[name]).max() > 1e-4
+
+
+HUBBARD = (*NAMES, "magnetisation", "spin_current", "double_occupancy")
+
+
+def test_a_run_is_judged_by_the_observables_it_holds() -> None:
+    """Seven of hubbard, three of ising; what a prediction lacks has errors and no verdict."""
+    for names in (HUBBARD, ("energy_density", "energy_current", "transverse_magnetisation")):
+        main = record(names=names)
+        runs = {
+            name: record(LOOSE_NOISE, names=names, weight=weight)
+            for name, weight in ((LOOSE, 1e-7), (LOOSER, 1e-6), (COARSE, 1e-7))
+        }
+        some = level(shift=0.1, grid=1e-3)
+        partial = replace(some, fields={name: some.fields[name] for name in names if name in NAMES})
+        for levels in ({}, {"euler": partial}):
+            budgets = judge(runs, levels, main=main)
+            assert tuple(budgets) == names
+            for name, budget in budgets.items():
+                predicted = bool(levels) and name in NAMES
+                assert tuple(budget.levels) == (("euler",) if predicted else ())
+                assert (row(budget, "prediction_grid").max() > 0.0) == predicted
+                assert (row(budget, "initial_gradient").max() > 0.0) == predicted
+                assert row(budget, "truncation")[1:].min() > 0.0
+                np.testing.assert_allclose(budget.numerical, expected_numerical(budget), rtol=1e-12)
+
+
+def test_without_its_prediction_an_observable_keeps_the_light_cone_of_the_others() -> None:
+    """Its norms are taken over the points that the light cone of the run has reached."""
+    names = ("energy_density", "transverse_magnetisation")
+    grid = level(cone=(-1.0, 2.0))
+    energy = replace(grid, fields={"energy_density": grid.fields["energy_density"]})
+    runs = {name: record(LOOSE_NOISE, names=names, weight=1e-7) for name in (LOOSE, LOOSER, COARSE)}
+    runs[SHORT] = record(END_NOISE, names=names, sites=SHORTER)
+    with_cone = judge(runs, {"euler": energy}, main=record(names=names))["transverse_magnetisation"]
+    without = judge(runs, {}, main=record(names=names))["transverse_magnetisation"]
+    np.testing.assert_array_equal(with_cone.numerical, without.numerical)
+    differ = np.abs(with_cone.numerical_norm / without.numerical_norm - 1.0)
+    assert differ[:2].min() > 1e-3

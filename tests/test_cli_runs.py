@@ -17,9 +17,8 @@ import pytest
 import typer
 
 from tests.command_line import Answer, call, config_file, start
-from tests.synthetic_run import write_synthetic_run
+from tests.synthetic_run import NAMES, write_synthetic_run
 from tnquench import cli, open_run
-from tnquench.conventions import OBSERVABLE_PLACES
 from tnquench.errors import ConvergenceError, StateError
 
 
@@ -50,7 +49,7 @@ def test_run_leaves_dataset_report_and_figures(finished: tuple[Path, Answer]) ->
     folder, _ = finished
     assert {entry.name for entry in folder.iterdir()} == {"run.h5", "report.html", "figures"}
     dataset = open_run(folder)
-    assert set(OBSERVABLE_PLACES) <= set(dataset.quantum)
+    assert set(NAMES) <= set(dataset.quantum)
     assert list(dataset.hydrodynamics) == ["euler"]
     assert len(dataset.companions) == 4
 
@@ -68,7 +67,7 @@ def test_one_thread_gives_the_same_numbers(
     monkeypatch.setattr("tnquench.run.write_report", lambda _folder: None)  # seconds, and not in question
     assert call("run", config_file(tmp_path), "--into", tmp_path / "again", "--threads", 1).code == 0
     twice, once = open_run(folder), open_run(tmp_path / "again")
-    for name in OBSERVABLE_PLACES:
+    for name in NAMES:
         np.testing.assert_allclose(once.quantum[name], twice.quantum[name], rtol=0.0, atol=1e-12)
 
 

@@ -15,8 +15,8 @@ import numpy as np
 import pytest
 import xarray
 
-from tests.synthetic_run import CONFIG_TOML, synthetic_pieces, write_synthetic_run
-from tnquench.conventions import ERROR_SOURCES, OBSERVABLE_PLACES
+from tests.synthetic_run import NAMES, config_toml, synthetic_pieces, write_synthetic_run
+from tnquench.conventions import ERROR_SOURCES
 from tnquench.dataset.integrity import check_run, digest_of
 from tnquench.dataset.reader import open_run
 from tnquench.dataset.variables import COORDINATES, OWN_COORDINATES, variables_of
@@ -137,7 +137,7 @@ def test_xarray_opens_the_whole_tree(sound: Path, pieces: dict[str, Any], engine
             group, _, name = path.rpartition("/")
             found = tree[f"/{group}"].coords if name in tree[f"/{group}"].coords else tree[f"/{group}"]
             assert np.array_equal(np.asarray(found[name]), np.asarray(expected)), path
-        assert tree["provenance"].attrs["config_toml"] == CONFIG_TOML.format(sites=SITES)
+        assert tree["provenance"].attrs["config_toml"] == config_toml(sites=SITES)
 
 
 @pytest.mark.parametrize("engine", ["h5netcdf", "netcdf4"])
@@ -170,6 +170,17 @@ def test_every_variable_has_units_and_a_meaning(sound: Path) -> None:
     assert silent == []
 
 
+def test_the_meaning_of_the_charge_holds_for_every_model(tmp_path: Path) -> None:
+    path = write_synthetic_run(tmp_path, sites=6, times=3, model="hubbard")
+    with h5py.File(path) as file:
+        said = {name: file[f"quantum/{name}"].attrs["long_name"] for name in file["quantum"]}
+        units = {name: file[f"quantum/{name}"].attrs["units"] for name in file["quantum"]}
+    for words in ("S^z (xxz)", "n - 1/2 (fermion)", "n - 1 (hubbard)"):
+        assert words in said["charge_density"]
+    assert units["magnetisation"] == units["double_occupancy"] == units["total_magnetisation"] == "1"
+    assert units["spin_current"] == units["charge_current"] == "energy"
+
+
 def test_flags_are_spelled_out(sound: Path) -> None:
     budget = open_run(sound).budget["energy_density"]
     assert budget["euler_resolved"].attrs["flag_meanings"] == "unresolved resolved"
@@ -190,7 +201,7 @@ def test_open_run_returns_everything_with_coordinates(sound: Path, pieces: dict[
         for name, values in arrays.items():
             assert np.array_equal(groups[group][name].values, values), f"{group}/{name}"
             assert set(groups[group][name].dims) <= set(groups[group].coords)
-    assert set(run.budget) == set(OBSERVABLE_PLACES)
+    assert set(run.budget) == set(NAMES)
     assert list(run.coordinates.coords) == ["time", "site", "bond", "source"]
     assert run.companions["length"].sizes == {"time": TIMES, "bond_length": 5, "site_length": 6}
 
@@ -200,7 +211,7 @@ def test_open_run_decodes_provenance_and_attributes(sound: Path, pieces: dict[st
     for name, value in pieces["provenance"].items():
         assert run.provenance[name] == value
     assert run.provenance["digest"] == digest_of(sound)
-    assert run.provenance["format_version"] == 1
+    assert run.provenance["format_version"] == 2
     assert run.hydrodynamics["euler"].attrs["references"] == ["castro_alvaredo_2016", "bertini_2016"]
     assert run.hydrodynamics["euler"].attrs["light_cone_left"] == -1.2
     assert run.companions["length"].attrs["sites"] == 6

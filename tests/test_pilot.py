@@ -10,14 +10,17 @@ import numpy as np
 import pytest
 
 from tests.budget_cases import (
+    NAMES,
     SITES,
     free_quench,
     noise,
     record,
 )
 from tnquench.budget import pilot, sources
-from tnquench.conventions import OBSERVABLE_PLACES, Reals, bond_positions
-from tnquench.model.chain import start_terms, xxz_chain
+from tnquench.conventions import Reals, bond_positions
+from tnquench.model.chain import start_terms
+from tnquench.model.fermions import hubbard_chain
+from tnquench.model.spins import xxz_chain
 from tnquench.observables.quench import Progress, QuantumRecord, Quench
 
 # The forecast: pilots replaced by runs that obey the stated laws exactly, on a clock of their own.
@@ -30,11 +33,13 @@ class Laboratory:
     """Stands in for `simulate`: the cube root of a bond is 2 + time * decades below a weight of 1e-5.
 
     spread : whether the growth has the shape of a light cone of velocity 1 rather than the same everywhere
+    a_step : half layers of a time step; one more closes each interval
     """
 
-    def __init__(self, *, spread: bool = False) -> None:
+    def __init__(self, *, spread: bool = False, a_step: int = 10) -> None:
         self.clock = 100.0
         self.spread = spread
+        self.a_step = a_step
         self.weights: list[float] = []
 
     def perf_counter(self) -> float:
@@ -45,13 +50,15 @@ class Laboratory:
         age = np.maximum(moment - np.abs(positions), 0.0) if self.spread else np.full(len(positions), moment)
         roots = 2.0 + age * -np.log10(quench.discarded_weight / 1e-5)
         depth = 0.5 * len(positions) + 0.5 - np.abs(positions)
-        return np.asarray(np.minimum(np.rint(roots**3), 4.0**depth))
+        operators = 4.0**quench.chain.qubits_per_site
+        return np.asarray(np.minimum(np.rint(roots**3), operators**depth))
 
     def simulate(self, quench: Quench, *, report: Callable[[Progress], None]) -> None:
         self.weights.append(quench.discarded_weight)
         self.clock += PREPARATION_SECONDS
-        for sample in range(quench.samples + 1):
-            moment = sample * quench.every
+        layers = self.a_step * quench.steps + 1
+        for layer in range(quench.samples * layers + 1):
+            moment = layer * quench.every / layers
             bonds = self.bonds(quench, moment)
             seconds = half_layer_seconds(bonds)
             self.clock += seconds
@@ -63,7 +70,7 @@ def half_layer_seconds(bonds: Reals) -> float:
     return float(OVERHEAD * len(bonds) / 2.0 + PER_CUBE * (bonds**3).sum() / 2.0)
 
 
-def forecast_chain(*, sites: int = FORECAST_SITES, samples: int = FORECAST_SAMPLES, order: int = 4) -> Quench:
+def forecast_chain(*, sites: int = FORECAST_SITES, samples: int = FORECAST_SAMPLES) -> Quench:
     chain = xxz_chain(sites=sites, anisotropy=0.5)
     return replace(
         free_quench(),
@@ -71,13 +78,13 @@ def forecast_chain(*, sites: int = FORECAST_SITES, samples: int = FORECAST_SAMPL
         start_terms=start_terms(chain, beta=[1.0] * (sites - 1)),
         every=1.0,
         samples=samples,
-        trotter_order=order,
+        trotter_order=4,
         discarded_weight=1e-8,
     )
 
 
-def installed(monkeypatch: pytest.MonkeyPatch, *, spread: bool = False) -> Laboratory:
-    laboratory = Laboratory(spread=spread)
+def installed(monkeypatch: pytest.MonkeyPatch, *, spread: bool = False, a_step: int = 10) -> Laboratory:
+    laboratory = Laboratory(spread=spread, a_step=a_step)
     monkeypatch.setattr(pilot, "simulate", laboratory.simulate)
     monkeypatch.setattr(pilot, "time", SimpleNamespace(perf_counter=laboratory.perf_counter))
     return laboratory
@@ -92,14 +99,17 @@ def true_seconds(laboratory: Laboratory, quench: Quench, *, layers_per_interval:
     return total
 
 
-@pytest.mark.parametrize(("order", "count"), [(4, 3 * 10 + 1), (2, 3 * 2 + 1)])
-def test_forecast_finds_the_cube_law_and_the_growth_law(
-    order: int, count: int, monkeypatch: pytest.MonkeyPatch
-) -> None:
-    """Two pilots at 100 and 10 times the weight give bonds and seconds of the run and its companions."""
-    laboratory, quench = installed(monkeypatch), forecast_chain(order=order)
+@pytest.mark.parametrize("a_step", [10, 2, 24])
+def test_forecast_finds_the_cube_law_and_the_growth_law(a_step: int, monkeypatch: pytest.MonkeyPatch) -> None:
+    """Two pilots at 100 and 10 times the weight give bonds and seconds of the run and its companions.
+
+    The half layers of a step are those of the pilots: farther couplings need more of them.
+    """
+    laboratory, quench = installed(monkeypatch, a_step=a_step), forecast_chain()
+    count = 3 * a_step + 1
     looser = replace(quench, discarded_weight=1e-7)
-    found = pilot.forecast_quench(quench, companions={"once": looser, "twice": looser}, seconds=1e9)
+    companions = {"once": looser, "twice": looser, "coarse": replace(looser, steps=1)}
+    found = pilot.forecast_quench(quench, companions=companions, seconds=1e9)
     assert laboratory.weights == pytest.approx([1e-6, 1e-7])
     expected = [laboratory.bonds(quench, t).max() for t in range(FORECAST_SAMPLES + 1)]
     np.testing.assert_allclose(found.bond_dimension, expected, rtol=1e-9)
@@ -108,7 +118,8 @@ def test_forecast_finds_the_cube_law_and_the_growth_law(
     other = true_seconds(laboratory, looser, layers_per_interval=count)
     assert main > 3.0 * other > 3.0 * PREPARATION_SECONDS
     assert found.main_seconds == pytest.approx(main, rel=1e-6)
-    assert found.companion_seconds == pytest.approx(2.0 * other, rel=1e-6)
+    coarse = true_seconds(laboratory, looser, layers_per_interval=a_step + 1)
+    assert found.companion_seconds == pytest.approx(2.0 * other + coarse, rel=1e-6)
     assert found.pilot_time == FORECAST_SAMPLES
     assert found.pilot_seconds == pytest.approx(laboratory.clock - 100.0)
 
@@ -129,7 +140,8 @@ def test_forecast_keeps_floor_and_ceiling(monkeypatch: pytest.MonkeyPatch) -> No
 
 def test_forecast_goes_on_where_the_pilot_ran_out_of_time(monkeypatch: pytest.MonkeyPatch) -> None:
     """Cube roots grow linearly with time and their profile widens as a light cone does."""
-    laboratory, quench = installed(monkeypatch, spread=True), forecast_chain(sites=40, samples=16)
+    laboratory = installed(monkeypatch, spread=True, a_step=0)  # one report a sample
+    quench = forecast_chain(sites=40, samples=16)
     found = pilot.forecast_quench(quench, companions={}, seconds=0.0)
     assert found.pilot_time == 8.0, "a pilot takes nine samples at least"
     expected = [laboratory.bonds(quench, t).max() for t in range(17)]
@@ -141,6 +153,26 @@ def test_forecast_goes_on_where_the_pilot_ran_out_of_time(monkeypatch: pytest.Mo
     assert np.abs(copies - np.array([1.0, 2.0, 4.0])).min() < 0.1
     assert doubles > 10.0 * (still[1:] * still[:-1]).sum()
     assert found.memory_bytes > found.state_bytes
+
+
+@pytest.mark.parametrize(("doped", "copies", "pairs"), [(False, 2, 8 * 4), (True, 4, 4 * 16)])
+def test_memory_of_two_qubits_a_site(
+    doped: bool, copies: int, pairs: int, monkeypatch: pytest.MonkeyPatch
+) -> None:
+    """Sixteen local operators fall into eight charges of two, with a chemical potential into four of four."""
+    laboratory, sites = installed(monkeypatch), 12
+    chain = hubbard_chain(sites=sites, repulsion=4.0)
+    potentials = {"charge_density": [0.3] * sites} if doped else {}
+    terms = start_terms(chain, beta=[1.0] * (sites - 1), potentials=potentials)
+    quench = replace(forecast_chain(sites=sites), chain=chain, start_terms=terms)
+    monkeypatch.setattr(pilot, "_process_bytes", lambda: 1e6)
+    found = pilot.forecast_quench(quench, companions={}, seconds=1e9)
+    inner = laboratory.bonds(quench, FORECAST_SAMPLES)
+    sizes = np.concatenate([[1.0], inner, [1.0]])
+    assert found.state_bytes == pytest.approx(8.0 * copies * (sizes[1:] * sizes[:-1]).sum(), rel=1e-9)
+    workspace = found.memory_bytes - found.state_bytes - 1e6
+    assert workspace == pytest.approx(pilot.WORKSPACE_PAIRS * 8.0 * pairs * inner.max() ** 2, rel=1e-9)
+    assert sizes[1] == 16.0, "the outermost bond holds all operators of the end site"
 
 
 # The choice of weight and step: errors of known law in both.
@@ -163,7 +195,7 @@ def claims(quench: Quench) -> tuple[float, float]:
     coarse = lawful(replace(quench, discarded_weight=weights[1], steps=quench.steps // 2))
     ratio = quench.steps / (quench.steps // 2)
     cutting, stepping = 0.0, 0.0
-    for name in OBSERVABLE_PLACES:
+    for name in NAMES:
         runs = [sources.TruncatedRun(run.fields[name], run.discarded_weight) for run in (main, loose, looser)]
         found = sources.truncation(main=runs[0], loose=runs[1], looser=runs[2])
         cutting = max(cutting, float(found.max()))

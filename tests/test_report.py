@@ -25,6 +25,7 @@ from tests.report_cases import (
     window,
     written,
 )
+from tests.synthetic_run import NAMES
 from tnquench.conventions import OBSERVABLE_PLACES
 from tnquench.dataset.reader import Run, open_run
 from tnquench.errors import InputError
@@ -71,7 +72,7 @@ def test_every_picture_is_inside_the_page_and_stored_beside_it(full: tuple[Path,
     embedded = {base64.b64decode(source.partition(",")[2]) for source in page.pictures}
     assert embedded == {(folder / "figures" / name).read_bytes() for name in vectors}
     assert all((folder / "figures" / name).read_bytes()[:4] == b"\x89PNG" for name in files - vectors)
-    for name in OBSERVABLE_PLACES:
+    for name in NAMES:
         assert {f"{name}_map_{side}.svg" for side in ("quantum", "prediction", "deviation")} <= vectors
         assert {f"{name}_budget.svg", f"{name}_cut_4.svg"} <= vectors
 
@@ -97,7 +98,7 @@ def test_every_picture_is_described(full: tuple[Path, Page, Run]) -> None:
     assert len(set(described)) == len(described)
 
 
-@pytest.mark.parametrize("name", OBSERVABLE_PLACES)
+@pytest.mark.parametrize("name", NAMES)
 def test_summary_agrees_with_the_arrays(full: tuple[Path, Page, Run], name: str) -> None:
     _, page, run = full
     place = OBSERVABLE_PLACES[name]
@@ -140,7 +141,7 @@ def test_settings_versions_events_and_citations_are_shown(full: tuple[Path, Page
     assert "12 s on the clock" in page.texts["settings"]
     assert "bond ceiling" in page.texts["events"]
     assert "bond ceiling" in page.texts["verdict"].lower()
-    for key in (*QUANTUM_KEYS, *EULER_KEYS, *TROTTER_KEYS[4], "unfried_2023"):
+    for key in (*QUANTUM_KEYS, *EULER_KEYS, *TROTTER_KEYS[4], "unfried_2023", "takahashi_1999"):
         assert REFERENCES[key] in page.texts["references"]
 
 
@@ -161,9 +162,11 @@ def test_question_repeats_the_config(full: tuple[Path, Page, Run]) -> None:
 def test_without_prediction_the_quantum_side_stands_alone(tmp_path: Path) -> None:
     folder = written(tmp_path, no_prediction, no_magnetisation)
     page, run = page_of(folder), open_run(folder)
-    assert "No prediction was computed" in page.texts["verdict"]
+    assert "No prediction exists for this run" in page.texts["verdict"]
     worst = run.budget["energy_density"]["numerical"].values.max()
-    assert numbers_in(page.texts["verdict"].partition("error up to")[2])[0] == pytest.approx(worst, rel=0.06)
+    assert numbers_in(page.texts["verdict"].partition("error of at most")[2])[0] == pytest.approx(
+        worst, rel=0.06
+    )
     assert "start" not in page.sections
     assert {"maps", "cuts", "budget"} <= set(page.sections)
     assert not list((folder / "figures").glob("*deviation*"))

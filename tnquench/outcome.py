@@ -14,7 +14,7 @@ from typing import Any
 
 import numpy as np
 
-from tnquench.assemble import budget_settings, sample_times, start_reach
+from tnquench.assemble import budget_settings, extra_events, sample_times, start_reach
 from tnquench.budget.assess import PredictedLevel, assess
 from tnquench.budget.verdict import SHARP_REACH, SOURCE_KINDS, ObservableBudget
 from tnquench.config.document import effective_toml
@@ -74,8 +74,7 @@ def run_pieces(
         "bond_dimension": main.bond_dimension.astype(np.int64),
         "operator_entanglement": main.operator_entanglement,
         "discarded_weight": main.discarded_weight,
-        "total_energy": main.total_energy,
-        "total_charge": main.total_charge,
+        **main.totals,
     }
     if prediction is not None:
         _add_prediction(pieces, config, prediction)
@@ -90,7 +89,12 @@ def run_pieces(
         _add_budget(pieces, name, budget, config, judged=bool(quantum.companions))
     for name, record in quantum.companions.items():
         _add_companion(pieces, name, quantum.companion_quenches[name], record, sites)
-    pieces.provenance["events"] = [*quantum.events, *main.events, *_outlook(config, prediction, absence)]
+    pieces.provenance["events"] = [
+        *extra_events(config),
+        *quantum.events,
+        *main.events,
+        *_outlook(config, prediction, absence),
+    ]
     pieces.provenance["preparation"] = {
         "imaginary_time_steps": main.start_steps,
         "distance": main.start_distance,
@@ -112,7 +116,8 @@ def prediction_pieces(config: Config, config_file: Path, prediction: Prediction)
     """Return the dataset of a prediction alone."""
     pieces = _empty_pieces(config, config_file, times=sample_times(config))
     _add_prediction(pieces, config, prediction)
-    pieces.provenance.update({"events": _outlook(config, prediction, ""), "preparation": {}})
+    events = [*extra_events(config), *_outlook(config, prediction, "")]
+    pieces.provenance.update({"events": events, "preparation": {}})
     return pieces
 
 
@@ -128,6 +133,7 @@ def _empty_pieces(config: Config, config_file: Path, *, times: Reals) -> Pieces:
         },
         provenance={
             "title": config.title,
+            "model": _model(config),
             "config_toml": effective_toml(config),
             "config_file": config_file.name,
             "versions": {"python": platform.python_version()} | {name: _version(name) for name in PACKAGES},
@@ -218,6 +224,16 @@ def _outlook(config: Config, prediction: Prediction | None, absence: str) -> lis
         return []
     detail = f"the fastest excitations from where the start varies reach the ends at t = {arrival:.3g}"
     return [{"kind": "light_cone_at_end", "detail": detail}]
+
+
+def _model(config: Config) -> dict[str, Any]:
+    """Return the model's name, its parameters, and the extra terms of H."""
+    chain = config.chain
+    return {
+        "name": chain.model,
+        "parameters": chain.parameters,
+        "extras": [extra.model_dump(exclude_none=True) for extra in chain.extra],
+    }
 
 
 def _version(package: str) -> str:

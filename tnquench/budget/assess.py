@@ -17,7 +17,10 @@ from tnquench.observables.quench import QuantumRecord
 
 @dataclass(frozen=True)
 class PredictedLevel:
-    """A prediction as the budget needs it: values, its own errors, and the light cone for the windows."""
+    """A prediction as the budget needs it: values, its own errors, and the light cone for the windows.
+
+    It may lack some of the run's observables, or all of them.
+    """
 
     fields: Mapping[str, Reals]
     grid_error: Mapping[str, Reals]
@@ -106,35 +109,45 @@ def assess(
     positions: Mapping[str, Reals],
     settings: RunSettings,
 ) -> dict[str, ObservableBudget]:
-    """Return the budget of every observable.
+    """Return the budget of every observable that the run holds.
 
     predictions : by level; positions : of the "site"s and "bond"s. Where several levels are judged the larger
-    error of the predictions counts. Without a prediction the window is the whole chain but its ends.
+    error of the predictions counts; an observable that no level predicts has no deviation. Without any
+    prediction the window is the whole chain but its ends.
     """
     cones = [level.light_cone for level in predictions.values()]
     cone = (min(c[0] for c in cones), max(c[1] for c in cones)) if cones else (0.0, 0.0)
     reach = settings.reach if cones else float("inf")
     budgets = {}
-    for name, place in OBSERVABLE_PLACES.items():
-        found = quantum_sources(name, main, companions, settings)
+    for name in (name for name in OBSERVABLE_PLACES if name in main.fields):
+        place = positions[OBSERVABLE_PLACES[name]]
         values = main.fields[name]
-        for level in predictions.values():
-            found["prediction_grid"] = np.maximum(found.get("prediction_grid", 0.0), level.grid_error[name])
-            found["strings"] = np.maximum(found.get("strings", 0.0), level.strings_error[name])
-            start = np.abs(values[0] - level.fields[name][0])
-            found["initial_gradient"] = np.broadcast_to(
-                np.maximum(found.get("initial_gradient", 0.0), start), values.shape
-            )
+        predicted = {level: found for level, found in predictions.items() if name in found.fields}
         budgets[name] = judge_observable(
             quantum=values,
-            sources=found,
+            sources=quantum_sources(name, main, companions, settings)
+            | _prediction_sources(name, values, predicted),
             bound=sources.truncation_bound(angle=main.angle, norm=main.norms[name], shape=values.shape),
-            predictions={level: prediction.fields[name] for level, prediction in predictions.items()},
-            window=light_cone_window(
-                times=main.times, positions=positions[place], light_cone=cone, reach=reach
-            ),
-            positions=positions[place],
+            predictions={level: found.fields[name] for level, found in predicted.items()},
+            window=light_cone_window(times=main.times, positions=place, light_cone=cone, reach=reach),
+            positions=place,
             times=main.times,
             resolve_at=settings.resolve_at,
         )
     return budgets
+
+
+def _prediction_sources(
+    name: str, quantum: Reals, predicted: Mapping[str, PredictedLevel]
+) -> dict[str, Reals]:
+    """Return the sources on the theory's side, the larger one of several theories, each (time, place)."""
+    found: dict[str, Reals] = {}
+    for level in predicted.values():
+        start = np.abs(quantum[0] - level.fields[name][0])
+        errors = {
+            "prediction_grid": level.grid_error[name],
+            "strings": level.strings_error[name],
+            "initial_gradient": np.broadcast_to(start, quantum.shape),
+        }
+        found = {source: np.maximum(found.get(source, 0.0), error) for source, error in errors.items()}
+    return found

@@ -12,6 +12,7 @@ from tnquench.dataset.contents import Contents, StoredVariable, digest_of_conten
 from tnquench.dataset.storage import DamagedFile, decode, locate, read_bytes
 from tnquench.dataset.variables import (
     COORDINATES,
+    FIRST_OBSERVABLES,
     FORMAT_VERSION,
     JSON_ATTRIBUTES,
     LEVELS,
@@ -20,6 +21,7 @@ from tnquench.dataset.variables import (
     OWN_COORDINATES,
     Variable,
     attributes_of,
+    held_by,
     variables_of,
 )
 from tnquench.errors import InputError
@@ -96,6 +98,26 @@ def _findings(contents: Contents) -> Iterator[str]:
             yield from _group_findings(contents, group)
         yield from _attribute_findings(contents, group)
     yield from _missing_groups(contents)
+    yield from _observable_findings(contents)
+
+
+def observables_of(contents: Contents) -> tuple[str, ...]:
+    """Return the observables that a file says it holds, those of the XXZ chain where it is too old to say."""
+    listed = contents.attributes.get("", {}).get("observables")
+    return FIRST_OBSERVABLES if listed is None else tuple(str(listed).split())
+
+
+def _observable_findings(contents: Contents) -> Iterator[str]:
+    """Compare the root's list of observables with what is there."""
+    listed = observables_of(contents)
+    version = contents.attributes.get("provenance", {}).get("format_version")
+    if "observables" not in contents.attributes.get("", {}) and version != 1:
+        yield "missing attribute observables of the root"
+    if strangers := [name for name in listed if name not in OBSERVABLES]:
+        yield f"unknown observables in the root's list: {', '.join(strangers)}"
+    found = [group.removeprefix("budget/") for group in contents.groups() if group.startswith("budget/")]
+    for name in sorted({*found, *contents.group("quantum")} & set(OBSERVABLES) - set(listed)):
+        yield f"observable {name} is not in the root's list"
 
 
 def _is_prediction_alone(contents: Contents) -> bool:
@@ -108,7 +130,10 @@ def _missing_groups(contents: Contents) -> Iterator[str]:
     if _is_prediction_alone(contents):
         expected = {f"hydrodynamics/{level}" for level in levels or LEVELS[:1]}
     else:
-        expected = {"quantum", *(f"budget/{name}" for name in OBSERVABLES)}
+        expected = {
+            "quantum",
+            *(f"budget/{name}" for name in observables_of(contents) if name in OBSERVABLES),
+        }
         expected |= {f"hydrodynamics/{level}" for level in levels}
     for group in sorted(expected - set(groups)):
         yield f"missing group {group}"
@@ -138,7 +163,7 @@ def _group_findings(contents: Contents, group: str) -> Iterator[str]:
     except ValueError:
         yield f"unknown group {group}"
         return
-    required = _required(contents, table)
+    required = _required(contents, group) & set(table)
     yield from _presence_findings(group, found, {**COORDINATES, **table}, required=required)
     for name, variable in found.items():
         yield from _shape_findings(f"{group}/{name}", variable, {**scales, **own})
@@ -146,13 +171,31 @@ def _group_findings(contents: Contents, group: str) -> Iterator[str]:
             yield f"{group}/{name} differs from the scale {name}"
 
 
-def _required(contents: Contents, table: Mapping[str, Variable]) -> set[str]:
+def _required(contents: Contents, group: str) -> set[str]:
     """Return the variables of a group that this file must have."""
-    absent = tuple(f"{level}_" for level in LEVELS if level not in _levels(contents))
-    required = {name for name in table if not name.startswith(absent)}
+    head, _, tail = group.partition("/")
+    if head == "budget":
+        return _required_of_budget(contents, tail)
+    if head == "hydrodynamics":
+        errors = ("", "_grid_error", "_strings_error")
+        return {f"{name}{error}" for name in _predicted(contents, tail) for error in errors}
+    return held_by(group, observables_of(contents))
+
+
+def _required_of_budget(contents: Contents, name: str) -> set[str]:
+    absent = tuple(f"{level}_" for level in LEVELS if name not in _predicted(contents, level))
+    required = {row for row in variables_of(f"budget/{name}") if not row.startswith(absent)}
     if _is_measured(contents):
         return required
-    return {name for name in required if name not in MEASURED and not name.endswith("_resolved")}
+    return {row for row in required if row not in MEASURED and not row.endswith("_resolved")}
+
+
+def _predicted(contents: Contents, level: str) -> set[str]:
+    """Return the observables that a theory predicts: some of a model's may have no prediction."""
+    if _is_prediction_alone(contents):
+        return set(observables_of(contents))
+    judged = {name for name in OBSERVABLES if f"budget/{name}/{level}_deviation" in contents.variables}
+    return judged | set(OBSERVABLES) & set(contents.group(f"hydrodynamics/{level}"))
 
 
 def _attribute_findings(contents: Contents, group: str) -> Iterator[str]:

@@ -1,7 +1,8 @@
 """The table of everything a dataset may hold: dimensions, units and meaning of each variable, group by group.
 
 Groups are named by their path in the file, without a leading slash: "quantum", "hydrodynamics/euler",
-"budget/energy_density", "companions/weight_10". A group's variables depend on nothing but that name.
+"budget/energy_density", "companions/weight_10". What a group may hold depends on nothing but that name; of
+the observables a run holds those of its model, which the root's attribute "observables" lists.
 """
 
 from __future__ import annotations
@@ -9,10 +10,12 @@ from __future__ import annotations
 from collections.abc import Iterable
 from dataclasses import dataclass, replace
 
-from tnquench.conventions import OBSERVABLE_PLACES
+from tnquench.conventions import CURRENTS, OBSERVABLE_PLACES
 
-#: Version of the layout below; a reader refuses a file whose version is larger.
-FORMAT_VERSION = 1
+#: Version of the layout below; a reader refuses a file whose version is larger. Files of version 1 are of the
+#: XXZ chain and hold `FIRST_OBSERVABLES`.
+FORMAT_VERSION = 2
+FIRST_OBSERVABLES: tuple[str, ...] = ("energy_density", "energy_current", "charge_density", "charge_current")
 
 #: Name of the dataset in its folder.
 FILE_NAME = "run.h5"
@@ -55,24 +58,37 @@ OWN_COORDINATES: dict[str, Variable] = {
     for place, own in OWN_PLACES.items()
 }
 
-#: Units and names of the four local observables.
+#: Units and meaning of each local observable. What the charge is depends on the model.
 OBSERVABLES: dict[str, Variable] = {
     name: Variable(("time", OBSERVABLE_PLACES[name]), units, long_name)
     for name, units, long_name in (
-        ("energy_density", "energy", "energy density"),
+        ("energy_density", "energy", "energy density, the expectation value of the bond's term of H"),
         ("energy_current", "energy^2", "energy current"),
-        ("charge_density", "1", "charge density"),
-        ("charge_current", "energy", "charge current"),
+        ("charge_density", "1", "charge density: S^z (xxz), n - 1/2 (fermion), n - 1 (hubbard)"),
+        ("charge_current", "energy", "current of the charge density: of S^z (xxz), of particles (otherwise)"),
+        ("magnetisation", "1", "magnetisation S^z"),
+        ("spin_current", "energy", "current of the magnetisation S^z"),
+        ("double_occupancy", "1", "double occupancy, the expectation value of n_up n_down"),
+        ("transverse_magnetisation", "1", "transverse magnetisation, the expectation value of sigma^z"),
     )
 }
 
-_QUANTUM: dict[str, Variable] = OBSERVABLES | {
-    "bond_dimension": Variable(("time", "bond"), "1", "bond dimension", "int64"),
-    "operator_entanglement": Variable(("time", "bond"), "nats", "entropy of entanglement of the state"),
-    "discarded_weight": Variable(("time", "bond"), "1", "discarded weight, summed since the start"),
+#: Sum over the chain of each conserved density.
+TOTALS: dict[str, Variable] = {
     "total_energy": Variable(("time",), "energy", "total energy"),
-    "total_charge": Variable(("time",), "1", "total charge"),
+    "total_charge": Variable(("time",), "1", "sum of the charge density"),
+    "total_magnetisation": Variable(("time",), "1", "total magnetisation S^z"),
 }
+
+_QUANTUM: dict[str, Variable] = (
+    OBSERVABLES
+    | {
+        "bond_dimension": Variable(("time", "bond"), "1", "bond dimension", "int64"),
+        "operator_entanglement": Variable(("time", "bond"), "nats", "entropy of entanglement of the state"),
+        "discarded_weight": Variable(("time", "bond"), "1", "discarded weight, summed since the start"),
+    }
+    | TOTALS
+)
 
 _ON_OWN_PLACES: dict[str, Variable] = OWN_COORDINATES | {
     name: replace(row, dims=tuple(OWN_PLACES.get(dim, dim) for dim in row.dims))
@@ -96,7 +112,9 @@ PROVENANCE: tuple[str, ...] = (
 )
 
 #: Attributes that hold a list or a mapping as JSON text, decoded when a run is opened.
-JSON_ATTRIBUTES: frozenset[str] = frozenset({"versions", "events", "preparation", "references", "main_run"})
+JSON_ATTRIBUTES: frozenset[str] = frozenset(
+    {"versions", "events", "preparation", "references", "main_run", "model"}
+)
 
 #: Variables of a budget that exist only where companion runs measured the errors; so do the verdicts.
 MEASURED: frozenset[str] = frozenset({"error", "numerical", "numerical_norm", "dominant_source"})
@@ -121,6 +139,20 @@ def variables_of(group: str, *, own_places: bool = False) -> dict[str, Variable]
     raise ValueError(message)
 
 
+def total_of(density: str) -> str:
+    """Return the name of the sum over the chain of a conserved density, such as "total_charge"."""
+    return f"total_{density.removesuffix('_density')}"
+
+
+def held_by(group: str, observables: Iterable[str]) -> set[str]:
+    """Return the variables of "quantum" or of a companion that a file with these observables holds."""
+    held = set(observables)
+    if group != "quantum":
+        return held | set(OWN_COORDINATES)
+    own = set(_QUANTUM) - set(OBSERVABLES) - set(TOTALS)
+    return held | own | {total_of(density) for density in CURRENTS if density in held}
+
+
 def attributes_of(group: str, *, sources: Iterable[str]) -> tuple[str, ...]:
     """Return the attributes that group `group` must carry; `sources` are the names on the source scale."""
     head = group.partition("/")[0]
@@ -133,10 +165,15 @@ def attributes_of(group: str, *, sources: Iterable[str]) -> tuple[str, ...]:
     return required.get(head, ())
 
 
+def words(name: str) -> str:
+    """Return a variable's name as words."""
+    return name.replace("_", " ")
+
+
 def _prediction_variables(level: str) -> dict[str, Variable]:
     table: dict[str, Variable] = {}
     for name, observable in OBSERVABLES.items():
-        said = f"{observable.long_name}, {level} hydrodynamics"
+        said = f"{words(name)}, {level} hydrodynamics"
         table[name] = replace(observable, long_name=said)
         table[f"{name}_grid_error"] = replace(observable, long_name=f"error of the grids: {said}")
         table[f"{name}_strings_error"] = replace(observable, long_name=f"error of the strings: {said}")
@@ -145,7 +182,7 @@ def _prediction_variables(level: str) -> dict[str, Variable]:
 
 def _budget_variables(name: str) -> dict[str, Variable]:
     observable = OBSERVABLES[name]
-    dims, units, said = observable.dims, observable.units, observable.long_name
+    dims, units, said = observable.dims, observable.units, words(name)
     table = {
         "error": Variable(("source", *dims), units, f"error of the {said} by source"),
         "bound": Variable(dims, units, f"rigorous bound on the real-time truncation error of the {said}"),

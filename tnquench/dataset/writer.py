@@ -19,6 +19,7 @@ from tnquench.dataset.variables import (
     FILE_NAME,
     FORMAT_VERSION,
     JSON_ATTRIBUTES,
+    OBSERVABLES,
     OWN_COORDINATES,
     Variable,
     variables_of,
@@ -44,7 +45,8 @@ def write_run(
                   positions "site_length" and "bond_length" to its group.
     attributes  : attributes by group, "" for the root; lists and mappings are stored as JSON text
     provenance  : attributes of /provenance; format version and digest are added here
-    Without "quantum" the file is marked as a prediction alone, otherwise as a run.
+    Without "quantum" the file is marked as a prediction alone, otherwise as a run. The root's attribute
+    "observables" lists those of "quantum", or of the prediction.
     Raises InputError if the file cannot be written, ValueError for names, shapes or types the layout lacks.
     """
     contents = assemble_contents(
@@ -91,11 +93,22 @@ def assemble_contents(
     for group, arrays in groups.items():
         variables |= _group_variables(group, arrays, scales)
     said = {group: _plain_attributes(values) for group, values in attributes.items() if values}
-    said[""] = {**said.get("", {}), "content": "run" if "quantum" in groups else "prediction"}
+    said[""] = {
+        **said.get("", {}),
+        "content": "run" if "quantum" in groups else "prediction",
+        "observables": " ".join(_observables(groups)),
+    }
     said["provenance"] = {**_plain_attributes(provenance), "format_version": FORMAT_VERSION}
     digest = digest_of_contents(Contents(variables=variables, attributes=said))
     said["provenance"] = {**said["provenance"], "digest": digest}
     return Contents(variables=variables, attributes=said)
+
+
+def _observables(groups: Mapping[str, Mapping[str, ArrayLike]]) -> list[str]:
+    """Return the observables of a run, or of its predictions where they stand alone."""
+    predictions = [group for group in groups if group.startswith("hydrodynamics/")]
+    told = ["quantum"] if "quantum" in groups else predictions
+    return [name for name in OBSERVABLES if any(name in groups[group] for group in told)]
 
 
 def _group_variables(

@@ -9,12 +9,14 @@ import numpy as np
 import xarray
 from numpy.typing import NDArray
 
-from tnquench.budget.verdict import SHARP_REACH, light_cone_window, window_norm
+from tnquench.budget.verdict import SHARP_REACH, interior, light_cone_window, window_norm
 from tnquench.conventions import OBSERVABLE_PLACES, PHYSICAL_SOURCES, Reals
 from tnquench.dataset.reader import Run
 from tnquench.dataset.variables import LEVELS
+from tnquench.report.models import words_of
 from tnquench.report.question import is_step, settings_of
 from tnquench.report.units import Units, units_of
+from tnquench.report.wording import labelled, typeset
 
 Verdicts = NDArray[np.bool_]
 
@@ -29,6 +31,7 @@ STILL = 2e-3
 class Comparison:
     """Everything known about one observable; what the run did not compute is None.
 
+    said : its name in running text; formula : what it is where the name does not say
     times (time,) and positions (place,) in lattice spacings span the arrays below, all of shape
     (time, place) and in `unit` unless said otherwise.
     deviation : quantum minus prediction; resolved : the verdict on it
@@ -41,6 +44,8 @@ class Comparison:
     """
 
     name: str
+    said: str
+    formula: str
     unit: str
     units: Units
     level: str
@@ -62,6 +67,10 @@ class Comparison:
     reach: float
     joined: bool
 
+    def axis_label(self, unit: str) -> str:
+        """Return the label of an axis of a figure with values of the observable in `unit`."""
+        return typeset(labelled(f"{self.said} {self.formula}".rstrip(), unit))
+
     @property
     def known(self) -> Reals:
         """The quantum values, or the prediction where it stands alone."""
@@ -77,12 +86,19 @@ class Comparison:
     @property
     def stretch(self) -> Verdicts:
         """Places where anything moves, with a margin, (place,); all of them where nothing does."""
+        inner = interior(self.positions)
         moved = np.max(np.abs(self.known - self.known[0]), axis=0)
-        x = self.positions[moved > STILL * float(np.ptp(self.known))]
+        x = self.positions[(moved > STILL * float(np.ptp(self.known[:, inner]))) & inner]
         if x.size == 0:
             return np.ones(self.positions.size, dtype=np.bool_)
         margin = 2.0 + 0.1 * float(np.ptp(x))
         return np.asarray((self.positions >= x[0] - margin) & (self.positions <= x[-1] + margin))
+
+    @property
+    def framed(self) -> Verdicts:
+        """Places whose values set the scale of a picture, (place,): those where anything moves but the ends,
+        whose bonds hold whole terms of the end sites."""
+        return np.asarray(self.stretch & interior(self.positions))
 
     @property
     def window(self) -> Verdicts:
@@ -111,11 +127,13 @@ def compare(run: Run, name: str) -> Comparison:
     budget = run.budget.get(name, xarray.Dataset())
     estimated = bool(run.companions)
     settings = settings_of(run)
-    units = units_of(settings)
+    units, words = units_of(settings), words_of(settings)
     cone = (theory.attrs.get("light_cone_left"), theory.attrs.get("light_cone_right"))
     field = run.quantum if name in run.quantum else theory
     return Comparison(
         name=name,
+        said=words.name(name),
+        formula=words.formulas.get(name, ""),
         unit=units.symbol(str(field[name].attrs.get("units"))) if name in field else "",
         units=units,
         level=level,

@@ -12,28 +12,29 @@ from tnquench.conventions import Integers, Reals
 from tnquench.report.canvas import FAINT, INK, PREDICTION, QUANTUM, Panel, Plate, axes_at
 from tnquench.report.comparison import Comparison
 from tnquench.report.maps import X_LABEL
-from tnquench.report.scales import linear, reach, span, symmetric_decades, typeset
-from tnquench.report.wording import LEVEL_NAMES, OBSERVABLE_NAMES, TIMES, labelled, plain
+from tnquench.report.scales import linear, reach, span, symmetric_decades
+from tnquench.report.wording import LEVEL_NAMES, TIMES, labelled, plain, typeset
 
 SIZE = (5.6, 4.2)
 LEFT, RIGHT, BOTTOM, TOP = 0.78, 0.12, 0.5, 0.34
 LOWER, GAP = 1.3, 0.16  # height of the lower axes, and the space above it
-#: Cuts are taken nearest to these fractions of the last time.
+#: Cuts are taken nearest to these fractions of the last time; of what is not in the foreground at fewer.
 FRACTIONS = (0.1, 0.35, 0.65, 1.0)
+FEW_FRACTIONS = (0.35, 1.0)
 
 
-def cut_times(times: Reals) -> Integers:
-    """Return the indices of up to four measured times after the start, spread to the last one."""
+def cut_times(times: Reals, fractions: tuple[float, ...] = FRACTIONS) -> Integers:
+    """Return the indices of the measured times after the start nearest to these fractions of the last one."""
     later = np.flatnonzero(times > 0)
     if later.size == 0:
         return np.arange(times.size, dtype=np.int64)
-    nearest = [int(later[np.argmin(np.abs(times[later] - part * times[-1]))]) for part in FRACTIONS]
+    nearest = [int(later[np.argmin(np.abs(times[later] - part * times[-1]))]) for part in fractions]
     return np.unique(np.asarray(nearest, dtype=np.int64))
 
 
-def cut_plate(field: Comparison) -> Plate:
-    """Return the profile cuts of one observable."""
-    said = OBSERVABLE_NAMES[field.name]
+def cut_plate(field: Comparison, fractions: tuple[float, ...] = FRACTIONS) -> Plate:
+    """Return the profile cuts of one observable at these fractions of the last time."""
+    said = field.said
     instants = [field.units.instant(float(time)) for time in field.times]
     panels = tuple(
         Panel(
@@ -42,7 +43,7 @@ def cut_plate(field: Comparison) -> Plate:
             partial(_draw_cut, field, int(index)),
             *SIZE,
         )
-        for number, index in enumerate(cut_times(field.times), start=1)
+        for number, index in enumerate(cut_times(field.times, fractions), start=1)
     )
     return Plate(f"{field.name}_cuts", said, "", panels, columns=2)
 
@@ -65,7 +66,7 @@ def _draw_cut(field: Comparison, index: int, figure: FigureBase) -> None:
     bottom = BOTTOM + (LOWER + GAP if below else 0.0)
     upper = axes_at(figure, SIZE, left=LEFT, right=RIGHT, bottom=bottom, top=TOP)
     _values(upper, field, index)
-    upper.set_title(field.units.instant(float(field.times[index])))
+    upper.set_title(typeset(field.units.instant(float(field.times[index]))))
     handles, names = upper.get_legend_handles_labels()
     if below:
         upper.tick_params(labelbottom=False)
@@ -103,10 +104,10 @@ def _values(axes: Axes, field: Comparison, index: int) -> None:
         theory = LEVEL_NAMES.get(field.level, field.level)
         axes.plot(x, field.prediction[index], color=PREDICTION, label=theory, zorder=2)
     axes.set_xlim(*reach(x[field.stretch]))
-    low, high = span(field.known[:, field.stretch], margin=0.06)
+    low, high = span(field.known[:, field.framed], margin=0.06)
     axes.set_ylim(low, high)
     unit = linear(axes.yaxis, max(abs(low), abs(high)), field.unit)
-    axes.set_ylabel(labelled(OBSERVABLE_NAMES[field.name], unit))
+    axes.set_ylabel(field.axis_label(unit))
 
 
 def _difference(axes: Axes, field: Comparison, index: int) -> None:

@@ -14,8 +14,8 @@ from tnquench.budget.verdict import SHARP_REACH
 from tnquench.conventions import Reals
 from tnquench.report.canvas import DIVERGING, EDGE, HEAT, INK, UNRESOLVED, Panel, Plate, axes_at
 from tnquench.report.comparison import Comparison
-from tnquench.report.scales import linear, reach, span, symmetric_decades, typeset
-from tnquench.report.wording import LEVEL_NAMES, MINUS, OBSERVABLE_NAMES, plain
+from tnquench.report.scales import linear, reach, span, symmetric_decades
+from tnquench.report.wording import LEVEL_NAMES, MINUS, plain, typeset
 
 SIZE = (3.72, 3.15)
 X_LABEL = "position x (lattice spacings)"
@@ -23,11 +23,11 @@ X_LABEL = "position x (lattice spacings)"
 
 def map_plate(field: Comparison) -> Plate:
     """Return the maps of the quantum side, the prediction and their difference, as far as they exist."""
-    said = OBSERVABLE_NAMES[field.name]
+    said = field.said
     theory = LEVEL_NAMES.get(field.level, field.level)
     sides = {"quantum": field.quantum, "prediction": field.prediction}
     shown = {side: values for side, values in sides.items() if values is not None}
-    scale = span(np.concatenate([values[:, field.stretch].ravel() for values in shown.values()]))
+    scale = span(np.concatenate([values[:, field.framed].ravel() for values in shown.values()]))
     titles = {"quantum": f"Quantum chain: {said}", "prediction": f"{theory}: {said}"}
     panels = [
         _panel(field, side, titles[side], partial(_draw_field, field, values, titles[side], scale))
@@ -58,7 +58,7 @@ def map_note(field: Comparison) -> str:
 
 
 def _panel(field: Comparison, side: str, title: str, draw: partial[None]) -> Panel:
-    description = f"Map over position and time. {title}, {OBSERVABLE_NAMES[field.name]}"
+    description = f"Map over position and time. {title}, {field.said}"
     return Panel(f"{field.name}_map_{side}", description, draw, *SIZE)
 
 

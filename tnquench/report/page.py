@@ -14,8 +14,9 @@ from tnquench.dataset.reader import Run, open_run
 from tnquench.errors import InputError
 from tnquench.report.canvas import Panel, render
 from tnquench.report.figures import Chapter, chapters, comparisons
-from tnquench.report.provenance import event_remarks, event_rows, provenance_rows
-from tnquench.report.question import question, settings_of, subject
+from tnquench.report.models import words_of
+from tnquench.report.provenance import event_remarks, event_rows, notices, provenance_rows
+from tnquench.report.question import absence, question, settings_of, subject
 from tnquench.report.references import CUT_KEYS, EULER_KEYS, QUANTUM_KEYS, TROTTER_KEYS, citations
 from tnquench.report.tables import summary
 from tnquench.report.units import units_of
@@ -24,6 +25,14 @@ from tnquench.report.wording import unbroken
 
 REPORT_NAME = "report.html"
 FIGURE_FOLDER = "figures"
+
+#: What the page is, by whether it has the chain's dynamics and a prediction.
+KINDS = {
+    (True, True): "Hydrodynamics of a quantum chain, judged against its exact dynamics",
+    (True, False): "Exact dynamics of a quantum chain, with its error",
+    (False, True): "Hydrodynamic prediction for a quantum chain",
+    (False, False): "An empty dataset",
+}
 
 
 def write_report(folder: Path | str) -> Path:
@@ -51,7 +60,6 @@ def render_page(run: Run, figures: Path) -> str:
     """Return the page as HTML text and store every figure in folder `figures`."""
     drawn, zero = comparisons(run)
     settings = settings_of(run)
-    events = event_rows(run)
     environment = Environment(
         loader=PackageLoader("tnquench", "report"),
         autoescape=True,
@@ -62,14 +70,16 @@ def render_page(run: Run, figures: Path) -> str:
     return environment.get_template("page.html").render(
         title=run.provenance.get("title") or "Untitled",
         question=[(heading, unbroken(text)) for heading, text in question(run, settings)],
-        verdict=unbroken(headline(drawn, about=subject(settings))),
-        remarks=[*remarks(zero), *event_remarks(events)],
+        kind=KINDS[(bool(len(run.quantum)), bool(run.hydrodynamics))],
+        verdict=unbroken(headline(drawn, about=subject(settings), absence=absence(run))),
+        notices=[unbroken(notice) for notice in notices(run)],
+        remarks=[*remarks(zero), *event_remarks(run)],
         summary=summary(drawn),
         estimated=bool(run.companions),
         compared=any(field.deviation is not None for field in drawn),
         windowed=any(field.light_cone is not None for field in drawn),
         chapters=[_chapter(chapter, figures) for chapter in chapters(run, drawn)],
-        events=events,
+        events=event_rows(run),
         time_unit=units_of(settings).symbol("1/energy"),
         config=str(run.provenance.get("config_toml", "")),
         provenance=provenance_rows(run, units_of(settings)),
@@ -101,14 +111,15 @@ def _picture(panel: Panel, figures: Path) -> dict[str, str]:
 
 
 def _references(run: Run, settings: dict[str, Any]) -> list[str]:
+    words = words_of(settings)
     keys: list[str] = []
     evolution = settings.get("evolution", {})
     if len(run.quantum):
-        keys += QUANTUM_KEYS
+        keys += [*words.references, *QUANTUM_KEYS]
         keys += TROTTER_KEYS.get(evolution.get("trotter_order", 4), ())
         keys += CUT_KEYS.get(evolution.get("cut", "subspace"), ())
     for theory in run.hydrodynamics.values():
-        keys += EULER_KEYS
+        keys += [*EULER_KEYS, *words.solution]
         named = theory.attrs.get("references", [])
         keys += named if isinstance(named, list) else [str(named)]
     return citations(keys)

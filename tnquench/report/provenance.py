@@ -8,10 +8,13 @@ from typing import Any
 
 from tnquench.dataset.reader import Run
 from tnquench.report.units import Units
-from tnquench.report.wording import DASH, duration, plain, unbroken
+from tnquench.report.wording import DASH, capitalised, duration, plain, unbroken
 
 #: A few events are told beside the verdict, more of them only counted.
 FEW = 3
+
+#: Kinds of events that have sentences of their own at the head of the report.
+TOLD_ELSEWHERE = ("extra", "no_prediction")
 
 MEGABYTE = 1e6
 
@@ -41,16 +44,22 @@ def provenance_rows(run: Run, units: Units) -> list[tuple[str, list[str]]]:
 
 def event_rows(run: Run) -> list[tuple[str, str, str]]:
     """Return time, kind and detail of each event of the run."""
-    events = run.provenance.get("events") or []
-    return [
-        (_moment(event.get("time")), _words(event.get("kind", "")), str(event.get("detail", "")))
-        for event in events
-        if isinstance(event, Mapping)
-    ]
+    return [_row(event) for event in _events(run)]
 
 
-def event_remarks(events: list[tuple[str, str, str]]) -> list[str]:
-    """Return what stands beside the verdict about the events: each of a few, or their number and kinds."""
+def notices(run: Run) -> list[str]:
+    """Return what extra terms of H mean for the verdict, a sentence each."""
+    said = [_words(event.get("detail", "")) for event in _events(run) if event.get("kind") == "extra"]
+    return [f"{capitalised(sentence).rstrip('.')}." for sentence in said if sentence]
+
+
+def event_remarks(run: Run) -> list[str]:
+    """Return what stands beside the verdict about the events: each of a few, or their number and kinds.
+
+    Extra terms and the absence of a prediction are told elsewhere.
+    """
+    told = [event for event in _events(run) if event.get("kind") not in TOLD_ELSEWHERE]
+    events = [_row(event) for event in told]
     if len(events) <= FEW:
         return [
             f"{kind.capitalize()}: {detail}" if time == DASH else f"{kind.capitalize()}, t = {time}: {detail}"
@@ -58,6 +67,14 @@ def event_remarks(events: list[tuple[str, str, str]]) -> list[str]:
         ]
     kinds = ", ".join(dict.fromkeys(kind for _, kind, _ in events))
     return [f"The run recorded {len(events)} events ({kinds}), listed below."]
+
+
+def _events(run: Run) -> list[Mapping[str, Any]]:
+    return [event for event in run.provenance.get("events") or [] if isinstance(event, Mapping)]
+
+
+def _row(event: Mapping[str, Any]) -> tuple[str, str, str]:
+    return _moment(event.get("time")), _words(event.get("kind", "")), str(event.get("detail", ""))
 
 
 def _companion(said: Mapping[str, Any], units: Units) -> str:

@@ -7,10 +7,14 @@ from collections.abc import Mapping
 from typing import Any
 
 from tnquench.dataset.reader import Run
+from tnquench.report.models import ModelWords, extra_lines, words_of
 from tnquench.report.units import Units, units_of
-from tnquench.report.wording import LEVEL_NAMES, labelled, plain
+from tnquench.report.wording import LEVEL_NAMES, capitalised, labelled, plain
 
 Table = Mapping[str, Any]
+
+#: Profiles of the start beside the inverse temperature, as the products that they are.
+PROFILES = {"beta_mu": "chemical potential βμ", "beta_field": "field βh"}
 
 ORDERS = {2: "second", 4: "fourth"}
 
@@ -26,49 +30,56 @@ def settings_of(run: Run) -> dict[str, Any]:
 def is_step(settings: Table) -> bool:
     """Whether the start joins two halves at x = 0."""
     start = settings.get("start", {})
-    shapes = [start.get(name, {}).get("shape") for name in ("beta", "beta_field")]
+    shapes = [start.get(name, {}).get("shape") for name in ("beta", *PROFILES)]
     return "step" in shapes and all(shape in ("step", "uniform", None) for shape in shapes)
 
 
 def subject(settings: Table) -> str:
-    """Return the observable a run is about: the charge density where only the field varies, else energy."""
+    """Return the observable a run is about: where the temperature is the same everywhere, the charge whose
+    field or chemical potential varies, else the energy."""
     start = settings.get("start", {})
-    only_field = start.get("beta", {}).get("shape") == "uniform" and "beta_field" in start
-    return "charge_density" if only_field else "energy_density"
+    if start.get("beta", {}).get("shape") != "uniform":
+        return "energy_density"
+    varying = [name for name in PROFILES if start.get(name, {}).get("shape", "uniform") != "uniform"]
+    spins_are_charges = settings.get("chain", {}).get("model", "xxz") != "hubbard"
+    if not varying:
+        return "energy_density"
+    return "charge_density" if "beta_mu" in varying or spins_are_charges else "magnetisation"
 
 
 def question(run: Run, settings: Table) -> list[tuple[str, str]]:
     """Return pairs of a heading and a line of text."""
-    units = units_of(settings)
-    lines = [
-        ("Chain", _chain(settings.get("chain", {}))),
-        ("Start", _start(settings.get("start", {}), units)),
-    ]
+    units, words = units_of(settings), words_of(settings)
+    lines = [("Chain", _chain(settings.get("chain", {}), words))]
+    if extras := extra_lines(settings.get("chain", {}).get("extra")):
+        lines.append(("Extra terms", "; ".join(extras)))
+    lines.append(("Start", _start(settings.get("start", {}), units)))
     if len(run.quantum):
         lines.append(("Evolution", _evolution(settings.get("evolution", {}), run, units)))
+    if remarks := [remark for name, remark in words.remarks.items() if name in run.quantum]:
+        lines.append(("Measured", capitalised("; ".join(remarks))))
     lines.append(("Prediction", _prediction(run)))
     if run.budget:
         lines.append(("Errors", _budget(run)))
     return lines
 
 
-def _chain(chain: Table) -> str:
-    model = str(chain.get("model", "xxz"))
+def _chain(chain: Table, words: ModelWords) -> str:
     sites = f"{chain.get('sites', '?')} sites, open ends"
-    if model != "xxz":
-        return f"{model}, {sites}"
-    anisotropy, coupling = float(chain.get("anisotropy", float("nan"))), float(chain.get("coupling", 1.0))
-    hamiltonian = "spin-1/2 XXZ, H = J Σ (SˣSˣ + SʸSʸ + D SᶻSᶻ)"
-    own = "" if coupling == 1 else " (energies and times in the units in which J has this value)"
-    return f"{hamiltonian}, D = {plain(anisotropy)}, J = {plain(coupling)}{own}; {sites}"
+    said = [part for part in (words.kind, words.hamiltonian) if part]
+    for setting, symbol in words.symbols.items():
+        value = chain.get(setting, 1.0 if setting == words.unit else float("nan"))
+        said.append(f"{symbol} = {plain(float(value))}")
+    own = float(chain.get(words.unit, 1.0)) != 1
+    scale = f" (energies and times in the units in which {words.symbol} has this value)" if own else ""
+    return f"{', '.join(said)}{scale}; {sites}"
 
 
 def _start(start: Table, units: Units) -> str:
     parts = [
         f"{labelled('inverse temperature β', units.symbol('1/energy'))}: {_profile(start.get('beta', {}))}"
     ]
-    if "beta_field" in start:
-        parts.append(f"field βh: {_profile(start['beta_field'])}")
+    parts += [f"{said}: {_profile(start[name])}" for name, said in PROFILES.items() if name in start]
     if start.get("joint") == "separate":
         parts.append("halves separate (no bond at x = 0 in the start)")
     return "; ".join(parts)
@@ -97,7 +108,8 @@ def _evolution(evolution: Table, run: Run, units: Units) -> str:
     if "every" in evolution:
         parts[0] += f", measured every {units.duration(evolution['every'])}"
     if "accuracy" in evolution:
-        parts.append(f"accuracy {plain(evolution['accuracy'])} J asked")
+        unit = units.symbol("energy")
+        parts.append(f"accuracy {plain(evolution['accuracy'])} {unit}".rstrip() + " asked")
     if "discarded_weight" in evolution:
         parts.append(f"discarded weight {plain(evolution['discarded_weight'])} a cut")
     order = f"{ORDERS.get(evolution.get('trotter_order', 4), '')}-order Trotter steps"
@@ -109,9 +121,17 @@ def _evolution(evolution: Table, run: Run, units: Units) -> str:
     return "; ".join(parts)
 
 
+def absence(run: Run) -> str:
+    """Return why a run has no prediction, as far as it says."""
+    events = run.provenance.get("events") or []
+    found = (event for event in events if isinstance(event, Mapping) and event.get("kind") == "no_prediction")
+    return str(next(found, {}).get("detail", ""))
+
+
 def _prediction(run: Run) -> str:
     if not run.hydrodynamics:
-        return "none: no hydrodynamic prediction was computed for this chain"
+        reason = absence(run)
+        return f"none: {reason}" if reason else "none was computed for this chain"
     said = [
         f"{LEVEL_NAMES.get(level, level)}, {theory.attrs.get('method', '')}"
         for level, theory in run.hydrodynamics.items()

@@ -16,6 +16,7 @@ REFERENCES: dict[str, str] = {
     "Nucl. Phys. B 926, 570 (2018).",
     "eckart_1936": "C. Eckart and G. Young, The approximation of one matrix by another of lower rank, "
     "Psychometrika 1, 211 (1936).",
+    "jordan_1928": "P. Jordan and E. Wigner, Über das Paulische Äquivalenzverbot, Z. Phys. 47, 631 (1928).",
     "karrasch_2012": "C. Karrasch, J. H. Bardarson and J. E. Moore, Finite-temperature dynamical density "
     "matrix "
     "renormalization group and the Drude weight of spin-1/2 chains, Phys. Rev. Lett. 108, 227206 (2012).",
@@ -54,8 +55,8 @@ QUANTUM_KEYS: tuple[str, ...] = (
 TROTTER_KEYS: dict[int, tuple[str, ...]] = {2: ("strang_1968",), 4: ("mclachlan_1995",)}
 CUT_KEYS: dict[str, tuple[str, ...]] = {"subspace": ("unfried_2023",)}
 
-#: Behind every prediction at Euler scale for a chain solved by the Bethe ansatz.
-EULER_KEYS: tuple[str, ...] = ("castro_alvaredo_2016", "bertini_2016", "takahashi_1972", "takahashi_1999")
+#: Behind every prediction at Euler scale.
+EULER_KEYS: tuple[str, ...] = ("castro_alvaredo_2016", "bertini_2016")
 
 
 def citations(keys: Iterable[str]) -> list[str]:

@@ -2,7 +2,6 @@
 
 from __future__ import annotations
 
-import re
 from collections.abc import Sequence
 
 import numpy as np
@@ -11,19 +10,10 @@ from matplotlib.axis import Axis
 from matplotlib.ticker import FixedLocator, Formatter, FuncFormatter, LogLocator, MaxNLocator, NullLocator
 
 from tnquench.conventions import Reals
-from tnquench.report.wording import MINUS, number, plain, power_of_ten
+from tnquench.report.wording import MINUS, number, plain, power_of_ten, typeset
 
 #: A field that varies by less than this fraction of its size is drawn as flat as it is.
 FLAT = 0.02
-
-
-SUPERSCRIPT_RUN = re.compile("[⁻⁰¹²³⁴⁵⁶⁷⁸⁹]+")
-FROM_SUPERSCRIPTS = str.maketrans("⁻⁰¹²³⁴⁵⁶⁷⁸⁹", "-0123456789")
-
-
-def typeset(text: str) -> str:
-    """Return a text for a figure with its raised digits as formulas: the figures' font has few of them."""
-    return SUPERSCRIPT_RUN.sub(lambda run: f"$^{{{run.group().translate(FROM_SUPERSCRIPTS)}}}$", text)
 
 
 def span(values: Reals, *, margin: float = 0.0) -> tuple[float, float]:

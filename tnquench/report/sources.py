@@ -12,19 +12,21 @@ from tnquench.conventions import Reals
 from tnquench.report.canvas import FAINT, INK, PREDICTION, QUANTUM, SOURCE_STYLES, Panel, Plate, axes_at
 from tnquench.report.comparison import NOTHING_PREDICTED, Comparison, Verdicts, numerical_sources
 from tnquench.report.maps import X_LABEL
-from tnquench.report.scales import linear, logarithmic, reach, span, typeset
+from tnquench.report.scales import linear, logarithmic, reach, span
 from tnquench.report.wording import (
     MINUS,
-    OBSERVABLE_NAMES,
     SOURCE_NAMES,
     capitalised,
     labelled,
     plain,
     quantity,
+    typeset,
 )
 
 WIDE = (5.6, 3.3)
 START = (5.6, 2.9)
+#: Sources that only a prediction has.
+THEORY_SOURCES = ("prediction_grid", "strings")
 #: The axis ends this far below the smaller of deviation and summed error; a source below it is negligible.
 NEGLIGIBLE = 1e-4
 
@@ -34,13 +36,14 @@ def budget_plate(fields: list[Comparison]) -> Plate:
     panels = tuple(
         Panel(
             f"{field.name}_budget",
-            f"Error budget of the {OBSERVABLE_NAMES[field.name]} against time, by source",
+            f"Error budget of the {field.said} against time, by source",
             partial(_draw_budget, field),
             *WIDE,
         )
         for field in fields
     )
-    caption = "Root mean square over the points inside the light cone"
+    cone = any(field.light_cone is not None for field in fields)
+    caption = f"Root mean square over the points {'inside the light cone' if cone else 'away from the ends'}"
     if any(field.errors for field in fields):
         caption += ", sources in the order of their size at the end"
     caption += (
@@ -67,7 +70,7 @@ def start_plate(fields: list[Comparison]) -> Plate:
 
 
 def _start_panels(field: Comparison) -> list[Panel]:
-    said = OBSERVABLE_NAMES[field.name]
+    said = field.said
     return [
         Panel(
             f"{field.name}_start",
@@ -104,14 +107,18 @@ def _largest_mismatch(fields: list[Comparison]) -> str:
         place = int(np.argmax(np.abs(start_mismatch(field)) * _mismatched(field)))
         size = quantity(abs(float(start_mismatch(field)[place])), field.unit)
         where = plain(float(field.positions[place]))
-        parts.append(f"{size} in the {OBSERVABLE_NAMES[field.name]} (x = {where})")
+        parts.append(f"{size} in the {field.said} (x = {where})")
     return f"Largest: {', '.join(parts)}."
 
 
 def _draw_budget(field: Comparison, figure: FigureBase) -> None:
     axes = axes_at(figure, WIDE, left=0.72, right=1.78, bottom=0.5, top=0.32)
     t = field.times
-    norms = {source: field.norm(values) for source, values in numerical_sources(field.errors).items()}
+    norms = {
+        source: field.norm(values)
+        for source, values in numerical_sources(field.errors).items()
+        if field.prediction is not None or source not in THEORY_SOURCES
+    }
     bound = None if field.bound is None else field.norm(field.bound)
     low, high = _range([field.deviation_norm, field.numerical_norm], [*norms.values(), bound])
     if field.deviation_norm is not None:
@@ -125,7 +132,7 @@ def _draw_budget(field: Comparison, figure: FigureBase) -> None:
     if bound is not None:
         axes.plot(t, _above(bound, low), "--", color=FAINT, lw=1.3, label="truncation,\nrigorous bound")
     said = typeset(labelled("norm", field.unit))
-    axes.set(title=capitalised(OBSERVABLE_NAMES[field.name]), xlabel=field.units.time_label, ylabel=said)
+    axes.set(title=capitalised(field.said), xlabel=field.units.time_label, ylabel=said)
     axes.set_xlim(0.0, float(t[-1]) or 1.0)
     logarithmic(axes, low, high)
     axes.legend(loc="center left", bbox_to_anchor=(1.02, 0.5), borderaxespad=0.0)
@@ -168,11 +175,11 @@ def _draw_start(field: Comparison, figure: FigureBase) -> None:
     ):
         if side is not None:
             axes.plot(field.positions, side[0], style, ms=3.0, color=colour, label=label)
-    sides = [side[0, field.stretch] for side in (field.quantum, field.prediction) if side is not None]
+    sides = [side[0, field.framed] for side in (field.quantum, field.prediction) if side is not None]
     low, high = span(np.concatenate(sides), margin=0.06)
     axes.set_ylim(low, high)
     unit = linear(axes.yaxis, max(abs(low), abs(high)), field.unit)
-    _finish(axes, field, labelled(OBSERVABLE_NAMES[field.name], unit))
+    _finish(axes, field, field.axis_label(unit))
 
 
 def _draw_mismatch(field: Comparison, figure: FigureBase) -> None:
@@ -191,6 +198,6 @@ def _draw_mismatch(field: Comparison, figure: FigureBase) -> None:
 
 
 def _finish(axes: Axes, field: Comparison, label: str) -> None:
-    axes.set(title=f"{capitalised(OBSERVABLE_NAMES[field.name])}, t = 0", xlabel=X_LABEL, ylabel=label)
+    axes.set(title=f"{capitalised(field.said)}, t = 0", xlabel=X_LABEL, ylabel=label)
     axes.set_xlim(*reach(field.positions[field.stretch]))
     axes.legend(loc="lower right", bbox_to_anchor=(1.0, 1.0), ncols=2, fontsize=8.5, borderaxespad=0.1)

@@ -11,7 +11,7 @@ import numpy as np
 from tnquench.conventions import Reals
 from tnquench.report.comparison import Comparison
 from tnquench.report.verdict import first_resolved, largest
-from tnquench.report.wording import DASH, OBSERVABLE_NAMES, SOURCE_NAMES, percent, plain, quantity
+from tnquench.report.wording import DASH, SOURCE_NAMES, number, percent, plain, quantity
 
 NOT_KNOWN = DASH
 
@@ -51,7 +51,7 @@ def summary(fields: list[Comparison]) -> Summary:
     columns = _columns(fields)
     return Summary(
         tuple(columns),
-        tuple((OBSERVABLE_NAMES[field.name], _cells(field, list(columns.values()))) for field in fields),
+        tuple((field.said, _cells(field, list(columns.values()))) for field in fields),
     )
 
 
@@ -60,14 +60,17 @@ def _columns(fields: list[Comparison]) -> dict[str, Column]:
     estimated = any(field.numerical is not None for field in fields)
     bounded = any(field.bound is not None for field in fields)
     found: dict[str, Column] = {}
+    if not compared:
+        found["Values"] = lambda field, _: Cell(_range(field))
     if compared:
         found["Largest deviation"] = lambda field, at: Cell(
-            _quantity(field, field.deviation, at.overall, 2), _where(field, at.overall)
+            _quantity(field, field.deviation, at.overall, 2), _deviates(field, at.overall)
         )
     if estimated:
         heading = "Numerical error there" if compared else "Largest numerical error"
         found[heading] = lambda field, at: Cell(
-            _quantity(field, field.numerical, at.overall, 1), "" if compared else _where(field, at.overall)
+            _quantity(field, field.numerical, at.overall, 1),
+            "" if field.deviation is not None else _where(field, at.overall),
         )
     if bounded:
         heading = "Rigorous bound there" if compared or estimated else "Largest rigorous bound"
@@ -75,7 +78,7 @@ def _columns(fields: list[Comparison]) -> dict[str, Column]:
     if compared:
         found["Largest deviation at the last time"] = lambda field, at: Cell(
             _quantity(field, field.deviation, at.last, 2),
-            f"± {_quantity(field, field.numerical, at.last, 1)}" if estimated else _where(field, at.last),
+            _below(field, at.last, estimated=estimated),
         )
     if compared and estimated:
         found["First resolved"] = lambda field, _: Cell(_first(field))
@@ -101,6 +104,21 @@ def _cells(field: Comparison, columns: list[Column]) -> tuple[Cell, ...]:
 
 def _quantity(field: Comparison, values: Reals | None, at: tuple[int, int], digits: int) -> str:
     return NOT_KNOWN if values is None else quantity(float(values[at]), field.unit, digits=digits)
+
+
+def _deviates(field: Comparison, at: tuple[int, int]) -> str:
+    return "no prediction" if field.deviation is None else _where(field, at)
+
+
+def _below(field: Comparison, at: tuple[int, int], *, estimated: bool) -> str:
+    if field.deviation is None:
+        return ""
+    return f"± {_quantity(field, field.numerical, at, 1)}" if estimated else _where(field, at)
+
+
+def _range(field: Comparison) -> str:
+    low, high = float(field.known.min()), float(field.known.max())
+    return f"{number(low)} to {quantity(high, field.unit)}"
 
 
 def _where(field: Comparison, at: tuple[int, int]) -> str:

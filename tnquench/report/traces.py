@@ -11,11 +11,13 @@ from matplotlib.axes import Axes
 from matplotlib.figure import FigureBase
 
 from tnquench.conventions import Reals
+from tnquench.dataset.variables import TOTALS
 from tnquench.report.canvas import FAINT, INK, PREDICTION, QUANTUM, Panel, Plate, axes_at
 from tnquench.report.comparison import NOTHING
-from tnquench.report.scales import linear, logarithmic, typeset
+from tnquench.report.models import ModelWords
+from tnquench.report.scales import linear, logarithmic
 from tnquench.report.units import Units
-from tnquench.report.wording import capitalised, labelled, quantity
+from tnquench.report.wording import capitalised, labelled, quantity, typeset
 
 SMALL = (3.72, 2.9)
 WIDE = (5.6, 3.0)
@@ -43,17 +45,16 @@ def growth_plate(quantum: xarray.Dataset, units: Units) -> Plate:
     return Plate("growth", "Cost of the state", caption, panels, columns=3)
 
 
-def conservation_plate(quantum: xarray.Dataset, units: Units) -> Plate:
-    """Return the drift of total energy and total charge."""
-    said = {"total_energy": "total energy", "total_charge": "total magnetisation"}
+def conservation_plate(quantum: xarray.Dataset, units: Units, words: ModelWords) -> Plate:
+    """Return the drift of each conserved total."""
     panels = tuple(
         Panel(
             f"{name}_drift",
-            f"Drift of the {words} against time",
-            partial(_draw_drift, quantum[name], words, units),
+            f"Drift of the {words.name(name)} against time",
+            partial(_draw_drift, quantum[name], words.name(name), units),
             *WIDE,
         )
-        for name, words in said.items()
+        for name in TOTALS
         if name in quantum and float(np.max(np.abs(quantum[name].values))) > NOTHING
     )
     caption = (

@@ -7,8 +7,8 @@ from dataclasses import dataclass
 import numpy as np
 
 from tnquench.conventions import Reals
-from tnquench.report.comparison import Comparison, Verdicts
-from tnquench.report.wording import LEVEL_NAMES, OBSERVABLE_NAMES, measured, percent, plain, quantity
+from tnquench.report.comparison import Comparison, Verdicts, numerical_sources
+from tnquench.report.wording import LEVEL_NAMES, SOURCE_NAMES, capitalised, measured, percent, plain, quantity
 
 #: A power law is fitted from this fraction of the last time on, to no fewer samples than these.
 FIT_FROM = 0.3
@@ -36,23 +36,23 @@ class PowerLaw:
     last: float
 
 
-def headline(fields: list[Comparison], *, about: str = "energy_density") -> str:
+def headline(fields: list[Comparison], *, about: str = "energy_density", absence: str = "") -> str:
     """Return the verdict of a run in one sentence.
 
     fields : the observables that do not vanish by symmetry
     about  : the observable to speak of, if it is among them
+    absence : why there is no prediction, where there is none
     """
     if not fields:
         return "Every observable of this run is zero by symmetry: there is nothing to compare."
     field = next((field for field in fields if field.name == about), fields[0])
     if field.quantum is None:
         return (
-            f"This dataset holds the prediction alone, up to {_when(field)}: without "
-            "the chain's "
-            "dynamics it gives no verdict on it."
+            f"This dataset holds the prediction alone, up to {_when(field)}: without the chain's dynamics it "
+            "gives no verdict on it."
         )
     if field.prediction is None or field.deviation is None:
-        return _without_prediction(field)
+        return _without_prediction(field, absence)
     last = field.window[-1:]
     if field.resolved is not None and np.any(field.resolved[-1:] & last):
         last = field.resolved[-1:] & last
@@ -108,7 +108,7 @@ def first_resolved(field: Comparison) -> float | None:
 
 
 def _names(field: Comparison) -> tuple[str, str]:
-    return LEVEL_NAMES.get(field.level, field.level), OBSERVABLE_NAMES[field.name]
+    return LEVEL_NAMES.get(field.level, field.level), field.said
 
 
 def _where(field: Comparison, place: int) -> str:
@@ -223,13 +223,17 @@ def _without_companions(field: Comparison, place: int) -> str:
     return f"{opening}; the deviation never exceeds the rigorous bound on truncation, {bound} there."
 
 
-def _without_prediction(field: Comparison) -> str:
-    said = OBSERVABLE_NAMES[field.name]
-    opening = f"No prediction was computed for this chain: the run gives its {said} up to {_when(field)}"
+def _without_prediction(field: Comparison, absence: str) -> str:
+    opening = (
+        f"{_no_prediction(absence)} Here are the quantum side and its error alone: the {field.said} is "
+        f"followed up to {_when(field)}"
+    )
     if field.numerical is not None:
-        time, place = largest(field.numerical, field.window)
+        among = field.judged if field.judged.any() else field.window
+        time, place = largest(field.numerical, among)
         worst = quantity(float(field.numerical[time, place]), field.unit)
-        return f"{opening} with a numerical error up to {worst} ({_at(field, place, time)})."
+        where = f"{_at(field, place, time)}{_source(field, time, place)}"
+        return f"{opening} with a numerical error of at most {worst} ({where})."
     if field.bound is not None:
         bound = quantity(float(np.max(field.bound)), field.unit)
         return (
@@ -238,10 +242,29 @@ def _without_prediction(field: Comparison) -> str:
     return f"{opening}; its numerical error is not estimated."
 
 
+def _no_prediction(absence: str) -> str:
+    """Say that there is no prediction, and why where that is known."""
+    if not absence:
+        return "No prediction exists for this run."
+    if any(words in absence for words in ("no prediction", "no hydrodynamic")):
+        return f"{capitalised(absence)}."
+    return f"No prediction exists for this run: {absence}."
+
+
+def _source(field: Comparison, time: int, place: int) -> str:
+    """Name the largest source of the numerical error at one point, if it is more than half of it."""
+    assert field.numerical is not None
+    sizes = {source: float(values[time, place]) for source, values in numerical_sources(field.errors).items()}
+    named = max(sizes, key=lambda source: sizes[source], default="")
+    if not named or sizes[named] < 0.5 * field.numerical[time, place]:
+        return ""
+    return f", mostly {SOURCE_NAMES.get(named, named)}"
+
+
 def remarks(zero: list[Comparison]) -> list[str]:
     """Return what the verdict leaves out; zero : observables that vanish by symmetry."""
     if not zero:
         return []
-    *others, last = (OBSERVABLE_NAMES[field.name] for field in zero)
+    *others, last = (field.said for field in zero)
     names = f"{', '.join(others)} and {last}" if others else last
     return [f"Zero by symmetry, hence not drawn: {names}."]

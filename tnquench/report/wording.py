@@ -9,16 +9,13 @@ SUPERSCRIPTS = str.maketrans("-0123456789", "⁻⁰¹²³⁴⁵⁶⁷⁸⁹")
 MINUS = "\N{MINUS SIGN}"
 TIMES = "\N{MULTIPLICATION SIGN}"
 NO_BREAK = "\N{NO-BREAK SPACE}"
-BREAKABLE = re.compile(r" (?=[×±≤=]|J\b|J²)|(?<=[×±≤=]) ")  # noqa: RUF001
+BREAKABLE = re.compile(r" (?=[×±≤=]|J\b|J²|tₕ)|(?<=[×±≤=]) ")  # noqa: RUF001
 DASH = "\N{EN DASH}"
 
-#: Name of each observable in running text; the charge is S^z in a spin chain.
-OBSERVABLE_NAMES: dict[str, str] = {
-    "energy_density": "energy density",
-    "energy_current": "energy current",
-    "charge_density": "magnetisation",
-    "charge_current": "spin current",
-}
+#: What the figures' font lacks, as formulas.
+_FORMULA_RUN = re.compile("(?:tₕ|[⁻⁰¹²³⁴⁵⁶⁷⁸⁹]+)+")
+_RAISED_RUN = re.compile("[⁻⁰¹²³⁴⁵⁶⁷⁸⁹]+")
+_FROM_SUPERSCRIPTS = str.maketrans("⁻⁰¹²³⁴⁵⁶⁷⁸⁹", "-0123456789")
 
 #: Name of each error source in running text.
 SOURCE_NAMES: dict[str, str] = {
@@ -51,6 +48,18 @@ def number(value: float, *, digits: int = 2) -> str:
     if -2 <= power < 4:
         return f"{sign}{float(f'{mantissa}e{power}'):.{max(0, digits - 1 - power)}f}"
     return f"{sign}{mantissa} {TIMES} {power_of_ten(power)}"
+
+
+def typeset(text: str) -> str:
+    """Return a text for a figure with raised digits and the hopping as formulas: its font has few of them."""
+
+    def formula(run: re.Match[str]) -> str:
+        raised = _RAISED_RUN.sub(
+            lambda part: f"^{{{part.group().translate(_FROM_SUPERSCRIPTS)}}}", run.group()
+        )
+        return f"${raised.replace('tₕ', 't_h')}$"
+
+    return _FORMULA_RUN.sub(formula, text)
 
 
 def plain(value: float) -> str:

@@ -2,17 +2,18 @@
 
 from __future__ import annotations
 
-from collections.abc import Iterator, Mapping
+from collections.abc import Iterator, Mapping, Set
 from math import prod
 from typing import Any
 
 import numpy as np
 
+from tnquench.assemble import no_prediction
 from tnquench.budget.companions import SHORT
 from tnquench.budget.pilot import Forecast
 from tnquench.config.schema import Config
-from tnquench.conventions import ERROR_SOURCES
-from tnquench.dataset.variables import COORDINATES, LEVELS, OBSERVABLES, Variable, variables_of
+from tnquench.conventions import CURRENTS, ERROR_SOURCES
+from tnquench.dataset.variables import COORDINATES, LEVELS, Variable, held_by, variables_of
 from tnquench.observables.quench import Quench
 from tnquench.run import planned_companions
 from tnquench.terminal.units import duration, plain, size
@@ -44,7 +45,7 @@ def cost_numbers(config: Config, quench: Quench, forecast: Forecast, *, threads:
         "wall_seconds": together,
         "memory_bytes": forecast.memory_bytes,
         "total_memory_bytes": forecast.memory_bytes * min(threads, 1 + len(companions)),
-        "disk_bytes": dataset_bytes(config, companions),
+        "disk_bytes": dataset_bytes(config, quench, companions),
         "pilot_seconds": forecast.pilot_seconds,
         "pilot_time": forecast.pilot_time,
     }
@@ -65,22 +66,37 @@ def cost_rows(numbers: Mapping[str, Any]) -> Iterator[tuple[str, str]]:
     yield "dataset on disk; report and figures add a few MB", size(numbers["disk_bytes"])
 
 
-def dataset_bytes(config: Config, companions: Mapping[str, Quench]) -> int:
-    """Return the size of a run's dataset, whose layout is known before it is computed."""
-    levels = [level for level in LEVELS if level in config.hydrodynamics.levels]
-    absent = tuple(f"{level}_" for level in LEVELS if level not in levels)
+def dataset_bytes(config: Config, quench: Quench, companions: Mapping[str, Quench]) -> int:
+    """Return the size of a run's dataset, whose layout is known before it is computed.
+
+    Every observable counts as predicted where there is a prediction.
+    """
+    conserved = ["energy_density", *quench.chain.charges]
+    names = [*conserved, *(CURRENTS[density] for density in conserved), *quench.chain.densities]
+    wanted = () if no_prediction(config) else config.hydrodynamics.levels
+    levels = [level for level in LEVELS if level in wanted]
     sizes = _places(config.chain.sites)
     sizes |= {"time": config.evolution.intervals + 1, "source": len(ERROR_SOURCES)}
-    budgets = [variables_of(f"budget/{name}") for name in OBSERVABLES]
-    tables = [COORDINATES, variables_of("quantum")]
-    tables += [{name: row for name, row in table.items() if not name.startswith(absent)} for table in budgets]
-    tables += [variables_of(f"hydrodynamics/{level}") for level in levels]
+    tables = [COORDINATES, _only("quantum", held_by("quantum", names))]
+    for name in names:
+        absent = tuple(f"{level}_" for level in LEVELS if level not in levels)
+        rows = variables_of(f"budget/{name}")
+        tables.append({row: variable for row, variable in rows.items() if not row.startswith(absent)})
+    for level in levels:
+        held = {f"{name}{error}" for name in names for error in ("", "_grid_error", "_strings_error")}
+        tables.append(_only(f"hydrodynamics/{level}", held))
     total = sum(_table_bytes(table, sizes) for table in tables)
     for name, companion in companions.items():
         own = {f"{place}_length": count for place, count in _places(companion.chain.sites).items()}
-        table = variables_of(f"companions/{name}", own_places=name == SHORT)
+        group = f"companions/{name}"
+        table = _only(group, held_by(group, names), own_places=name == SHORT)
         total += _table_bytes(table, sizes | own)
     return total
+
+
+def _only(group: str, held: Set[str], *, own_places: bool = False) -> dict[str, Variable]:
+    """Return the rows of a group's table that a file holds."""
+    return {name: row for name, row in variables_of(group, own_places=own_places).items() if name in held}
 
 
 def _places(sites: int) -> dict[str, int]:

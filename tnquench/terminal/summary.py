@@ -9,8 +9,8 @@ from pathlib import Path
 
 from tnquench.dataset.reader import open_run
 from tnquench.report.figures import comparisons
-from tnquench.report.provenance import event_remarks, event_rows
-from tnquench.report.question import settings_of, subject
+from tnquench.report.provenance import event_remarks, notices
+from tnquench.report.question import absence, settings_of, subject
 from tnquench.report.verdict import headline
 
 
@@ -22,8 +22,8 @@ def show_findings(folder: Path) -> None:
 
 
 def findings(folder: Path) -> list[str]:
-    """Return the verdict of the dataset in `folder` and the events of its run, one sentence each."""
+    """Return the verdict of the dataset in `folder`, its extra terms and its events, one sentence each."""
     run = open_run(folder)
     drawn, _ = comparisons(run)
-    verdict = headline(drawn, about=subject(settings_of(run)))
-    return [verdict, *event_remarks(event_rows(run))]
+    verdict = headline(drawn, about=subject(settings_of(run)), absence=absence(run))
+    return [verdict, *notices(run), *event_remarks(run)]
