@@ -7,6 +7,7 @@ from hypothesis import HealthCheck, given, settings
 from hypothesis import strategies as st
 
 from tests.config_cases import CONFIGS, good_configs, toml
+from tnquench.config.extras import KINDS
 from tnquench.config.load import read_config
 from tnquench.config.profile import SHAPES
 from tnquench.config.schema import SECTIONS, Config
@@ -22,6 +23,7 @@ anything = st.recursive(
         st.text(st.characters(exclude_categories=["Cs"]), max_size=8),
         st.dates(),
         st.sampled_from(["step", "table", "xxz", "ising", "euler", "svd", "separate", "full", "../b.csv"]),
+        st.sampled_from(["hubbard", "potential", "box", "next_nearest", "uniform_field"]),
     ),
     lambda inner: (
         st.lists(inner, max_size=4) | st.dictionaries(st.text("abcdeLJ_.", max_size=6), inner, max_size=3)
@@ -31,7 +33,11 @@ anything = st.recursive(
 known_keys = sorted(
     {
         *Config.model_fields,
-        *(key for schema in (*SECTIONS.values(), *SHAPES.values()) for key in schema.model_fields),
+        *(
+            key
+            for schema in (*SECTIONS.values(), *SHAPES.values(), *KINDS.values())
+            for key in schema.model_fields
+        ),
     }
 )
 keys = st.sampled_from(known_keys) | st.text("abcdehilnorstuxyz_", min_size=1, max_size=12)
@@ -43,10 +49,14 @@ def spoiled_configs(draw: st.DrawFn) -> str:
     tables = draw(good_configs())
     for _ in range(draw(st.integers(1, 4))):
         table = tables
-        while nested := [key for key in table if isinstance(table[key], dict)]:
-            if draw(st.booleans()):
+        while nested := [
+            *(table[key] for key in table if isinstance(table[key], dict)),
+            *(entry for value in table.values() if isinstance(value, list) for entry in value),
+        ]:
+            nested = [entry for entry in nested if isinstance(entry, dict)]
+            if not nested or draw(st.booleans()):
                 break
-            table = table[draw(st.sampled_from(nested))]
+            table = draw(st.sampled_from(nested))
         action = draw(st.sampled_from(["replace", "add", "remove", "rename"]))
         if action == "add" or not table:
             table[draw(keys)] = draw(anything)
@@ -110,6 +120,12 @@ def test_scratched_texts_load_or_explain(text):
         "start.beta = []\nstart.beta_field = ''",
         "start.beta.shape = []\nstart.beta.file = 3",
         "start.beta.shape = 'table'\nstart.beta.file = 3",
+        "chain.extra = 3\nchain.model = 'hubbard'",
+        "chain.extra = [3, {}, {kind = 'potential'}, {kind = []}, {kind = 'potential', shape = 'box'}]",
+        "chain.extra = [{kind = 'potential', shape = 'table', file = '../a'}, {kind = 'x', width = []}]",
+        "chain = {sites = 4, anisotropy = 1, extra = [{kind = 'uniform_field', strength = 0x"
+        + "f" * 2000
+        + "}]}",
     ],
 )
 def test_odd_texts_are_explained(text):

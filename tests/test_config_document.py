@@ -10,6 +10,7 @@ from hypothesis import strategies as st
 
 from tests.config_cases import good_configs, toml
 from tnquench.config.document import effective_toml, settings_page
+from tnquench.config.extras import KINDS
 from tnquench.config.load import read_config
 from tnquench.config.notation import quantity, shown, written
 from tnquench.config.profile import SHAPES
@@ -24,7 +25,8 @@ def test_effective_toml_loads_back_to_an_equal_config(tables):
     assert read_config(text, subject="again") == config
     written_settings = tomllib.loads(text)
     for section in SECTIONS:
-        kept = {key for key, value in getattr(config, section).model_dump().items() if value is not None}
+        settings_ = getattr(config, section).model_dump().items()
+        kept = {key for key, value in settings_ if value is not None and not (key == "extra" and not value)}
         assert set(written_settings[section]) == kept, "every setting with a value is written"
 
 
@@ -51,7 +53,7 @@ def test_shown_values_stay_on_one_short_line():
 
 def test_settings_page_has_every_setting_with_its_meaning():
     page = settings_page()
-    for schema in (*SECTIONS.values(), *SHAPES.values()):
+    for schema in (*SECTIONS.values(), *SHAPES.values(), *KINDS.values()):
         for key, field in schema.model_fields.items():
             row = next(
                 line
@@ -62,12 +64,20 @@ def test_settings_page_has_every_setting_with_its_meaning():
             assert field.description
     assert '| `cut` | "subspace", "svd" or "gram" | `"subspace"` |' in page
     assert "| `until` | a positive number, at most 1e6 | must be given | 1/J |" in page
-    assert 'Not available in this version: "ising", "fermion", "hubbard"' in page
+    assert 'Not available in this version: "diffusive"' in page
+    assert "| `in_start` | true or false | `true` |" in page
 
 
 def test_examples_of_the_settings_page_make_a_config():
     blocks = [block.split("```")[0] for block in settings_page().split("```toml\n")[1:]]
-    sections, shapes = blocks[:-5], blocks[-5:]
+    kinds = blocks[-len(KINDS) :]
+    sections, shapes = blocks[: -5 - len(KINDS)], blocks[-5 - len(KINDS) : -len(KINDS)]
     for block in shapes[:-1]:
         read_config("".join(sections[:3]) + block + "".join(sections[3:]), subject="example")
     assert 'file = "profile.csv"' in shapes[-1]
+    for kind, block in zip(KINDS, kinds, strict=True):
+        chain = sections[1]
+        if kind == "longitudinal_field":
+            chain = chain.replace("xxz", "ising").replace("anisotropy", "transverse_field")
+        text = "".join([sections[0], chain, block, sections[2], shapes[0], *sections[3:]])
+        assert read_config(text, subject="example").chain.extra[0].kind == kind

@@ -45,25 +45,23 @@ SINGLE = [
      "[chain] sites = 4.0: must be a whole number from 2 to 100000 (a bond joins two sites)"),
     ("chain.coupling", -1.0, "[chain] coupling = -1.0: must be from 1e-6 to 1e6"),
     ("chain.anisotropy", NAN, "[chain] anisotropy = nan: must be a finite number"),
-    ("chain.model", "ising", '[chain] model = "ising": not available in this version; available: "xxz"'),
-    ("chain.model", "hubbard", '[chain] model = "hubbard": not available in this version; available: "xxz"'),
-    ("chain.model", "fermion", '[chain] model = "fermion": not available in this version; available: "xxz"'),
-    ("chain.model", "xyz", '[chain] model = "xyz": must be "xxz"'),
+    ("chain.model", "xyz",
+     '[chain] model = "xyz": must be "xxz", "ising", "fermion" or "hubbard"; did you mean "xxz"?'),
     ("chain.time_step", 0.1, "[chain] time_step: belongs to [evolution]"),
     ("chain.dt", 0.1, '[chain] dt: no such setting; did you mean "time_step" of [evolution]?'),
     ("chain.time_stpe", 0.1, '[chain] time_stpe: no such setting; did you mean "time_step" of [evolution]?'),
     ("chain.Delta", 1, '[chain] Delta: no such setting; did you mean "anisotropy"?'),
     ("chain.L", 8, '[chain] L: no such setting; did you mean "sites"?'),
     ("chain.hopping", 1,
-     '[chain] hopping: belongs to other models, not available in this version; available: "xxz"'),
-    ("chain.extra", [{"kind": "potential"}],
-     "[[chain.extra]]: extra terms are not available in this version; available: the pure xxz chain"),
+     '[chain] hopping: belongs to models "fermion" and "hubbard"; model "xxz" takes coupling and anisotropy'),
+    ("chain.U", 1, '[chain] U: no such setting; did you mean "repulsion"?'),
+    ("chain.strength", 1, "[chain] strength: belongs to [[chain.extra]]"),
     ("start.joint", "seperate",
      '[start] joint = "seperate": must be "coupled" or "separate"; did you mean "separate"?'),
-    ("start.left", 1.0, "[start] left: belongs to [start.beta] or [start.beta_field]"),
-    ("start.beta_mu", {"shape": "uniform"},
-     "[start.beta_mu]: belongs to other models, not available in this version; available: "
-     "[start.beta_field]"),
+    ("start.left", 1.0, "[start] left: belongs to [start.beta], [start.beta_field] or [start.beta_mu]"),
+    ("start.beta_mu", {"shape": "uniform", "value": 0.1},
+     '[start.beta_mu]: belongs to models "fermion" and "hubbard"; model "xxz" takes [start.beta] and '
+     '[start.beta_field]'),
     ("start.beta", 0.5,
      '[start] beta = 0.5: must be one section, headed [start.beta]; for one value everywhere it sets '
      'shape = "uniform" and value'),
@@ -119,7 +117,13 @@ def test_one_wrong_setting_gives_one_exact_line(path, value, line):
 @pytest.mark.parametrize(
     ("path", "lines"),
     [
-        ("chain", ["[chain]: section missing; it must set sites and anisotropy"]),
+        (
+            "chain",
+            [
+                "[chain]: section missing; it must set sites",
+                "[chain] anisotropy: missing; must be a number from -1000 to 1000",
+            ],
+        ),
         ("start", ["[start]: section missing; it must set [start.beta]"]),
         ("start.beta", ["[start.beta]: section missing; it must set shape and the values of that shape"]),
         (

@@ -25,11 +25,14 @@ RANKS = {
     "report": 5,
     "cluster": 6,
     "notebook": 6,
-    "assemble": 7,
-    "outcome": 8,
-    "run": 9,
-    "terminal": 10,
-    "cli": 11,
+    "judge": 6,
+    "start_of": 7,
+    "prediction_of": 8,
+    "assemble": 9,
+    "outcome": 10,
+    "run": 11,
+    "terminal": 12,
+    "cli": 13,
 }
 
 #: What the report may see: files, and the budget's norms and windows; any report can be rebuilt from its

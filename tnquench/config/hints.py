@@ -6,7 +6,8 @@ import difflib
 from collections.abc import Iterable, Iterator, Mapping
 from typing import Any
 
-from tnquench.config.notation import shown_key
+from tnquench.config.extras import KINDS
+from tnquench.config.notation import shown_key, shown_section
 from tnquench.config.profile import SHAPES
 from tnquench.config.schema import LATER, PROFILES, SECTIONS, Config
 from tnquench.config.setting import Section, note
@@ -40,6 +41,8 @@ def _heading(name: str, value: Any, *, section: str) -> str:
     """Return the place as the config writes it: [section], [[section]] or [section] key."""
     key = shown_key(name)
     dotted = f"{section}.{key}" if section else key
+    if shown_section(section).startswith("[["):
+        return f"{shown_section(section)} {key}"
     if isinstance(value, Mapping):
         return f"[{dotted}]"
     if isinstance(value, (list, tuple)) and value and isinstance(value[0], Mapping):
@@ -48,32 +51,34 @@ def _heading(name: str, value: Any, *, section: str) -> str:
 
 
 def _hint(name: str, *, section: str, owner: type[Section] | None) -> str:
+    section = section.partition("[")[0]  # chain.extra[1] is an entry of chain.extra
     own = _own_names(section, owner)
     elsewhere = {key: places for key, places in _CATALOGUE.items() if section not in places}
     if owner is not None and (meant := _by_symbol(name, owner)):
         return f'did you mean "{meant}"?'
-    if owner is not None and (other_shape := _of_other_shape(name, owner)):
-        return other_shape
+    if owner is not None and (other := _of_other_variant(name, owner)):
+        return other
     if name in elsewhere:
-        return f"belongs to {_places(elsewhere[name])}"
+        return f"belongs to {_places(elsewhere[name], near=section)}"
     if meant := nearest(name, own):
         return f"did you mean [{meant}]?" if meant in SECTIONS and not section else f'did you mean "{meant}"?'
     for other, schema in SECTIONS.items():
         if other != section and (by_symbol := _by_symbol(name, schema)):
             return f'did you mean "{by_symbol}" of [{other}]?'
     if meant := nearest(name, elsewhere, similarity=_NEAR_ELSEWHERE):
-        return f'did you mean "{meant}" of {_places(elsewhere[meant])}?'
+        return f'did you mean "{meant}" of {_places(elsewhere[meant], near=section)}?'
     return f"allowed: {', '.join(own)}"
 
 
-def _of_other_shape(name: str, owner: type[Section]) -> str | None:
-    """Return a hint where `owner` is a shape of profile and `name` a setting of other shapes."""
-    shape = next((shape for shape, schema in SHAPES.items() if schema is owner), None)
-    others = [f'"{other}"' for other, schema in SHAPES.items() if name in schema.model_fields]
-    if shape is None or not others:
-        return None
-    takes = alternatives((key for key in owner.model_fields if key != "shape"), last="and")
-    return f'belongs to shape {alternatives(others)}; shape "{shape}" takes {takes}'
+def _of_other_variant(name: str, owner: type[Section]) -> str | None:
+    """Return a hint where `owner` is a shape of profile (a kind of extra) and `name` a setting of others."""
+    for tag, variants in (("shape", SHAPES), ("kind", KINDS)):
+        own = next((variant for variant, schema in variants.items() if schema is owner), None)
+        others = [f'"{other}"' for other, schema in variants.items() if name in schema.model_fields]
+        if own is not None and others:
+            takes = alternatives((key for key in owner.model_fields if key != tag), last="and")
+            return f'belongs to {tag} {alternatives(others)}; {tag} "{own}" takes {takes}'
+    return None
 
 
 def _own_names(section: str, owner: type[Section] | None) -> tuple[str, ...]:
@@ -90,8 +95,13 @@ def _by_symbol(name: str, owner: type[Section]) -> str | None:
     return None
 
 
-def _places(sections: Iterable[str]) -> str:
-    return alternatives(f"[{section}]" for section in sections)
+def _places(sections: Iterable[str], *, near: str) -> str:
+    """Name sections; only those under the same heading as `near`, where there are any."""
+    listed = tuple(sections)
+    under = [section for section in listed if near and section.split(".")[0] == near.split(".")[0]]
+    return alternatives(
+        f"[[{section}]]" if section == "chain.extra" else f"[{section}]" for section in under or listed
+    )
 
 
 def _all_settings() -> Iterator[tuple[str, str]]:
@@ -103,6 +113,8 @@ def _all_settings() -> Iterator[tuple[str, str]]:
     for profile in PROFILES:
         for key in dict.fromkeys(key for shape in SHAPES.values() for key in shape.model_fields):
             yield key, f"start.{profile}"
+    for key in dict.fromkeys(key for kind in KINDS.values() for key in kind.model_fields):
+        yield key, "chain.extra"
 
 
 def _catalogue() -> dict[str, tuple[str, ...]]:

@@ -11,11 +11,12 @@ from typing import Any
 from pydantic import ValidationError
 from pydantic_core import ErrorDetails
 
+from tnquench.config.chain_rules import Unusable
 from tnquench.config.file_text import UnreadableFileError, read_text
 from tnquench.config.hints import nearest
 from tnquench.config.messages import problem_lines
-from tnquench.config.notation import shortened, shown
-from tnquench.config.rules import Unusable, conflicts
+from tnquench.config.notation import shortened, shown, shown_section
+from tnquench.config.rules import conflicts
 from tnquench.config.schema import PROFILES, SECTIONS, Config
 from tnquench.config.table import read_table
 from tnquench.errors import InputError
@@ -84,20 +85,32 @@ def _syntax_problem(message: str, text: str) -> str:
 
 def _with_table_files(tables: dict[str, Any], *, folder: Path | None) -> tuple[dict[str, Any], list[str]]:
     """Put the values of table files in their place; return the tables and what is wrong with the files."""
-    start, problems = tables.get("start"), []
-    if not isinstance(start, dict):
-        return tables, []
-    filled = dict(start)
-    for name in PROFILES:
-        profile: Any = start.get(name)
-        if not _names_file(profile):
-            continue
-        values, complaints = read_table(profile["file"], folder=folder)
-        place = f"[start.{name}] file = {shown(profile['file'])}"
-        problems += [f"{place}: {complaint}" for complaint in complaints]
-        if not complaints:
-            filled[name] = {**{key: profile[key] for key in profile if key != "file"}, "values": values}
-    return {**tables, "start": filled}, problems
+    filled, problems = dict(tables), list[str]()
+    start, chain = tables.get("start"), tables.get("chain")
+    if isinstance(start, dict):
+        profiles = dict(start)
+        for name in PROFILES:
+            profiles[name] = _with_values(start.get(name), f"start.{name}", folder=folder, problems=problems)
+        filled["start"] = {name: profile for name, profile in profiles.items() if name in start}
+    if isinstance(chain, dict) and isinstance(chain.get("extra"), list):
+        extras = [
+            _with_values(extra, f"chain.extra[{index}]", folder=folder, problems=problems)
+            for index, extra in enumerate(chain["extra"])
+        ]
+        filled["chain"] = {**chain, "extra": extras}
+    return filled, problems
+
+
+def _with_values(table: Any, section: str, *, folder: Path | None, problems: list[str]) -> Any:
+    """Return a table with the values of the file that it names; add to `problems` what is wrong with it."""
+    if not _names_file(table):
+        return table
+    values, complaints = read_table(table["file"], folder=folder)
+    place = f"{shown_section(section)} file = {shown(table['file'])}"
+    problems += [f"{place}: {complaint}" for complaint in complaints]
+    if complaints:
+        return table
+    return {**{key: table[key] for key in table if key != "file"}, "values": values}
 
 
 def _names_file(profile: object) -> bool:
@@ -117,7 +130,12 @@ def _is_elsewhere(error: ErrorDetails, tables: Mapping[str, Any]) -> bool:
 
 def _usable(tables: Mapping[str, Any], errors: Sequence[ErrorDetails]) -> dict[str, Any]:
     """Return every setting by dotted name, with `Unusable` for those that are wrong or missing."""
-    wrong = {error["loc"][:2] for error in errors if error["loc"][0] != "start" or len(error["loc"]) == 2}
+    wrong = {
+        error["loc"][:2]
+        for error in errors
+        if len(error["loc"]) == 2
+        or not (error["loc"][0] == "start" or error["loc"][:2] == ("chain", "extra"))
+    }
     settings: dict[str, Any] = {}
     for section, schema in SECTIONS.items():
         table = tables.get(section, {})
@@ -129,7 +147,19 @@ def _usable(tables: Mapping[str, Any], errors: Sequence[ErrorDetails]) -> dict[s
             else:
                 value = Unusable() if field.is_required() else field.get_default()
             settings[f"{section}.{key}"] = value
+    if isinstance(extras := settings["chain.extra"], list):
+        settings["chain.extra"] = _usable_extras(extras, errors)
     return settings
+
+
+def _usable_extras(extras: list[Any], errors: Sequence[ErrorDetails]) -> list[Any]:
+    """Return extra terms with `Unusable` for every setting that is wrong by itself."""
+    usable = [dict(extra) if isinstance(extra, Mapping) else extra for extra in extras]
+    for error in errors:
+        match error["loc"]:
+            case ("chain", "extra", int(index), _, key, *_):
+                usable[index][key] = Unusable()
+    return usable
 
 
 def _neighbour(file: Path) -> str:

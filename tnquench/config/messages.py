@@ -3,7 +3,7 @@
 from __future__ import annotations
 
 from collections import Counter
-from collections.abc import Iterator, Mapping, Sequence
+from collections.abc import Iterable, Iterator, Mapping, Sequence
 from dataclasses import dataclass
 from itertools import islice
 from typing import Any
@@ -11,8 +11,9 @@ from typing import Any
 from pydantic.fields import FieldInfo
 from pydantic_core import ErrorDetails
 
+from tnquench.config.extras import KINDS
 from tnquench.config.hints import nearest, unknown_name
-from tnquench.config.notation import shown
+from tnquench.config.notation import shown, shown_section
 from tnquench.config.profile import SHAPES
 from tnquench.config.schema import LATER_CHOICES, PROFILES, SECTIONS, Config
 from tnquench.config.setting import Section, note
@@ -38,11 +39,11 @@ class Place:
     def name(self) -> str:
         """The place as a message begins with it."""
         setting = f"{self.key}[{self.entry}]" if self.entry is not None else self.key
-        return f"[{self.section}] {setting}" if self.section else str(setting)
+        return f"{shown_section(self.section)} {setting}" if self.section else str(setting)
 
 
 def place_of(location: Sequence[int | str]) -> Place:
-    """Return the place that pydantic's location (with its tags of the profile's shape) means."""
+    """Return the place that pydantic's location (with its tags of shape or kind) means."""
     top, inner = str(location[0]), location[1:]
     if top not in SECTIONS:
         return Place("", Config, top)
@@ -54,6 +55,11 @@ def place_of(location: Sequence[int | str]) -> Place:
         if len(inner) == 1:
             return Place(section)
         owner, rest = SHAPES[str(inner[1])], inner[2:]
+    if top == "chain" and inner[0] == "extra" and len(inner) > 1:
+        section = f"chain.extra[{inner[1]}]"
+        if len(inner) == 2:
+            return Place(section)
+        owner, rest = KINDS[str(inner[2])], inner[3:]
     entry = rest[1] if len(rest) > 1 and isinstance(rest[1], int) else None
     return Place(section, owner, str(rest[0]), entry)
 
@@ -74,7 +80,7 @@ def problem_lines(errors: Sequence[ErrorDetails]) -> list[str]:
             break
     for (section, key), count in entries.items():
         if count > MOST_ENTRIES:
-            lines.append(f"[{section}] {key}: {count - MOST_ENTRIES} more such entries")
+            lines.append(f"{shown_section(section)} {key}: {count - MOST_ENTRIES} more such entries")
     return lines
 
 
@@ -120,11 +126,14 @@ def _about_section(place: Place, kind: str, found: Any) -> Iterator[str]:
     if kind == "missing":
         yield f"[{place.section}]: section missing; it must set {_needed(place.section)}"
     elif kind in ("union_tag_not_found", "union_tag_invalid"):
-        yield _about_shape(place.section, found)
-        known = {key for shape in SHAPES.values() for key in shape.model_fields}
+        tag, variants = ("kind", KINDS) if place.section.startswith("chain.") else ("shape", SHAPES)
+        yield _about_tag(place.section, found, tag=tag, variants=variants)
+        known = {key for variant in variants.values() for key in variant.model_fields}
         for key, value in found.items():
             if key not in known:
                 yield unknown_name(key, value, section=place.section, owner=None)
+    elif place.section.startswith("chain."):
+        yield f"{shown_section(place.section)} = {shown(found)}: must be a section, headed [[chain.extra]]"
     else:
         parent, _, key = place.section.rpartition(".")
         name = f"[{parent}] {key}" if parent else key
@@ -132,14 +141,14 @@ def _about_section(place: Place, kind: str, found: Any) -> Iterator[str]:
         yield f"{name} = {shown(found)}: must be one section, headed [{place.section}]{uniform}"
 
 
-def _about_shape(section: str, found: Mapping[str, Any]) -> str:
-    either = alternatives(f'"{shape}"' for shape in SHAPES)
-    if "shape" not in found:
-        return f"[{section}] shape: missing; must be {either}"
-    shape = found["shape"]
-    meant = nearest(shape, SHAPES) if isinstance(shape, str) else None
+def _about_tag(section: str, found: Mapping[str, Any], *, tag: str, variants: Iterable[str]) -> str:
+    """Say that a profile's shape, or an extra's kind, is missing or unknown."""
+    place, either = f"{shown_section(section)} {tag}", alternatives(f'"{name}"' for name in variants)
+    if tag not in found:
+        return f"{place}: missing; must be {either}"
+    meant = nearest(found[tag], variants) if isinstance(found[tag], str) else None
     hint = f'; did you mean "{meant}"?' if meant else ""
-    return f"[{section}] shape = {shown(shape)}: must be {either}{hint}"
+    return f"{place} = {shown(found[tag])}: must be {either}{hint}"
 
 
 def _needed(section: str) -> str:

@@ -9,6 +9,7 @@ from datetime import date, time
 from typing import Any
 
 _BARE_KEY = re.compile(r"[A-Za-z0-9_-]+")
+_ENTRY = re.compile(r"(.+)\[(\d+)\]")
 _LONGEST_SHOWN = 60
 _MOST_SHOWN = 4
 _MILLION = 1e6
@@ -57,6 +58,13 @@ def shown(value: object) -> str:
 def shown_key(key: str) -> str:
     """Return `key` as a message shows it: on one line, shortened where it is long."""
     return shortened(_printable(written_key(key)))
+
+
+def shown_section(section: str) -> str:
+    """Return a section as a config heads it: [start.beta]; an entry of a list, chain.extra[1], as
+    [[chain.extra]] #2."""
+    entry = _ENTRY.fullmatch(section)
+    return f"[[{entry[1]}]] #{int(entry[2]) + 1}" if entry else f"[{section}]"
 
 
 def shortened(text: str) -> str:

@@ -5,6 +5,8 @@ from __future__ import annotations
 from collections.abc import Iterator, Mapping
 from typing import Any
 
+from tnquench.config.chain_rules import Settings, Unusable, chain_conflicts, section_of
+from tnquench.config.energies import ENERGY_IN_WORDS, bond_energy
 from tnquench.config.notation import quantity, shown
 
 MOST_TIMES = 100_000
@@ -21,29 +23,18 @@ SMALLEST_WIDTH = 1e-3
 SMALLEST_GRAM_WEIGHT = 1e-13
 
 
-class Unusable:
-    """Stands for a setting that is wrong by itself, so that no rule speaks about it a second time."""
-
-
-Settings = Mapping[str, Any]
-
-
 def conflicts(settings: Settings) -> list[str]:
     """Return one line per contradiction between settings.
 
     settings : value or `Unusable` by dotted name, "section.key"; profiles as mappings of their own keys
     """
     rules = (_weight_or_accuracy, _times, _steps, _gram_weight, _widths, _tables, _separate, _levels)
-    return [problem for rule in rules for problem in rule(settings)]
+    return [*chain_conflicts(settings), *(problem for rule in rules for problem in rule(settings))]
 
 
-def default_time_step(*, trotter_order: int, coupling: float, anisotropy: float) -> float:
-    """Return the Trotter step (inverse energy) used where none is asked for.
-
-    The largest bond energy scales with J max(1, |D|) and the error of the scheme with step times energy.
-    """
-    step = {2: 0.05, 4: 0.2}[trotter_order]
-    return step / (coupling * max(1.0, abs(anisotropy)))
+def default_time_step(*, trotter_order: int, energy: float) -> float:
+    """Return the Trotter step used where none is asked for; `energy` : the scale of `bond_energy`."""
+    return {2: 0.05, 4: 0.2}[trotter_order] / energy
 
 
 def _is_number(*values: object) -> bool:
@@ -78,16 +69,18 @@ def _times(settings: Settings) -> Iterator[str]:
 def _steps(settings: Settings) -> Iterator[str]:
     names = ("time_step", "until", "trotter_order", "accuracy")
     step, until, order, accuracy = (settings[f"evolution.{name}"] for name in names)
-    coupling, anisotropy = settings["chain.coupling"], settings["chain.anisotropy"]
-    if step is None and accuracy is None and _is_number(order, coupling, anisotropy):
-        step = default_time_step(trotter_order=order, coupling=coupling, anisotropy=anisotropy)
-    if _is_number(step, coupling, anisotropy):
-        longest = LONGEST_PHASE / (coupling * max(1.0, abs(anisotropy)))
-        if step > longest:
-            limit = (
-                f"must be at most {quantity(longest)}, where step times J max(1, |D|) is {LONGEST_PHASE:g}"
-            )
-            yield f"[evolution] time_step = {quantity(step)}: {limit}; beyond it no error estimate holds"
+    chain = section_of(settings, "chain")
+    energy = bond_energy(chain)
+    if energy and step is None and accuracy is None and _is_number(order):
+        step = default_time_step(trotter_order=order, energy=energy)
+    if energy and _is_number(step) and step > LONGEST_PHASE / energy:
+        scale = ENERGY_IN_WORDS[chain["model"]]
+        scale = f"the bond energy, {scale} and what extra terms add," if chain["extra"] else scale
+        limit = f"must be at most {quantity(LONGEST_PHASE / energy)}, where step times {scale}"
+        yield (
+            f"[evolution] time_step = {quantity(step)}: {limit} is {LONGEST_PHASE:g}; beyond it no error "
+            "estimate holds"
+        )
     if _is_number(step, until) and until > MOST_STEPS * step:
         limit = f"more than {MOST_STEPS} steps up to until = {quantity(until)}; make it longer"
         yield f"[evolution] time_step = {quantity(step)}: gives {limit}"
@@ -101,7 +94,7 @@ def _gram_weight(settings: Settings) -> Iterator[str]:
 
 
 def _widths(settings: Settings) -> Iterator[str]:
-    for name in ("beta", "beta_field"):
+    for name in ("beta", "beta_field", "beta_mu"):
         profile = settings[f"start.{name}"]
         if not isinstance(profile, Mapping) or profile.get("shape") != "step":
             continue
@@ -113,7 +106,11 @@ def _widths(settings: Settings) -> Iterator[str]:
 
 def _tables(settings: Settings) -> Iterator[str]:
     sites = settings["chain.sites"]
-    lengths = {"beta": ("sites - 1, one a bond", -1), "beta_field": ("sites, one a site", 0)}
+    lengths = {
+        "beta": ("sites - 1, one a bond", -1),
+        "beta_field": ("sites, one a site", 0),
+        "beta_mu": ("sites, one a site", 0),
+    }
     for name, (meaning, excess) in lengths.items():
         profile = settings[f"start.{name}"]
         if not isinstance(profile, Mapping) or profile.get("shape") != "table":
@@ -131,7 +128,7 @@ def _separate(settings: Settings) -> Iterator[str]:
     joint, sites = settings["start.joint"], settings["chain.sites"]
     if joint != "separate":
         return
-    profiles = [settings["start.beta"], settings["start.beta_field"]]
+    profiles = [settings[f"start.{name}"] for name in ("beta", "beta_field", "beta_mu")]
     shapes = [profile.get("shape") for profile in profiles if isinstance(profile, Mapping)]
     judged = not any(isinstance(profile, Unusable) for profile in profiles)
     if judged and not ("step" in shapes and set(shapes) <= {"step", "uniform"}):

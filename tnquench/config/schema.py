@@ -6,30 +6,19 @@ from typing import Annotated, ClassVar, Literal, Self
 
 from pydantic import Strict, model_validator
 
+from tnquench.config.chain import Chain
+from tnquench.config.energies import bond_energy
 from tnquench.config.profile import Profile
 from tnquench.config.rules import conflicts, default_time_step
 from tnquench.config.setting import Section, setting
 
 
-class Chain(Section):
-    """The Hamiltonian: an open chain H = J sum_j [SxSx + SySy + D SzSz] of spins 1/2, S = sigma/2."""
-
-    EXAMPLE: ClassVar[str] = 'model = "xxz"\nsites = 64\nanisotropy = 0.5'
-
-    model: Literal["xxz"] = setting("model of the chain", default="xxz")
-    sites: int = setting(
-        "number of sites L; they lie at x_i = i - (L-1)/2",
-        symbols=("L", "N", "length", "size"),
-        remark="a bond joins two sites",
-        ge=2,
-        le=100_000,
-    )
-    coupling: float = setting("coupling J", default=1.0, symbols=("J",), ge=1e-6, le=1e6)
-    anisotropy: float = setting("anisotropy D, of either sign", symbols=("D", "delta"), ge=-1000.0, le=1000.0)
-
-
 class Start(Section):
-    """The initial state, rho_0 proportional to exp[-sum_j beta_j h_j + sum_i (beta h)_i S^z_i]."""
+    """The initial state, rho_0 proportional to exp[-sum_j beta_j h_j + sum_i (beta mu)_i q_i].
+
+    The charge q is S^z for beta_field (xxz, hubbard), n - 1/2 for beta_mu in fermion, n - 1 for beta_mu in
+    hubbard, which takes both; ising conserves no charge and takes beta alone.
+    """
 
     EXAMPLE: ClassVar[str] = 'joint = "coupled"'
 
@@ -40,7 +29,13 @@ class Start(Section):
     )
     beta: Profile = setting("inverse temperature, one value a bond", unit="1/J")
     beta_field: Profile | None = setting(
-        "product beta h of inverse temperature and field along z, one value a site; absent: no field",
+        "product beta h of inverse temperature and field along z, one value a site; absent: no field "
+        "(xxz, hubbard)",
+        default=None,
+    )
+    beta_mu: Profile | None = setting(
+        "product beta mu of inverse temperature and chemical potential, one value a site; absent: half "
+        "filling (fermion, hubbard)",
         default=None,
     )
 
@@ -75,8 +70,9 @@ class Evolution(Section):
     time_step: float | None = setting(
         "longest Trotter step; shortened where needed so that a whole number of equal steps fills `every`",
         default=None,
-        default_rule="with a weight: 0.2 at order 4, 0.05 at order 2, divided by J max(1, abs(D)); "
-        "with accuracy: chosen by the program",
+        default_rule="with a weight: 0.2 at order 4, 0.05 at order 2, divided by the energy of a bond, "
+        "which is J max(1, abs(D)) for xxz, 2 max(J, abs(g)) for ising, max(2 t_h, abs(V)) for fermion, "
+        "2 t_h + abs(U)/4 for hubbard, and more with extra terms; with accuracy: chosen by the program",
         unit="1/J",
         symbols=("dt", "tau", "step"),
         gt=0.0,
@@ -151,19 +147,18 @@ class Config(Section):
 
     @model_validator(mode="after")
     def _settle(self) -> Self:
-        """Refuse contradictions, then fill in the time step where it follows from the other settings."""
+        """Refuse contradictions, then fill in what follows from other settings: parameters, time step."""
         sections = self.model_dump(exclude={"title"})
         settings = {f"{name}.{key}": value for name, keys in sections.items() for key, value in keys.items()}
         if problems := conflicts(settings):
             raise ValueError("\n".join(problems))
-        if self.evolution.time_step is None and self.evolution.accuracy is None:
-            step = default_time_step(
-                trotter_order=self.evolution.trotter_order,
-                coupling=self.chain.coupling,
-                anisotropy=self.chain.anisotropy,
-            )
+        chain = self.chain.model_copy(update=self.chain.parameters)
+        object.__setattr__(self, "chain", chain)  # frozen for everyone else
+        energy = bond_energy(chain.model_dump())
+        if energy and self.evolution.time_step is None and self.evolution.accuracy is None:
+            step = default_time_step(trotter_order=self.evolution.trotter_order, energy=energy)
             settled = self.evolution.model_copy(update={"time_step": step})
-            object.__setattr__(self, "evolution", settled)  # frozen for everyone else
+            object.__setattr__(self, "evolution", settled)
         return self
 
 
@@ -177,21 +172,13 @@ SECTIONS: dict[str, type[Section]] = {
 }
 
 #: Settings of `[start]` that are profiles, tables with settings of their own.
-PROFILES = ("beta", "beta_field")
+PROFILES = ("beta", "beta_field", "beta_mu")
 
-_OTHER_MODEL = 'belongs to other models, not available in this version; available: "xxz"'
-
-#: Settings that belong to what is not built yet, and what is there instead.
-LATER: dict[str, str] = {
-    "chain.extra": "extra terms are not available in this version; available: the pure xxz chain",
-    "chain.transverse_field": _OTHER_MODEL,
-    "chain.hopping": _OTHER_MODEL,
-    "chain.repulsion": _OTHER_MODEL,
-    "start.beta_mu": "belongs to other models, not available in this version; available: [start.beta_field]",
-}
+#: Settings that are not built yet, and what is there instead.
+LATER: dict[str, str] = {}
 
 #: Choices that are not built yet, by setting.
 LATER_CHOICES: dict[str, tuple[str, ...]] = {
-    "chain.model": ("ising", "fermion", "hubbard"),
+    "chain.model": (),
     "hydrodynamics.levels": ("diffusive",),
 }

@@ -13,6 +13,7 @@ from tnquench.config.notation import quantity, written
 from tnquench.config.setting import note
 
 _POSITIVE = "positive"
+_SECTION = "a profile, in a section of its own"
 
 
 @dataclass(frozen=True)
@@ -63,11 +64,13 @@ def _allowed(annotation: Any, metadata: Sequence[Any]) -> Allowed:
         return _allowed(next(kind for kind in arguments if kind is not NoneType), metadata)
     if origin is tuple:
         item = _allowed(arguments[0], metadata)
+        if item.noun == _SECTION:
+            return Allowed(noun="a list of sections, each headed by the name in double brackets")
         return Allowed(noun=item.noun, bounds=item.bounds, choices=item.choices, listed=True)
     if origin is Literal:
         return Allowed(choices=arguments)
-    nouns = {int: "a whole number", float: "a number", str: "text in quotes"}
-    return Allowed(noun=nouns.get(annotation, "a profile, in a section of its own"), bounds=_bounds(metadata))
+    nouns = {int: "a whole number", float: "a number", str: "text in quotes", bool: "true or false"}
+    return Allowed(noun=nouns.get(annotation, _SECTION), bounds=_bounds(metadata))
 
 
 def _bounds(metadata: Sequence[Any]) -> str:

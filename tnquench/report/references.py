@@ -23,6 +23,8 @@ REFERENCES: dict[str, str] = {
     "mclachlan_1995": "R. I. McLachlan, On the numerical integration of ordinary differential equations by "
     "symmetric "
     "composition methods, SIAM J. Sci. Comput. 16, 151 (1995).",
+    "pfeuty_1970": "P. Pfeuty, The one-dimensional Ising model with a transverse field, Ann. Phys. 57, 79 "
+    "(1970).",
     "strang_1968": "G. Strang, On the construction and comparison of difference schemes, SIAM J. Numer. "
     "Anal. 5, 506 "
     "(1968).",
