@@ -13,11 +13,29 @@ def root_of_unity(nu: int, sign: int = 1) -> float:
     return 0.0 if nu == 2 else float(sign * np.cos(np.pi / nu))
 
 
+def rational(numerator: int, denominator: int, sign: int = 1) -> float:
+    """D = plus or minus cos(pi p/q)."""
+    return float(sign * np.cos(np.pi * numerator / denominator))
+
+
 def named(nu: int, sign: int) -> Any:
     return pytest.param(root_of_unity(nu, sign), id=f"{'-' if sign < 0 else ''}cos(pi/{nu})")
 
 
 ALL = [named(2, 1)] + [named(nu, sign) for nu in range(3, 9) for sign in (1, -1)]
+FRACTIONS = [
+    pytest.param(rational(p, q, sign), id=f"{'-' if sign < 0 else ''}cos({p}pi/{q})")
+    for p, q, sign in (
+        (2, 5, 1),
+        (3, 7, 1),
+        (3, 8, -1),
+        (2, 7, 1),
+        (2, 9, -1),
+        (5, 12, 1),
+        (12, 29, 1),
+        (29, 70, 1),
+    )
+]
 SOME = [named(nu, sign) for nu, sign in ((2, 1), (3, 1), (3, -1), (4, 1), (5, -1), (6, 1))]
 
 

@@ -10,7 +10,7 @@ import pytest
 from numpy.typing import NDArray
 from scipy.integrate import quad
 
-from tests.bethe_cases import ALL, SOME, free_fermions, root_of_unity
+from tests.bethe_cases import ALL, FRACTIONS, SOME, free_fermions, rational
 from tests.oracles import exact_chain, high_temperature
 from tnquench.bethe.correlations import covariance_matrix, drude_matrix
 from tnquench.bethe.equilibrium import KEYS, equilibrium, string_thermodynamics
@@ -126,7 +126,7 @@ def boosted_ring(*, sites: int, anisotropy: float, beta: float, beta_field: floa
     return np.array([exact_chain.expectation(rho, operator) / sites for operator in observables])
 
 
-@pytest.mark.parametrize("anisotropy", SOME)
+@pytest.mark.parametrize("anisotropy", [*SOME, *FRACTIONS])
 def test_currents_of_boosted_states(anisotropy: float) -> None:
     """Densities and currents, signs included, of stationary states that carry currents: a ring of 8 sites.
 
@@ -144,7 +144,7 @@ def test_currents_of_boosted_states(anisotropy: float) -> None:
 
 
 @pytest.mark.literature
-@pytest.mark.parametrize("anisotropy", ALL)
+@pytest.mark.parametrize("anisotropy", [*ALL, *FRACTIONS])
 def test_bare_magnon(anisotropy: float) -> None:
     """One magnon: e = J (cos k - D), exp(ik) = sinh(lambda - i g/2)/sinh(lambda + i g/2), p' = dk/dlambda.
 
@@ -167,22 +167,37 @@ def test_bare_magnon(anisotropy: float) -> None:
 
 
 @pytest.mark.literature
-@pytest.mark.parametrize("nu", range(2, 9))
-def test_spin_drude_weight_at_high_temperature(nu: int) -> None:
-    """D_s / beta = [1 - (nu / 2 pi) sin(2 pi / nu)] / 8 at D = cos(pi/nu), zero field.
+@pytest.mark.parametrize(
+    ("turns", "m"),
+    [
+        *((1, m) for m in range(2, 9)),
+        (2, 5),
+        (2, 7),
+        (3, 7),
+        (3, 8),
+        (2, 9),
+        (4, 9),
+        (5, 12),
+        (5, 13),
+        (12, 29),
+    ],
+)
+def test_spin_drude_weight_at_high_temperature(turns: int, m: int) -> None:
+    """D_s / beta = sin^2(pi l/m)/sin^2(pi/m) [1 - (m / 2 pi) sin(2 pi / m)] / 8, D = cos(pi l/m), no field.
 
     Sources: T. Prosen, E. Ilievski, Phys. Rev. Lett. 111, 057203 (2013); E. Ilievski, J. De Nardis, Phys.
     Rev. Lett. 119, 020602 (2017). Here D_s = beta lim <J_s(t) J_s> / L, J = 1.
     """
-    model = xxz_model(anisotropy=root_of_unity(nu), nodes=64)
+    model = xxz_model(anisotropy=0.0 if m == 2 else rational(turns, m), nodes=64)
     state = thermal_filling(model, beta=0.0)
     found = drude_matrix(model, state.filling, -model.charge[None])[0, 0]
-    closed_form = (1.0 - nu / (2.0 * np.pi) * np.sin(2.0 * np.pi / nu)) / 8.0
+    ratio = np.sin(np.pi * turns / m) ** 2 / np.sin(np.pi / m) ** 2
+    closed_form = ratio * (1.0 - m / (2.0 * np.pi) * np.sin(2.0 * np.pi / m)) / 8.0
     assert found == pytest.approx(closed_form, rel=0, abs=1e-10)
 
 
 @pytest.mark.literature
-@pytest.mark.parametrize("anisotropy", ALL)
+@pytest.mark.parametrize("anisotropy", [*ALL, *FRACTIONS])
 def test_energy_current_fluctuations_at_high_temperature(anisotropy: float) -> None:
     """<J_E^2> / L = (1 + 2 D^2) / 32 at infinite temperature: as a charge and as a Drude weight.
 

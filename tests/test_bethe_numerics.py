@@ -10,7 +10,7 @@ from itertools import pairwise
 import numpy as np
 import pytest
 
-from tests.bethe_cases import ALL, SOME, free_fermions, root_of_unity
+from tests.bethe_cases import ALL, FRACTIONS, SOME, free_fermions, root_of_unity
 from tnquench.bethe import states as states_module
 from tnquench.bethe.correlations import covariance_matrix, entropy_density
 from tnquench.bethe.equilibrium import KEYS, equilibrium, string_thermodynamics
@@ -25,12 +25,12 @@ from tnquench.bethe.states import (
     solve_log_eta,
     thermal_filling,
 )
-from tnquench.bethe.strings import UnsupportedAnisotropy, phase_derivative, supported_nu
+from tnquench.bethe.strings import phase_derivative
 from tnquench.errors import ConvergenceError
 
 
 @pytest.mark.parametrize("beta_field", [0.0, 0.7, -2.0])
-@pytest.mark.parametrize("anisotropy", ALL)
+@pytest.mark.parametrize("anisotropy", [*ALL, *FRACTIONS])
 def test_infinite_temperature(anisotropy: float, beta_field: float) -> None:
     """At beta = 0 ln eta is the constant solution, ln Z that of free spins, m = tanh(beta h / 2) / 2."""
     model = xxz_model(anisotropy=anisotropy, nodes=64)
@@ -44,7 +44,7 @@ def test_infinite_temperature(anisotropy: float, beta_field: float) -> None:
     assert magnetisation == pytest.approx(0.5 * np.tanh(0.5 * beta_field), rel=0, abs=1e-12)
 
 
-@pytest.mark.parametrize("anisotropy", ALL)
+@pytest.mark.parametrize("anisotropy", [*ALL, *FRACTIONS])
 def test_field_reversal(anisotropy: float) -> None:
     """-h turns m around and exchanges the last two strings; the result solves the equations of -h."""
     model = xxz_model(anisotropy=anisotropy, nodes=96)
@@ -83,7 +83,7 @@ def test_thermodynamic_identities(anisotropy: float) -> None:
 
 
 @pytest.mark.parametrize("beta_field", [0.0, 1.0, -0.3])
-@pytest.mark.parametrize("anisotropy", ALL)
+@pytest.mark.parametrize("anisotropy", [*ALL, *FRACTIONS])
 def test_state_is_physical(anisotropy: float, beta_field: float) -> None:
     """Total densities are positive, nothing flows in equilibrium, the entropies by two formulas agree.
 
@@ -132,14 +132,15 @@ def test_energies_scale_with_the_coupling() -> None:
 @pytest.mark.parametrize("nu", [2, 3, 8])
 def test_grid_integrates_and_interpolates(nu: int) -> None:
     """Both quadratures give int a_1 = (pi - g)/pi, and interpolation reproduces a_1 between the nodes."""
-    grid = rapidity_grid(nu, 64)
-    fine, fine_weights = fine_line(grid)
+    angle = np.pi / nu
+    grid = rapidity_grid(angle, 64)
+    fine, fine_weights = fine_line(grid, angle)
     for rapidities, weights in ((grid.rapidities, grid.weights), (fine, fine_weights)):
-        integral = weights @ phase_derivative(rapidities, length=1, parity=1, nu=nu)
+        integral = weights @ phase_derivative(rapidities, angle=angle)
         assert integral == pytest.approx(1.0 - 1.0 / nu, rel=0, abs=1e-12)
-    values = phase_derivative(grid.rapidities, length=1, parity=1, nu=nu)
+    values = phase_derivative(grid.rapidities, angle=angle)
     between = np.array([-7.0, -0.31, 0.0, float(grid.rapidities[5]), 0.02, 1.9, 25.0])
-    exact = phase_derivative(between, length=1, parity=1, nu=nu)
+    exact = phase_derivative(between, angle=angle)
     np.testing.assert_allclose(interpolate(grid, values, between), exact, rtol=0, atol=1e-11)
 
 
@@ -193,22 +194,6 @@ def test_failure_carries_the_best_state(monkeypatch: pytest.MonkeyPatch) -> None
     assert caught.value.residual > 1e-10
     assert isinstance(caught.value.best, states_module.ThermalState)
     assert caught.value.best.filling.shape == (3, 32)
-
-
-@pytest.mark.parametrize("anisotropy", [0.3, 1.0, 2.0, -1.0, float("nan"), 0.5001, np.cos(2 * np.pi / 5)])
-def test_unsupported_anisotropies_are_refused(anisotropy: float) -> None:
-    with pytest.raises(UnsupportedAnisotropy, match="nearest are") as caught:
-        supported_nu(anisotropy)
-    assert isinstance(caught.value, ValueError)
-    with pytest.raises(UnsupportedAnisotropy):
-        equilibrium(anisotropy=anisotropy, beta=1.0)
-
-
-def test_refusal_names_the_nearest_values() -> None:
-    with pytest.raises(UnsupportedAnisotropy, match=r"the nearest are 0 and 0\.5$"):
-        supported_nu(0.3)
-    assert [supported_nu(root_of_unity(nu)) for nu in range(2, 9)] == list(range(2, 9))
-    assert supported_nu(-0.5) == 3
 
 
 @pytest.mark.parametrize(

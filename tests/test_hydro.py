@@ -2,16 +2,18 @@
 
 from __future__ import annotations
 
+from fractions import Fraction
+
 import numpy as np
 import pytest
 
-from tests.bethe_cases import root_of_unity
-from tests.hydro_cases import PanelState, panels
+from tests.bethe_cases import rational, root_of_unity
+from tests.hydro_cases import PLACES, STRINGS, PanelState, panels
 from tests.oracles.exact_chain import energy_currents, local_hamiltonian
 from tests.oracles.free_fermions import joined_halves
 from tnquench.bethe.grid import interpolate
 from tnquench.bethe.states import thermal_filling
-from tnquench.conventions import OBSERVABLE_PLACES, Reals, bond_positions, site_positions
+from tnquench.conventions import Reals, bond_positions, site_positions
 from tnquench.errors import InputError
 from tnquench.hydro.crossings import find_crossings
 from tnquench.hydro.joined import join_halves, states_on_rays
@@ -66,7 +68,7 @@ def test_free_fermions_agree_with_closed_integrals(left: State, right: State, co
     times = TIMES / coupling
     prediction = halves(anisotropy=0.0, left=left, right=right, coupling=coupling, times=times)
     assert prediction.light_cone == pytest.approx((-coupling, coupling), abs=1e-9)
-    for name, place in OBSERVABLE_PLACES.items():
+    for name, place in PLACES.items():
         x = site_positions(SITES)[1:-1] if place == "site" else bond_positions(SITES)
         inner = slice(1, -1) if place == "site" else slice(None)
         for row, time in list(enumerate(times))[1:]:
@@ -77,18 +79,20 @@ def test_free_fermions_agree_with_closed_integrals(left: State, right: State, co
 
 
 @pytest.mark.literature
-@pytest.mark.parametrize("nu", [2, 3, 5, 8])
-def test_domain_wall_is_an_arcsine(nu: int) -> None:
-    """Up on the left, down on the right: magnetisation -(nu/2 pi) arcsin(x/t) inside |x/t| < sin(pi/nu).
+@pytest.mark.parametrize(("p", "q"), [(1, 2), (1, 3), (1, 5), (1, 8), (2, 5), (3, 7), (3, 8), (5, 12)])
+def test_domain_wall_is_an_arcsine(p: int, q: int) -> None:
+    """Up on the left, down on the right: -(q/2 pi) arcsin(z/s), s = sin(g)/sin(pi/q), inside |z| < sin(g).
 
-    Source: M. Collura, A. De Luca, J. Viti, Phys. Rev. B 97, 081111 (2018), at D = cos(pi/nu) (formula from
-    memory; nu = 2 is Antal et al. 1999), with its current from the continuity equation.
+    Source: M. Collura, A. De Luca, J. Viti, Phys. Rev. B 97, 081111 (2018), at D = cos(pi p/q) (formula from
+    memory; p/q = 1/2 is Antal et al. 1999), with its current from the continuity equation; z = x/t.
     """
-    rays = np.linspace(-0.99, 0.99, 23) * np.sin(np.pi / nu)
+    edge, scale = np.sin(np.pi * p / q), np.sin(np.pi * p / q) / np.sin(np.pi / q)
+    rays = np.linspace(-0.99, 0.99, 23) * edge
     up, down = (0.0, 60.0), (0.0, -60.0)
-    result = on_rays(rays, nodes=64, anisotropy=root_of_unity(nu), left=up, right=down)
-    density = -nu / (2.0 * np.pi) * np.arcsin(rays)
-    current = nu / (2.0 * np.pi) * (np.sqrt(1.0 - rays**2) - np.cos(np.pi / nu))
+    anisotropy = 0.0 if q == 2 else rational(p, q)
+    result = on_rays(rays, nodes=64, anisotropy=anisotropy, left=up, right=down)
+    density = -q / (2.0 * np.pi) * np.arcsin(rays / scale)
+    current = q * scale / (2.0 * np.pi) * (np.sqrt(1.0 - (rays / scale) ** 2) - np.cos(np.pi / q))
     np.testing.assert_allclose(result["charge_density"], density, rtol=0.0, atol=1e-9)
     np.testing.assert_allclose(result["charge_current"], current, rtol=0.0, atol=1e-9)
 
@@ -154,26 +158,34 @@ def thermal_at(mesh: RapidityMesh, state: State, string: int, x: Reals) -> Reals
     return 1.0 / (1.0 + np.exp(interpolate(mesh.grid, log_eta[string], x)))
 
 
-@pytest.mark.parametrize(("nu", "sign"), [(3, 1), (4, -1)])
-def test_second_quadrature_agrees(nu: int, sign: int) -> None:
+@pytest.mark.parametrize(
+    ("turn", "sign"),
+    [(Fraction(1, 3), 1), (Fraction(1, 4), -1), (Fraction(2, 5), 1), (Fraction(3, 7), 1)],
+    ids=str,
+)
+def test_second_quadrature_agrees(turn: Fraction, sign: int) -> None:
     """Panels cut at the crossings, dressed without windows, interpolation or iteration, give the same state:
     v_eff equals the ray at every crossing, and the averages agree. Tolerance: the panels' own, about 1e-8.
     """
     left, right, ray = (0.4, 0.8), (2.0, -0.3), 0.3
-    mesh = rapidity_mesh(anisotropy=root_of_unity(nu, sign), coupling=1.0, nodes=64, spacing=0.06)
+    anisotropy = rational(turn.numerator, turn.denominator, sign)
+    mesh = rapidity_mesh(anisotropy=anisotropy, coupling=1.0, nodes=96, spacing=0.06)
     sides = {"left": thermal_on_mesh(mesh, left), "right": thermal_on_mesh(mesh, right)}
     reference = reference_state(mesh, 0.5 * (sides["left"] + sides["right"]))
     _, slopes = states_on_rays(mesh, reference, rays=np.array([ray]), **sides)
     crossings, _ = find_crossings(mesh, slopes, np.array([ray]))
-    cuts = [mesh.layout.rapidities(crossings.position[crossings.row == string]) for string in range(nu)]
+    cuts = [
+        mesh.layout.rapidities(crossings.position[crossings.row == string])
+        for string in range(len(STRINGS[turn]))
+    ]
     assert all(cut.size for cut in cuts)
-    grids = [panels(cut) for cut in cuts]
+    grids = [panels(cut, count=52 if turn.numerator == 1 else 130) for cut in cuts]
     fillings = []
     for string, (x, _) in enumerate(grids):
         energy, momentum = interpolate(mesh.grid, slopes[0, :, string], x)
         chosen = [thermal_at(mesh, state, string, x) for state in (left, right)]
         fillings.append(np.where(energy / momentum > ray, *chosen))
-    state = PanelState(nu, sign, grids, fillings)
+    state = PanelState(turn, sign, grids, fillings)
     dressed = state.dressed()
     for string, cut in enumerate(cuts):
         np.testing.assert_allclose(state.velocities(dressed, string, cut), ray, rtol=0.0, atol=1e-7)
@@ -211,7 +223,7 @@ def test_claimed_errors_cover_a_finer_grid(nu: int, left: State, right: State) -
     finer = {place: join_halves(mesh, *fillings, rays=x / times[0]) for place, x in places.items()}
     for index, name in enumerate(OBSERVABLES):
         inner = slice(1, -1)
-        error = np.abs(prediction.fields[name][0] - finer[OBSERVABLE_PLACES[name]][:, index])[inner]
+        error = np.abs(prediction.fields[name][0] - finer[PLACES[name]][:, index])[inner]
         assert np.all(error <= prediction.grid_error[name][0, inner])
         assert prediction.grid_error[name].max() < 2e-6
 
@@ -241,7 +253,7 @@ def test_times_at_rest_and_light_cone() -> None:
 def test_equal_halves_stay_as_they_are() -> None:
     prediction = halves(anisotropy=0.5, left=(1.0, 0.4), right=(1.0, 0.4))
     assert prediction.method == "uniform"
-    for name, place in OBSERVABLE_PLACES.items():
+    for name, place in PLACES.items():
         assert prediction.fields[name].shape == (TIMES.size, SITES if place == "site" else SITES - 1)
         assert np.all(prediction.strings_error[name] == 0.0)
         assert np.ptp(prediction.fields[name]) < 1e-15

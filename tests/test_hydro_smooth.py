@@ -8,9 +8,10 @@ from dataclasses import replace
 import numpy as np
 import pytest
 
-from tests.bethe_cases import root_of_unity
+from tests.bethe_cases import rational, root_of_unity
+from tests.hydro_cases import PLACES
 from tests.oracles.free_fermions import free_evolution
-from tnquench.conventions import OBSERVABLE_PLACES, Reals, bond_positions, site_positions
+from tnquench.conventions import Reals, bond_positions, site_positions
 from tnquench.errors import InputError
 from tnquench.hydro.mesh import OBSERVABLES
 from tnquench.hydro.prediction import Prediction, predict_smooth, predict_step
@@ -74,7 +75,7 @@ def test_free_fermions_stream(time: float) -> None:
     )
     assert prediction.method == "characteristics"
     assert prediction.light_cone == pytest.approx((-1.0, 1.0), abs=1e-6)
-    for name, place in OBSERVABLE_PLACES.items():
+    for name, place in PLACES.items():
         x = site_positions(sites) if place == "site" else bond_positions(sites)
         wall = 0.5 * (sites + 1)
         exact = free_streaming(x, time, beta=hot_spot, beta_field=magnetised_spot, wall=wall)[name]
@@ -133,7 +134,8 @@ def test_narrow_step_tends_to_joined_halves() -> None:
         assert worst[2] < 0.6 * worst[1]
 
 
-def test_totals_are_conserved_and_current_grows_linearly() -> None:
+@pytest.mark.parametrize("anisotropy", [0.5, rational(2, 5)])
+def test_totals_are_conserved_and_current_grows_linearly(anisotropy: float) -> None:
     """Energy and charge are conserved, and so is the total energy current of a bulk: between flat ends its
     integral over x grows at a constant rate, that of joined halves. Tolerance: lattice sums of the profile.
     """
@@ -145,7 +147,7 @@ def test_totals_are_conserved_and_current_grows_linearly() -> None:
     def beta_field(x: Reals) -> Reals:
         return step(x, left=0.8, right=-0.2, width=2.0)
 
-    prediction = predict(anisotropy=0.5, sites=sites, times=times, beta=beta, beta_field=beta_field)
+    prediction = predict(anisotropy=anisotropy, sites=sites, times=times, beta=beta, beta_field=beta_field)
     charge = prediction.fields["charge_density"].sum(axis=1)
     assert np.ptp(charge) < 1e-6
     energy = prediction.fields["energy_density"].sum(axis=1)
@@ -153,7 +155,7 @@ def test_totals_are_conserved_and_current_grows_linearly() -> None:
     growth = prediction.fields["energy_current"].sum(axis=1)[1:] / times[1:]
     np.testing.assert_allclose(growth, growth[0], rtol=1e-5)
     sharp = predict_step(
-        anisotropy=0.5,
+        anisotropy=anisotropy,
         coupling=1.0,
         left=(0.6, 0.8),
         right=(1.8, -0.2),
@@ -179,7 +181,7 @@ def test_claimed_errors_cover_a_finer_grid(nu: int, time: float) -> None:
     covered = []
     for index, name in enumerate(OBSERVABLES):
         inner = slice(1, -1) if name == "energy_current" else slice(None)
-        error = np.abs(prediction.fields[name][0] - finer[OBSERVABLE_PLACES[name]][:, index])[inner]
+        error = np.abs(prediction.fields[name][0] - finer[PLACES[name]][:, index])[inner]
         covered.append(error <= prediction.grid_error[name][0, inner])
         assert prediction.grid_error[name].max() < 2e-6
     assert np.concatenate(covered).all()

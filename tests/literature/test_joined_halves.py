@@ -9,8 +9,9 @@ from __future__ import annotations
 import numpy as np
 import pytest
 
+from tests.hydro_cases import PLACES
 from tests.oracles.free_fermions import joined_halves
-from tnquench.conventions import OBSERVABLE_PLACES, bond_positions, site_positions
+from tnquench.conventions import bond_positions, site_positions
 from tnquench.hydro.prediction import Prediction, predict_step
 
 SITES = 41
@@ -61,7 +62,7 @@ def test_free_fermion_halves(left: tuple[float, float], right: tuple[float, floa
     found = join(anisotropy=0.0, coupling=coupling, left=left, right=right, times=times)
     positions = {"site": site_positions(SITES), "bond": bond_positions(SITES)}
     covered = []
-    for name, place in OBSERVABLE_PLACES.items():
+    for name, place in PLACES.items():
         inner = slice(1, -1) if name == "energy_current" else slice(None)
         for row, claimed, time in zip(found.fields[name], found.grid_error[name], times, strict=True):
             exact = joined_halves(positions[place] / time, left=left, right=right, coupling=coupling)[name]

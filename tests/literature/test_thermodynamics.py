@@ -19,6 +19,10 @@ from tnquench.bethe.model import xxz_model
 from tnquench.bethe.states import averages, thermal_filling
 
 ANISOTROPIES = [pytest.param(np.cos(np.pi / nu) if nu > 2 else 0.0, id=f"nu={nu}") for nu in range(2, 9)]
+ANISOTROPIES += [
+    pytest.param(np.cos(np.pi * p / q), id=f"{p}/{q}")
+    for p, q in ((2, 5), (3, 7), (3, 8), (2, 7), (5, 12), (30, 43), (29, 70))
+]
 STATES = [(0.2, 0.5), (1.0, -1.5), (2.0, 0.0)]
 
 
@@ -127,7 +131,7 @@ def test_strings_at_free_fermions(beta: float, field: float) -> None:
 
 
 @pytest.mark.literature
-@pytest.mark.parametrize("anisotropy", [*ANISOTROPIES[:4], ANISOTROPIES[-1], -0.5])
+@pytest.mark.parametrize("anisotropy", [*ANISOTROPIES[:4], *ANISOTROPIES[-4:], -0.5])
 @pytest.mark.parametrize("field", [0.0, 0.7])
 def test_high_temperature_series(anisotropy: float, field: float) -> None:
     """-beta f against its series to order beta^8, exact for the infinite chain.

@@ -3,15 +3,20 @@
 from __future__ import annotations
 
 from collections.abc import Callable
-from dataclasses import asdict, dataclass
 
 import numpy as np
 
-from tnquench.bethe.correlations import covariance_matrix
+from tnquench.bethe.angles import anisotropy_of, is_rational, rational_turn, require_gapless
 from tnquench.bethe.free import free_thermodynamics
-from tnquench.bethe.model import xxz_model
-from tnquench.bethe.states import averages, thermal_filling
-from tnquench.bethe.strings import supported_nu
+from tnquench.bethe.gapped import gapped_equilibrium
+from tnquench.bethe.grid import RapidityGrid, interpolate, rapidity_grid
+from tnquench.bethe.interpolated import interpolate_in_anisotropy
+from tnquench.bethe.model import BetheModel, xxz_model
+from tnquench.bethe.states import ThermalState, dress, thermal_filling
+from tnquench.bethe.thermodynamics import KEYS, Equilibrium
+from tnquench.conventions import Reals
+
+__all__ = ["KEYS", "Equilibrium", "equilibrium", "string_thermodynamics"]
 
 #: Rapidity nodes of the successive refinements, and equidistant momenta of those at D = 0.
 NODE_LADDER = (32, 48, 72, 108, 162, 243)
@@ -19,6 +24,12 @@ MOMENTUM_LADDER = tuple(2**power for power in range(6, 17))
 
 #: Refinement stops when every error is below this fraction of the value's scale.
 ERROR_TARGET = 1e-12
+
+#: Interpolation between anisotropies stops at this fraction.
+INTERPOLATION_TARGET = 1e-8
+
+#: ... and the values that it goes through are refined to this one.
+NODE_TARGET = 1e-10
 
 #: Rounding, as a fraction of the value's scale: the smallest error ever claimed (a few times the scatter
 #: between fine grids).
@@ -30,64 +41,61 @@ LEAST_RATIO = 0.1
 #: Keeps ratios of vanishing movements finite.
 TINY = 1e-300
 
-KEYS = ("free_energy", "energy", "entropy", "magnetisation", "specific_heat", "susceptibility")
-
-
-@dataclass(frozen=True)
-class Equilibrium:
-    """Thermodynamic functions per site of exp[-beta (H - h S^z)], each with its numerical error.
-
-    Energies in units of the coupling J's unit, energy is that of H (field term left out), entropy in nats,
-    specific_heat at fixed field h, susceptibility d magnetisation / d h at fixed beta.
-    """
-
-    free_energy: float
-    energy: float
-    entropy: float
-    magnetisation: float
-    specific_heat: float
-    susceptibility: float
-    free_energy_error: float
-    energy_error: float
-    entropy_error: float
-    magnetisation_error: float
-    specific_heat_error: float
-    susceptibility_error: float
-
-    def as_dict(self) -> dict[str, float]:
-        """Return all values and errors by name."""
-        return asdict(self)
+#: Relative change of a value with D that is allowed for where D is rounded to a rational anisotropy.
+OFFSET_COST = 3.0
 
 
 def equilibrium(*, anisotropy: float, beta: float, field: float = 0.0, coupling: float = 1.0) -> Equilibrium:
-    """Return the thermodynamics of exp[-beta (H - h S^z)] at D = plus or minus cos(pi/nu), nu = 2..8.
+    """Return the thermodynamics of exp[-beta (H - h S^z)] at any anisotropy D.
 
     anisotropy, coupling : D and J > 0; beta : inverse temperature > 0; field : h, of either sign
-    Raises UnsupportedAnisotropy (a ValueError) at other D, ValueError unless beta > 0 and all are finite,
-    ConvergenceError if the Bethe ansatz cannot be solved.
+    At D = plus or minus cos(pi p/q) of moderate string tables the strings are exact; elsewhere in |D| < 1 it
+    is interpolated between such anisotropies, and the errors contain what that costs. |D| >= 1 has equations
+    of its own. Raises ValueError unless beta > 0 and all are finite, ConvergenceError if the Bethe ansatz
+    cannot be solved.
     """
     if not (beta > 0.0 and coupling > 0.0 and np.isfinite([beta, field, coupling]).all()):
         given = f"beta = {beta}, field = {field}, coupling = {coupling}"
         message = f"{given}: all must be finite, beta and coupling positive"
         raise ValueError(message)
-    nu, size = supported_nu(anisotropy), abs(field)
+    if abs(anisotropy) >= 1.0:
+        return gapped_equilibrium(anisotropy=anisotropy, beta=beta, field=field, coupling=coupling)
+    require_gapless(anisotropy)
+    values, errors = _gapless(anisotropy, beta=beta, field=abs(field), coupling=coupling)
+    values["magnetisation"] *= -1.0 if field < 0.0 else 1.0
+    return Equilibrium(**values, **{f"{key}_error": errors[key] for key in KEYS})
 
-    def solve(resolution: int) -> dict[str, float]:
-        if nu == 2:
-            return free_thermodynamics(beta=beta, field=size, coupling=coupling, momenta=resolution)
-        return string_thermodynamics(
-            anisotropy=anisotropy, beta=beta, field=size, coupling=coupling, nodes=resolution
-        )
 
+def _gapless(
+    anisotropy: float, *, beta: float, field: float, coupling: float
+) -> tuple[dict[str, float], dict[str, float]]:
+    """Return values and errors by name at -1 < D < 1, field >= 0."""
     scales = {
-        "free_energy": coupling + size + 1.0 / beta,
+        "free_energy": coupling + field + 1.0 / beta,
         "energy": coupling,
-        "entropy": 1.0 + beta * (coupling + size),
+        "entropy": 1.0 + beta * (coupling + field),
         "magnetisation": 1.0,
     }
-    values, errors = _refine(solve, MOMENTUM_LADDER if nu == 2 else NODE_LADDER, scales)
-    values["magnetisation"] *= -1.0 if field < 0.0 else 1.0
-    return Equilibrium(**values, **errors)
+
+    def solve_free(momenta: int) -> dict[str, float]:
+        return free_thermodynamics(beta=beta, field=field, coupling=coupling, momenta=momenta)
+
+    def at_rational(value: float, target: float = NODE_TARGET) -> tuple[dict[str, float], dict[str, float]]:
+        if value == 0.0:
+            return _refine(solve_free, MOMENTUM_LADDER, scales)
+        solve = _string_solver(anisotropy=value, beta=beta, field=field, coupling=coupling)
+        return _refine(solve, NODE_LADDER, scales, target=target)
+
+    if is_rational(anisotropy):
+        exact = anisotropy_of(rational_turn(anisotropy), negative=anisotropy < 0.0)
+        values, errors = at_rational(exact, ERROR_TARGET)
+        offset = OFFSET_COST * abs(anisotropy - exact)
+        return values, {key: errors[key] + offset * scales.get(key, abs(values[key])) for key in KEYS}
+    targets = dict.fromkeys(KEYS, INTERPOLATION_TARGET) | {
+        key: INTERPOLATION_TARGET * scale for key, scale in scales.items()
+    }
+    found = interpolate_in_anisotropy(at_rational, anisotropy, targets=targets)
+    return found.values, found.errors
 
 
 def string_thermodynamics(
@@ -99,21 +107,52 @@ def string_thermodynamics(
     """
     model = xxz_model(anisotropy=anisotropy, coupling=coupling, nodes=nodes)
     state = thermal_filling(model, beta=beta, beta_field=beta * field)
-    means = averages(model, state.filling)
-    charges = np.stack([model.energy + field * model.charge, -model.charge])
-    covariance = covariance_matrix(model, state.filling, charges)
+    return _functions(model, state, beta=beta, field=field)
+
+
+def _functions(model: BetheModel, state: ThermalState, *, beta: float, field: float) -> dict[str, float]:
+    grand = model.energy + field * model.charge
+    bare = np.stack([model.momentum_derivative, grand, -model.charge])
+    momentum, *dressed = dress(model, state.filling, bare)
+    density = model.signs[:, None] * state.filling * momentum / (2.0 * np.pi) * model.weights
+    energy = 0.25 * model.coupling * model.anisotropy + float(np.sum(model.energy * density))
+    magnetisation = 0.5 - float(np.sum(model.charge * density))
+    fluctuations = [float(np.sum(density * (1.0 - state.filling) * each**2)) for each in dressed]
     return {
         "free_energy": state.free_energy,
-        "energy": means.energy_density,
-        "entropy": state.log_partition + beta * (means.energy_density - field * means.charge_density),
-        "magnetisation": means.charge_density,
-        "specific_heat": float(beta**2 * covariance[0, 0]),
-        "susceptibility": float(beta * covariance[1, 1]),
+        "energy": energy,
+        "entropy": state.log_partition + beta * (energy - field * magnetisation),
+        "magnetisation": magnetisation,
+        "specific_heat": beta**2 * fluctuations[0],
+        "susceptibility": beta * fluctuations[1],
     }
 
 
+def _string_solver(
+    *, anisotropy: float, beta: float, field: float, coupling: float
+) -> Callable[[int], dict[str, float]]:
+    """Return `string_thermodynamics` as a function of `nodes`, each solution started from the one before."""
+    latest: list[tuple[RapidityGrid, Reals]] = []
+
+    def solve(nodes: int) -> dict[str, float]:
+        model = xxz_model(anisotropy=anisotropy, coupling=coupling, nodes=nodes)
+        start = None
+        if latest:
+            grid, log_eta = latest.pop()
+            start = interpolate(grid, log_eta, model.rapidities)
+        state = thermal_filling(model, beta=beta, beta_field=beta * field, start=start)
+        latest.append((rapidity_grid(model.table.state_angle, nodes), state.log_eta))
+        return _functions(model, state, beta=beta, field=field)
+
+    return solve
+
+
 def _refine(
-    solve: Callable[[int], dict[str, float]], ladder: tuple[int, ...], scales: dict[str, float]
+    solve: Callable[[int], dict[str, float]],
+    ladder: tuple[int, ...],
+    scales: dict[str, float],
+    *,
+    target: float = ERROR_TARGET,
 ) -> tuple[dict[str, float], dict[str, float]]:
     """Return values and errors, refining until the errors are small.
 
@@ -130,6 +169,6 @@ def _refine(
         ratio = max(moved[key] / max(before[key], ROUNDING * sizes[key], TINY) for key in KEYS)
         ratio = min(1.0, max(ratio, LEAST_RATIO))
         errors = {key: ratio * moved[key] + ROUNDING * sizes[key] for key in KEYS}
-        if all(errors[key] <= ERROR_TARGET * sizes[key] for key in KEYS):
+        if all(errors[key] <= target * sizes[key] for key in KEYS):
             break
-    return values, {f"{key}_error": errors[key] for key in KEYS}
+    return values, errors

@@ -1,11 +1,11 @@
 """Rapidity nodes that cover the whole line with spectral accuracy.
 
-A rapidity is written lambda = artanh(x), x = w sinh(s arsinh(1/w)), w = tan(g/2), with Gauss-Legendre nodes
-in -1 < s < 1. Thermal functions are analytic in exp(-2 |lambda|) at infinite rapidity (the eigenvalues of
-the quantum transfer matrix are Laurent polynomials in exp(2 lambda) at any Trotter number), hence analytic in
-s up to both ends: there is no cutoff, and no constant has to be subtracted. The sinh moves the poles at
-lambda = i g/2 away from the interval; for such maps see P. R. Johnston and D. Elliott, Int. J. Numer. Methods
-Eng. 62, 564 (2005) (reference from memory; the convergence is measured in the tests).
+A rapidity is written lambda = artanh(x), x = w sinh(s arsinh(1/w)), w = tan(angle/2), with Gauss-Legendre
+nodes in -1 < s < 1. Thermal functions are analytic in exp(-2 |lambda|) at infinite rapidity (the eigenvalues
+of the quantum transfer matrix are Laurent polynomials in exp(2 lambda) at any Trotter number), hence analytic
+in s up to both ends: there is no cutoff, and no constant has to be subtracted. The sinh moves the poles at
+lambda = i angle/2 away from the interval; for such maps see P. R. Johnston and D. Elliott, Int. J. Numer.
+Methods Eng. 62, 564 (2005) (reference from memory; the convergence is measured in the tests).
 """
 
 from __future__ import annotations
@@ -24,8 +24,8 @@ PANEL_POINTS = 20
 #: A panel spans at most this many nodes, so that its points resolve the nodes' polynomials ...
 PANEL_NODES = 8
 
-#: ... and at most this fraction of the crossing angle g where the kernels have their poles.
-PANEL_ANGLE = 0.5
+#: ... and at most this multiple of the distance from the real axis at which the kernel has its poles.
+PANEL_ANGLE = 1.6
 
 #: Beyond the outermost node panels double in width up to this, until exp(-2 distance) is below rounding.
 WIDEST_PANEL = 2.0
@@ -34,7 +34,10 @@ TAIL_LENGTH = 18.0
 
 @dataclass(frozen=True)
 class RapidityGrid:
-    """Gauss-Legendre nodes in the unit variable s, their rapidities and weights; shapes (node,)."""
+    """Gauss-Legendre nodes in the unit variable s, their rapidities and weights; shapes (node,).
+
+    angle : twice the distance from the real axis of the poles that the nodes are made for
+    """
 
     angle: float
     units: Reals
@@ -44,17 +47,17 @@ class RapidityGrid:
 
 
 @lru_cache(maxsize=64)
-def rapidity_grid(nu: int, nodes: int) -> RapidityGrid:
-    """Return the grid of `nodes` rapidities, ascending and symmetric, for the angle pi/nu."""
+def rapidity_grid(angle: float, nodes: int) -> RapidityGrid:
+    """Return the grid of `nodes` rapidities, ascending and symmetric, for poles at +-i angle/2."""
     units, unit_weights = np.polynomial.legendre.leggauss(nodes)
-    width = np.tan(0.5 * np.pi / nu)
+    width = np.tan(0.5 * angle)
     stretch = np.arcsinh(1.0 / width)
     tanh = width * np.sinh(stretch * np.abs(units))
     # 1 - tanh^2 = w^2 [sinh^2 A - sinh^2 A s] without cancellation near the ends
     complement = width**2 * np.sinh(stretch * (1.0 + units)) * np.sinh(stretch * (1.0 - units))
     rapidities = np.sign(units) * (np.log1p(tanh) - 0.5 * np.log(complement))
     slopes = width * stretch * np.cosh(stretch * units) / complement
-    return RapidityGrid(np.pi / nu, units, unit_weights, rapidities, unit_weights * slopes)
+    return RapidityGrid(angle, units, unit_weights, rapidities, unit_weights * slopes)
 
 
 def unit_of_rapidity(grid: RapidityGrid, rapidities: Reals) -> Reals:
@@ -86,16 +89,18 @@ def interpolate(grid: RapidityGrid, values: Reals, rapidities: Reals) -> Reals:
     return np.asarray(values @ matrix.T)
 
 
-def fine_line(grid: RapidityGrid) -> tuple[Reals, Reals]:
+def fine_line(grid: RapidityGrid, angle: float) -> tuple[Reals, Reals]:
     """Return rapidities and weights (fine,) that integrate a kernel times a polynomial of the nodes.
 
+    angle : twice the distance of the kernel's poles from the real axis
     Gauss-Legendre panels: their edges are every few nodes, and wider and wider beyond the outermost ones.
     """
+    widest = 0.5 * PANEL_ANGLE * angle
     inner = np.append(grid.rapidities[:-1:PANEL_NODES], grid.rapidities[-1])
-    tail = _tail_edges(PANEL_ANGLE * grid.angle)
+    tail = _tail_edges(widest)
     pieces = [inner[0] - tail[::-1]]
     for low, high in pairwise(inner):
-        count = int(np.ceil((high - low) / (PANEL_ANGLE * grid.angle)))
+        count = int(np.ceil((high - low) / widest))
         pieces.append(np.linspace(low, high, count + 1)[:-1])
     edges = np.concatenate([*pieces, inner[-1] + np.append(0.0, tail)])
     points, weights = np.polynomial.legendre.leggauss(PANEL_POINTS)

@@ -1,20 +1,22 @@
 """The XXZ chain of Bethe ansatz: strings, rapidity nodes, bare functions and scattering kernel as arrays.
 
-H = J sum [SxSx + SySy + D SzSz], D = plus or minus cos(pi/nu); energies are counted from the ferromagnet with
-all spins up, of energy J D / 4 and magnetisation 1/2 a site.
+H = J sum [SxSx + SySy + D SzSz], D = plus or minus cos(pi p/q); energies are counted from the ferromagnet
+with all spins up, of energy J D / 4 and magnetisation 1/2 a site.
 """
 
 from __future__ import annotations
 
 from collections.abc import Callable
 from dataclasses import dataclass
+from fractions import Fraction
 from functools import lru_cache
 
 import numpy as np
 
+from tnquench.bethe.angles import anisotropy_of, rational_turn
 from tnquench.bethe.grid import rapidity_grid
 from tnquench.bethe.kernel import scattering_kernel
-from tnquench.bethe.strings import StringTable, phase_curvature, phase_derivative, string_table, supported_nu
+from tnquench.bethe.strings import StringTable, phase_curvature, phase_derivative, string_table
 from tnquench.conventions import Integers, Reals
 
 
@@ -23,7 +25,7 @@ class BetheModel:
     """Strings and rapidity grid of an XXZ chain; `kernel` includes the quadrature, all else is per node.
 
     anisotropy, coupling  : D and J
-    lengths, parities, signs : (string,) Takahashi-Suzuki labels n, v, sigma
+    table                 : the strings, with lengths n, parities v, signs sigma, and the angle g = pi p/q
     rapidities, weights   : (node,) lambda and the weight of the integral over lambda, ascending and symmetric
     energy, energy_derivative : (string, node) bare energy e above the ferromagnet and its rapidity derivative
     momentum_derivative   : (string, node) bare p' = 2 pi a_n
@@ -34,9 +36,7 @@ class BetheModel:
 
     anisotropy: float
     coupling: float
-    lengths: Integers
-    parities: Integers
-    signs: Integers
+    table: StringTable
     rapidities: Reals
     weights: Reals
     energy: Reals
@@ -46,8 +46,18 @@ class BetheModel:
     kernel: Reals
 
     @property
+    def lengths(self) -> Integers:
+        """Lengths n of the strings, (string,)."""
+        return self.table.lengths
+
+    @property
+    def signs(self) -> Integers:
+        """Signs sigma of the strings, (string,)."""
+        return self.table.signs
+
+    @property
     def strings(self) -> int:
-        """Number of strings, nu."""
+        """Number of strings."""
         return int(self.lengths.size)
 
     @property
@@ -57,21 +67,22 @@ class BetheModel:
 
 
 def xxz_model(*, anisotropy: float, coupling: float = 1.0, nodes: int = 64) -> BetheModel:
-    """Return the model at D = plus or minus cos(pi/nu), nu = 2..8, with `nodes` rapidities a string.
+    """Return the model at D = plus or minus cos(pi p/q) with `nodes` rapidities a string.
 
     A negative anisotropy has the strings of |D| and the opposite energy (rotate every second spin about z).
     Raises UnsupportedAnisotropy (a ValueError) elsewhere. Cached: the arrays are read-only.
     """
-    nu = supported_nu(anisotropy)
-    return _build(nu, nu > 2 and anisotropy < 0.0, float(coupling), int(nodes))
+    return _build(rational_turn(anisotropy), anisotropy < 0.0, float(coupling), int(nodes))
 
 
 @lru_cache(maxsize=16)
-def _build(nu: int, negative: bool, coupling: float, nodes: int) -> BetheModel:
-    table, grid = string_table(nu), rapidity_grid(nu, nodes)
-    slopes = _bare(phase_derivative, table, grid.rapidities)
-    curvatures = _bare(phase_curvature, table, grid.rapidities)
-    scale = np.pi * coupling * np.sin(table.angle) * (1.0 if negative else -1.0)
+def _build(turn: Fraction, negative: bool, coupling: float, nodes: int) -> BetheModel:
+    table = string_table(turn)
+    grid = rapidity_grid(table.state_angle, nodes)
+    anisotropy = anisotropy_of(turn, negative=negative)
+    slopes = bare_functions(phase_derivative, table, grid.rapidities)
+    curvatures = bare_functions(phase_curvature, table, grid.rapidities)
+    scale = np.pi * coupling * np.sin(table.angle) * (1.0 if anisotropy < 0.0 else -1.0)
     arrays = {
         "rapidities": grid.rapidities,
         "weights": grid.weights,
@@ -79,15 +90,14 @@ def _build(nu: int, negative: bool, coupling: float, nodes: int) -> BetheModel:
         "energy_derivative": scale * curvatures,
         "momentum_derivative": 2.0 * np.pi * slopes,
         "charge": np.repeat(table.lengths[:, None].astype(np.float64), nodes, axis=1),
-        "kernel": scattering_kernel(nu, nodes),
+        "kernel": scattering_kernel(turn, nodes),
     }
     for array in arrays.values():
         array.flags.writeable = False
-    magnitude = 0.0 if nu == 2 else float(np.cos(table.angle))
-    anisotropy = -magnitude if negative else magnitude
-    return BetheModel(anisotropy, coupling, table.lengths, table.parities, table.signs, **arrays)
+    return BetheModel(anisotropy, coupling, table, **arrays)
 
 
-def _bare(function: Callable[..., Reals], table: StringTable, rapidities: Reals) -> Reals:
-    strings = zip(table.lengths.tolist(), table.parities.tolist(), strict=True)
-    return np.array([function(rapidities, length=n, parity=v, nu=table.nu) for n, v in strings])
+def bare_functions(function: Callable[..., Reals], table: StringTable, rapidities: Reals) -> Reals:
+    """Return `function` (phase_derivative or phase_curvature) of each string, (string, rapidity)."""
+    angles = (np.pi * r / table.turn.denominator for r in table.residues)
+    return np.array([function(rapidities, angle=angle) for angle in angles])

@@ -55,16 +55,20 @@ class Averages:
     charge_current: float
 
 
-def thermal_filling(model: BetheModel, *, beta: float, beta_field: float = 0.0) -> ThermalState:
+def thermal_filling(
+    model: BetheModel, *, beta: float, beta_field: float = 0.0, start: Reals | None = None
+) -> ThermalState:
     """Solve the thermodynamic Bethe ansatz for exp(-beta H + beta_field S^z).
 
     ln eta_a = beta e_a + beta_field n_a + sum_b T_ab (sigma_b ln(1 + 1/eta_b)), theta = 1/(1 + eta).
     Both signs of beta_field (the product beta h) are allowed: -h exchanges the last two strings, with
-    theta_(nu-1)(-h) = 1 - theta_nu(h), and leaves the others alone.
+    theta_(m-1)(-h) = 1 - theta_m(h), and leaves the others alone.
+    start : (string, node) ln eta from which the iteration starts, for beta_field >= 0; infinite temperature
     Raises ConvergenceError with the residual and the best state. Source: Takahashi and Suzuki (1972).
     """
     field = abs(beta_field)
-    start = np.repeat(infinite_temperature_log_eta(model, field)[:, None], model.nodes, axis=1)
+    if start is None:
+        start = np.repeat(infinite_temperature_log_eta(model, field)[:, None], model.nodes, axis=1)
     log_eta, residual = solve_log_eta(model, beta * model.energy + field * model.charge, start)
     log_partition = _log_partition(model, log_eta, beta=beta, beta_field=field)
     if beta_field < 0.0:
@@ -80,20 +84,26 @@ def thermal_filling(model: BetheModel, *, beta: float, beta_field: float = 0.0) 
 def infinite_temperature_log_eta(model: BetheModel, beta_field: float) -> Reals:
     """Return the constants ln eta, shape (string,), at beta -> 0 with the product beta h >= 0 kept.
 
-    eta_n = (sinh((n+1) x)/sinh x)^2 - 1 for n <= nu - 2, eta_(nu-1) = e^(nu x) sinh((nu-1) x)/sinh x and
-    eta_nu = e^(nu x) sinh x/sinh((nu-1) x), x = beta h / 2. Source: Takahashi and Suzuki (1972).
+    With x = beta h / 2, y the unit of the level and n the length of a string, eta_j =
+    (sinh((n + y) x)/sinh(y x))^2 - 1; for the last two strings, with lengths n and n', n + n' = q, eta =
+    e^(q x) sinh(n x)/sinh(n' x) and the same with n and n' exchanged. Source: Takahashi and Suzuki (1972) at
+    one level; at more levels from memory, checked to solve the equations of a constant state.
     """
-    nu, x = model.strings, 0.5 * beta_field
-    ratio = _log_sinh_ratio(np.arange(2.0, nu), x)
-    last = float(_log_sinh_ratio(np.array([nu - 1.0]), x)[0])
-    return np.concatenate([2.0 * ratio + np.log(-np.expm1(-2.0 * ratio)), [nu * x + last, nu * x - last]])
+    table, x = model.table, 0.5 * beta_field
+    lengths, units = (column[:-2].astype(float) for column in (table.lengths, table.units))
+    ratio = _log_sinh_ratio(lengths + units, units, x)
+    before, last = (np.array([float(n)]) for n in table.lengths[-2:])
+    tilt = float(_log_sinh_ratio(before, last, x)[0])
+    rise = float(before[0] + last[0]) * x
+    return np.concatenate([2.0 * ratio + np.log(-np.expm1(-2.0 * ratio)), [rise + tilt, rise - tilt]])
 
 
-def _log_sinh_ratio(multiples: Reals, x: float) -> Reals:
-    """Return ln[sinh(m x)/sinh(x)], shape (multiple,)."""
+def _log_sinh_ratio(above: Reals, below: Reals, x: float) -> Reals:
+    """Return ln[sinh(above x)/sinh(below x)], shape (multiple,)."""
     if x < 1e-9:
-        return np.log(multiples)
-    return np.asarray((multiples - 1.0) * x + np.log(np.expm1(-2.0 * multiples * x) / np.expm1(-2.0 * x)))
+        return np.asarray(np.log(above / below))
+    logs = np.log(np.expm1(-2.0 * above * x) / np.expm1(-2.0 * below * x))
+    return np.asarray((above - below) * x + logs)
 
 
 def solve_log_eta(model: BetheModel, driving: Reals, start: Reals) -> tuple[Reals, float]:
@@ -102,16 +112,27 @@ def solve_log_eta(model: BetheModel, driving: Reals, start: Reals) -> tuple[Real
     Newton's method from `start` (string, node); the Jacobian is the dressing matrix 1 + T sigma theta.
     An even `driving` gives an even solution, which is sought on half of the nodes.
     """
-    even = bool(np.array_equal(driving, driving[:, ::-1]))
-    kept = (model.nodes + 1) // 2 if even else model.nodes
-    kernel = model.kernel[:, :kept, :, :kept] * model.signs[:, None]
-    if even:
-        mirrored = model.nodes - kept
-        kernel[..., :mirrored] += (model.kernel[:, :kept, :, ::-1] * model.signs[:, None])[..., :mirrored]
-    kernel = kernel.reshape(model.strings * kept, -1)
+    kept = (model.nodes + 1) // 2 if _is_even(driving) else model.nodes
+    kernel = _signed_kernel(model, kept)
     solution, residual = _newton(kernel, driving[:, :kept].ravel(), start[:, :kept].ravel())
-    solution = solution.reshape(model.strings, kept)
-    return np.concatenate([solution, solution[:, : model.nodes - kept][:, ::-1]], axis=1), residual
+    return _unfolded(solution.reshape(model.strings, kept), model.nodes), residual
+
+
+def _is_even(functions: Reals) -> bool:
+    return bool(np.array_equal(functions, functions[..., ::-1]))
+
+
+def _signed_kernel(model: BetheModel, kept: int) -> Reals:
+    """Return T sigma, (string*kept, string*kept), that acts on the first `kept` nodes of even functions."""
+    kernel = model.kernel[:, :kept, :, :kept] * model.signs[:, None]
+    mirrored = model.nodes - kept
+    kernel[..., :mirrored] += (model.kernel[:, :kept, :, kept:] * model.signs[:, None])[..., ::-1]
+    return np.asarray(kernel.reshape(model.strings * kept, -1))
+
+
+def _unfolded(values: Reals, nodes: int) -> Reals:
+    """Return even functions (..., node) from their first nodes."""
+    return np.concatenate([values, values[..., : nodes - values.shape[-1]][..., ::-1]], axis=-1)
 
 
 def _newton(signed_kernel: Reals, driving: Reals, log_eta: Reals) -> tuple[Reals, float]:
@@ -147,24 +168,21 @@ def _log_partition(model: BetheModel, log_eta: Reals, *, beta: float, beta_field
     return vacuum + float(model.signs @ (density @ model.weights))
 
 
-def dressing_matrix(model: BetheModel, filling: Reals) -> Reals:
-    """Return 1 + T sigma theta, shape (string*node, string*node)."""
-    size = model.strings * model.nodes
-    matrix = (model.kernel * (model.signs[:, None] * filling)).reshape(size, size)
-    matrix.flat[:: size + 1] += 1.0
-    return np.asarray(matrix)
-
-
 def dress(model: BetheModel, filling: Reals, bare: Reals) -> Reals:
     """Return the dressed functions of `bare`, shape (..., string, node), in the state `filling`.
 
     q_dressed = q - T (sigma theta q_dressed), `filling` (string, node) and `bare` smooth in rapidity; the
-    leading axes of `bare` are solved together.
+    leading axes of `bare` are solved together, on half of the nodes if everything is even.
     """
-    size = model.strings * model.nodes
-    columns = np.asarray(bare, dtype=float).reshape(-1, size).T
-    factors = lu_factor(dressing_matrix(model, filling), overwrite_a=True, check_finite=False)
-    return np.asarray(lu_solve(factors, columns, check_finite=False).T.reshape(np.shape(bare)))
+    bare = np.asarray(bare, dtype=float)
+    kept = (model.nodes + 1) // 2 if _is_even(filling) and _is_even(bare) else model.nodes
+    size = model.strings * kept
+    matrix = _signed_kernel(model, kept) * filling[:, :kept].ravel()
+    matrix.flat[:: size + 1] += 1.0
+    columns = bare[..., :kept].reshape(-1, size).T
+    factors = lu_factor(matrix, overwrite_a=True, check_finite=False)
+    dressed = lu_solve(factors, columns, check_finite=False).T
+    return _unfolded(dressed.reshape(*bare.shape[:-1], kept), model.nodes)
 
 
 def effective_velocity(model: BetheModel, filling: Reals) -> Reals:

@@ -1,110 +1,139 @@
-"""Strings of the XXZ chain at anisotropy D = cos(pi/nu) and the kernels between them.
+"""Strings of the XXZ chain at a rational angle g = pi p/q, |D| = cos g, and the kernels between them.
 
 Sources: M. Takahashi and M. Suzuki, Prog. Theor. Phys. 48, 2187 (1972); M. Takahashi, Thermodynamics of
-One-Dimensional Solvable Models (Cambridge University Press, 1999).
+One-Dimensional Solvable Models (Cambridge University Press, 1999), chapter 9.
 """
 
 from __future__ import annotations
 
 from collections import Counter
 from dataclasses import dataclass
+from fractions import Fraction
+from functools import cached_property, lru_cache
 
 import numpy as np
 
+from tnquench.bethe.angles import UnsupportedAnisotropy, continued_fraction, require_gapless
 from tnquench.conventions import Integers, Reals
 
-#: Largest nu for which thermal states are supported and tested.
-LARGEST_NU = 8
+__all__ = ["StringTable", "UnsupportedAnisotropy", "string_table", "supported_nu"]
 
-#: An anisotropy counts as cos(pi/nu) when it agrees to this absolute distance.
-ANISOTROPY_TOLERANCE = 1e-9
-
-#: A basic kernel a_n^v, named by its length n and parity v.
-KernelTerm = tuple[int, int]
+#: A basic function a_n^v depends on n g modulo 2 pi alone: it is named by its residue r, -q < r < q, with
+#: a = sin(w) / (cosh 2x - cos w) / pi, w = pi r/q. Residue 0 is the function that vanishes.
+Residue = int
 
 
-class UnsupportedAnisotropy(ValueError):  # noqa: N818 - an answer to a question, caught by its asker
-    """The anisotropy is not plus or minus cos(pi/nu); the message names the nearest supported values."""
+def supported_nu(anisotropy: float) -> None:
+    """Raise UnsupportedAnisotropy unless -1 < D < 1: the former name of `angles.require_gapless`."""
+    require_gapless(anisotropy)
 
 
 @dataclass(frozen=True)
 class StringTable:
-    """Strings at crossing angle g = pi/nu, shapes (string,): lengths, parities v and signs sigma."""
+    """Strings at crossing angle g = pi p/q, turn = p/q.
 
-    nu: int
+    lengths, parities, signs : (string,) n, v and sigma
+    units  : (string,) y_i of the level that a string belongs to; the last string has that of the level below
+    """
+
+    turn: Fraction
     lengths: Integers
     parities: Integers
     signs: Integers
+    units: Integers
 
     @property
     def angle(self) -> float:
         """The crossing angle g with |D| = cos g."""
-        return float(np.pi / self.nu)
+        return float(np.pi * self.turn)
+
+    @property
+    def residues(self) -> tuple[Residue, ...]:
+        """The basic function of each string."""
+        pairs = zip(self.lengths.tolist(), self.parities.tolist(), strict=True)
+        return tuple(residue(self.turn, length=n, parity=v) for n, v in pairs)
+
+    @cached_property
+    def state_angle(self) -> float:
+        """Twice the distance from the real axis of the nearest pole of a basic function of a string."""
+        return float(np.pi * min(abs(r) for r in self.residues) / self.turn.denominator)
+
+    @cached_property
+    def kernel_angle(self) -> float:
+        """Twice the distance from the real axis of the nearest pole of a kernel between strings, or pi."""
+        size = self.lengths.size
+        widths = {abs(r) for a in range(size) for b in range(size) for r in kernel_terms(self, a, b)}
+        return float(np.pi * min(widths, default=self.turn.denominator) / self.turn.denominator)
+
+    @property
+    def finest_angle(self) -> float:
+        """The smaller of the two: what a rapidity mesh must resolve."""
+        return min(self.state_angle, self.kernel_angle)
 
 
-def supported_anisotropies() -> tuple[float, ...]:
-    """Return all supported anisotropies, plus or minus cos(pi/nu) with nu = 2..8, in ascending order."""
-    positive = [float(np.cos(np.pi / nu)) for nu in range(3, LARGEST_NU + 1)]
-    return tuple(sorted([-value for value in positive] + [0.0, *positive]))
+@lru_cache(maxsize=64)
+def string_table(turn: Fraction) -> StringTable:
+    """Return the strings at g = pi turn, 0 < turn <= 1/2.
 
-
-def supported_nu(anisotropy: float) -> int:
-    """Return nu with |anisotropy| = cos(pi/nu), 2 <= nu <= 8.
-
-    Raises UnsupportedAnisotropy naming the nearest supported values.
+    With q/p = [nu_1, ..., nu_l], m_i = nu_1 + ... + nu_i, y_(-1) = 0, y_0 = 1, y_i = nu_i y_(i-1) + y_(i-2):
+    string j = 1 ... m_l has n_j = y_(i-1) + (j - m_i) y_i and sigma_j = (-1)^i for m_i <= j < m_(i+1), and
+    n = y_(l-1), sigma = (-1)^l at j = m_l. Parity v_j = (-1)^floor((n_j - 1) p/q), but v = -1 at j = m_1.
     """
-    nearest = sorted(supported_anisotropies(), key=lambda value: abs(value - anisotropy))[:2]
-    if not abs(nearest[0] - anisotropy) <= ANISOTROPY_TOLERANCE:  # not <=, so that NaN is refused too
-        values = " and ".join(f"{value:.12g}" for value in sorted(nearest))
-        message = (
-            f"anisotropy {anisotropy!r} is not supported; allowed are 0 and plus or minus cos(pi/nu), "
-            f"nu = 3..{LARGEST_NU}; the nearest are {values}"
-        )
-        raise UnsupportedAnisotropy(message)
-    return round(float(np.pi / np.arccos(abs(nearest[0]))))
+    terms = continued_fraction(turn)
+    before, unit, lengths, units, signs = 0, 1, [], [], []
+    for level, term in enumerate(terms):
+        steps = range(1 if level == 0 else 0, term)
+        lengths += [before + step * unit for step in steps]
+        units += [unit] * len(steps)
+        signs += [(-1) ** level] * len(steps)
+        before, unit = unit, term * unit + before
+    lengths, units, signs = [*lengths, before], [*units, before], [*signs, (-1) ** len(terms)]
+    parities = [(-1) ** ((n - 1) * turn.numerator // turn.denominator) for n in lengths]
+    parities[terms[0] - 1] = -1
+    columns = (np.array(column, dtype=np.int64) for column in (lengths, parities, signs, units))
+    return StringTable(turn, *columns)
 
 
-def string_table(nu: int) -> StringTable:
-    """Return the nu strings at angle pi/nu: lengths 1..nu-1 of parity + and sign +, then (1, -) of sign -."""
-    last_differs = np.append(np.ones(nu - 1, dtype=np.int64), -1)
-    return StringTable(nu, np.append(np.arange(1, nu), 1), last_differs, last_differs)
+def residue(turn: Fraction, *, length: int, parity: int) -> Residue:
+    """Return the residue of a_n^v = (v/pi) sin(n g) / (cosh 2x - v cos n g).
 
-
-def phase_derivative(rapidity: Reals, *, length: int, parity: int, nu: int) -> Reals:
-    """Return a_n^v(rapidity) = (v/pi) sin(n g) / (cosh 2 rapidity - v cos(n g)), g = pi/nu; any shape.
-
-    It vanishes identically where n is a multiple of nu (the limit would hide a delta function there).
+    Zero where n g is a multiple of pi: the function vanishes there (its limit would hide a delta function).
     """
-    if length % nu == 0:
-        return np.zeros_like(rapidity)
-    strength = parity * np.sin(np.pi * length / nu) / np.pi
-    return np.asarray(strength / _denominator(rapidity, length=length, parity=parity, nu=nu))
+    p, q = turn.numerator, turn.denominator
+    angle = (length * p + (q if parity < 0 else 0)) % (2 * q)
+    return 0 if angle % q == 0 else angle - 2 * q * (angle > q)
 
 
-def phase_curvature(rapidity: Reals, *, length: int, parity: int, nu: int) -> Reals:
-    """Return the derivative of a_n^v with respect to the rapidity; any shape."""
-    if length % nu == 0:
-        return np.zeros_like(rapidity)
-    strength = -2.0 * parity * np.sin(np.pi * length / nu) / np.pi
-    denominator = _denominator(rapidity, length=length, parity=parity, nu=nu)
-    return np.asarray(strength * np.sinh(2.0 * rapidity) / denominator**2)
+def phase_derivative(rapidity: Reals, *, angle: float) -> Reals:
+    """Return sin(w) / (cosh 2 rapidity - cos w) / pi at w = angle != 0, |w| < pi; any shape.
+
+    For |w| -> 0 it is a delta function of strength sign(w).
+    """
+    return np.asarray(np.sin(angle) / np.pi / _denominator(rapidity, angle))
 
 
-def _denominator(rapidity: Reals, *, length: int, parity: int, nu: int) -> Reals:
-    # cosh 2x - c = 2 sinh^2 x + (1 - c) keeps all digits near x = 0
-    return np.asarray(2.0 * np.sinh(rapidity) ** 2 + (1.0 - parity * np.cos(np.pi * length / nu)))
+def phase_curvature(rapidity: Reals, *, angle: float) -> Reals:
+    """Return the derivative of `phase_derivative` with respect to the rapidity; any shape."""
+    strength = -2.0 * np.sin(angle) / np.pi
+    return np.asarray(strength * np.sinh(2.0 * rapidity) / _denominator(rapidity, angle) ** 2)
 
 
-def kernel_terms(table: StringTable, row: int, column: int) -> dict[KernelTerm, int]:
-    """Return the scattering kernel T_jk of two strings as {(length, parity): multiplicity}.
+def _denominator(rapidity: Reals, angle: float) -> Reals:
+    # cosh 2x - cos w = 2 sinh^2 x + (1 - cos w) keeps all digits near x = 0, 2 sin^2(w/2) those at small w
+    rest = 1.0 - np.cos(angle) if abs(angle) > 1.0 else 2.0 * np.sin(0.5 * angle) ** 2
+    return np.asarray(2.0 * np.sinh(rapidity) ** 2 + rest)
+
+
+def kernel_terms(table: StringTable, row: int, column: int) -> dict[Residue, int]:
+    """Return the scattering kernel T_jk of two strings as {residue > 0: multiplicity of either sign}.
 
     T_jk = (1 - delta) a_|n_j - n_k| + 2 a_(|n_j - n_k| + 2) + ... + 2 a_(n_j + n_k - 2) + a_(n_j + n_k),
-    delta = 1 for equal lengths, all of parity v_j v_k (Takahashi and Suzuki 1972). Terms that vanish are left
-    out.
+    delta = 1 for equal lengths, all of parity v_j v_k (Takahashi and Suzuki 1972).
     """
     parity = int(table.parities[row] * table.parities[column])
     short, long = sorted((int(table.lengths[row]), int(table.lengths[column])))
-    terms: Counter[KernelTerm] = Counter()
+    terms: Counter[Residue] = Counter()
     for step in range(short + 1):
-        terms[long - short + 2 * step, parity] = 1 if step in (0, short) else 2
-    return {key: count for key, count in terms.items() if key[0] % table.nu}
+        r = residue(table.turn, length=long - short + 2 * step, parity=parity)
+        terms[abs(r)] += (1 if step in (0, short) else 2) * int(np.sign(r))
+    return {r: count for r, count in terms.items() if r and count}

@@ -30,6 +30,9 @@ CHANGE_TARGET = 1e-12
 
 ITERATIONS = 100
 
+#: Rays this near to an edge, relatively, are on it: profiles there are square roots of the distance.
+EDGE_ROUNDING = 64.0 * float(np.finfo(float).eps)
+
 
 def light_cone_of_halves(mesh: RapidityMesh, left: Reals, right: Reals) -> tuple[float, float]:
     """Return the velocities of the cone's edges: the left state's least, the right state's greatest."""
@@ -45,6 +48,7 @@ def join_halves(mesh: RapidityMesh, left: Reals, right: Reals, *, rays: Reals) -
     Returns averages (ray, observable). Raises ConvergenceError with the largest residual.
     """
     first, last = light_cone_of_halves(mesh, left, right)
+    first, last = first + EDGE_ROUNDING * abs(first), last - EDGE_ROUNDING * abs(last)
     result = np.empty((rays.size, len(OBSERVABLES)))
     for outside, filling in ((rays <= first, left), (rays >= last, right)):
         result[outside] = uniform_averages(mesh, filling)

@@ -16,8 +16,8 @@ import numpy as np
 from scipy.linalg import lu_factor, lu_solve
 
 from tnquench.bethe.grid import RapidityGrid, interpolation_matrix, rapidity_grid, unit_of_rapidity
-from tnquench.bethe.model import BetheModel, xxz_model
-from tnquench.bethe.strings import kernel_terms, phase_derivative, string_table
+from tnquench.bethe.model import BetheModel, bare_functions, xxz_model
+from tnquench.bethe.strings import kernel_terms, phase_derivative
 from tnquench.conventions import Integers, Reals
 
 #: Rapidities beyond this are left out: every density falls like exp(-2 |lambda|), to 5e-12 here.
@@ -101,22 +101,20 @@ class RapidityMesh:
 def rapidity_mesh(
     *, anisotropy: float, coupling: float, nodes: int, spacing: float, core_spacing: float = np.inf
 ) -> RapidityMesh:
-    """Return the mesh with points at most `spacing` crossing angles apart, over `nodes` nodes a string.
+    """Return the mesh with points at most `spacing` apart, over `nodes` nodes a string.
 
-    core_spacing : same unit; about the distance of points near rapidity zero, where it is the smaller one
+    spacing, core_spacing : in units of the finest angle of the strings; the second one is about the distance
+        of points near rapidity zero, where it is the smaller one
     Raises UnsupportedAnisotropy where the strings are not finite in number. Cached.
     """
     model = xxz_model(anisotropy=anisotropy, coupling=coupling, nodes=nodes)
-    grid = rapidity_grid(model.strings, nodes)
-    layout = Layout(spacing * grid.angle, core_spacing * grid.angle)
+    table = model.table
+    grid = rapidity_grid(table.state_angle, nodes)
+    layout = Layout(spacing * table.finest_angle, core_spacing * table.finest_angle)
     rapidities = layout.rapidities(np.arange(layout.points, dtype=np.float64))
     weights = layout.weights(rapidities)
     window = np.cosh(rapidities) ** -2
     inverse_window = np.cosh(model.rapidities) ** 2
-    bare = [
-        phase_derivative(rapidities, length=int(length), parity=int(parity), nu=model.strings)
-        for length, parity in zip(model.lengths, model.parities, strict=True)
-    ]
     energy_unit = model.energy[0, 0] / model.momentum_derivative[0, 0] * 2.0 * np.pi  # e = energy_unit * a_n
     return RapidityMesh(
         model=model,
@@ -128,24 +126,23 @@ def rapidity_mesh(
         kernel=_mesh_kernel(model, rapidities, window * weights),
         slopes=np.stack([model.energy_derivative, model.momentum_derivative]) * inverse_window,
         measure=model.signs[:, None] * window * weights / (2.0 * np.pi),
-        energy=energy_unit * np.array(bare),
+        energy=energy_unit * bare_functions(phase_derivative, table, rapidities),
     )
 
 
 def _mesh_kernel(model: BetheModel, rapidities: Reals, weights: Reals) -> Reals:
     """Return T_ab(lambda_node - mu_point) sigma_b weights / window(node), (string*point, string*node)."""
-    table = string_table(model.strings)
     distance = model.rapidities[None, :] - rapidities[:, None]
     scale = weights[:, None] * np.cosh(model.rapidities) ** 2
-    basic: dict[tuple[int, int], Reals] = {}
+    basic: dict[int, Reals] = {}
     kernel = np.zeros((model.strings, rapidities.size, model.strings, model.nodes))
     for row in range(model.strings):
         for column in range(model.strings):
-            for (length, parity), count in kernel_terms(table, row, column).items():
-                if (length, parity) not in basic:
-                    values = phase_derivative(distance, length=length, parity=parity, nu=model.strings)
-                    basic[length, parity] = values * scale
-                kernel[column, :, row] += count * model.signs[column] * basic[length, parity]
+            for residue, count in kernel_terms(model.table, row, column).items():
+                if residue not in basic:
+                    angle = np.pi * residue / model.table.turn.denominator
+                    basic[residue] = scale * phase_derivative(distance, angle=angle)
+                kernel[column, :, row] += count * model.signs[column] * basic[residue]
     return kernel.reshape(model.strings * rapidities.size, -1)
 
 

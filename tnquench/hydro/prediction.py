@@ -3,15 +3,19 @@
 from __future__ import annotations
 
 from collections.abc import Callable
-from dataclasses import dataclass
+from dataclasses import replace
 
 import numpy as np
 from scipy.ndimage import maximum_filter1d
 
 from tnquench.conventions import OBSERVABLE_PLACES, Reals
 from tnquench.errors import InputError
+from tnquench.hydro.between import Between, between
+from tnquench.hydro.gapped import predict_step_gapped
 from tnquench.hydro.joined import join_halves, light_cone_of_halves
 from tnquench.hydro.mesh import OBSERVABLES, RapidityMesh, rapidity_mesh, uniform_averages
+from tnquench.hydro.predicted import Prediction as Prediction
+from tnquench.hydro.predicted import rays_to, refuse_reflection, wall_of
 from tnquench.hydro.refinement import Refined, refine
 from tnquench.hydro.smooth import LEVELS as SMOOTH_LEVELS
 from tnquench.hydro.smooth import SmoothStart, initial_light_cone, smooth_averages
@@ -25,37 +29,20 @@ STEP_LEVELS: tuple[tuple[int, float], ...] = ((32, 0.11), (48, 0.085), (64, 0.07
 STEP_TARGET, STEP_FLOOR = 1e-8, 1e-10
 SMOOTH_TARGET, SMOOTH_FLOOR = 1e-6, 1e-8
 
+#: Target of joined halves at the anisotropies between which others are combined.
+COMBINED_TARGET = 1e-6
+
 #: Kinks, as at ends where a profile is not flat, converge too slowly for more levels to be worth their cost.
 SMOOTH_GAIN = 1.5
 
 #: Least scale of a smooth profile, in lattice spacings.
 NARROWEST_SCALE = 0.3
 
-#: Rays x/t that agree to this many decimals are one ray.
-RAY_DECIMALS = 12
+#: Places over which the error of combining anisotropies, a difference of few polynomials, is the largest.
+STRINGS_NEIGHBOURS = 9
 
 STEP_REFERENCES = ("castro_alvaredo_2016", "bertini_2016", "takahashi_1972", "takahashi_1999")
 SMOOTH_REFERENCES = ("doyon_2018", *STEP_REFERENCES)
-
-
-@dataclass(frozen=True, eq=False)
-class Prediction:
-    """Euler-scale densities and currents of a run.
-
-    fields        : observable -> (time, place), on the sites or bonds that OBSERVABLE_PLACES names
-    grid_error    : same shapes; change under the last refinement of rapidities (and positions)
-    strings_error : same shapes; zero, because the strings at these anisotropies are finite in number
-    light_cone    : velocities (negative, positive) of its edges
-    method        : "joined halves (self-similar)" | "characteristics" | "uniform"
-    references    : keys of the report's references
-    """
-
-    fields: dict[str, Reals]
-    grid_error: dict[str, Reals]
-    strings_error: dict[str, Reals]
-    light_cone: tuple[float, float]
-    method: str
-    references: tuple[str, ...]
 
 
 def predict_step(
@@ -75,33 +62,53 @@ def predict_step(
     times : (time,) in 1/J, not negative; sites, bonds : (site,), (bond,) positions, symmetric about 0
     At t = 0 values are those of the local thermal state. The light cone's left edge is the least velocity of
     the left state, its right edge the greatest of the right state: beyond them nothing changes.
-    Raises UnsupportedAnisotropy (a ValueError), ConvergenceError, and InputError where light reaches the
-    ends, because the solution is that of an infinite chain.
+    At |D| < 1 that is not cos(pi p/q) of a small string table the result is combined from such anisotropies
+    nearby. Raises ConvergenceError, and InputError where |D| < 1 is too near to 1, and where light reaches
+    the ends, because the solution is that of an infinite chain.
     """
-
-    def mesh_at(level: int) -> RapidityMesh:
-        nodes, spacing = STEP_LEVELS[level]
-        return rapidity_mesh(anisotropy=anisotropy, coupling=coupling, nodes=nodes, spacing=spacing)
-
-    def solve(level: int, rays: Reals) -> Reals:
-        mesh, result = mesh_at(level), np.empty((rays.size, len(OBSERVABLES)))
-        at_joint = np.isnan(rays)
-        result[at_joint] = uniform_averages(mesh, thermal_on_mesh(mesh, middle))
-        halves = thermal_on_mesh(mesh, left), thermal_on_mesh(mesh, right)
-        result[~at_joint] = join_halves(mesh, *halves, rays=rays[~at_joint])
-        return result
-
-    mesh = mesh_at(-2)
-    edges = light_cone_of_halves(mesh, thermal_on_mesh(mesh, left), thermal_on_mesh(mesh, right))
+    if abs(anisotropy) >= 1.0:
+        return predict_step_gapped(
+            anisotropy=anisotropy, coupling=coupling, left=left, right=right, middle=middle,
+            times=times, sites=sites, bonds=bonds,
+        )  # fmt: skip
+    way = between(anisotropy)
+    edges = _combined_edges(way, lambda value: _edges_of_halves(value, coupling, left, right))
     uniform = left == right
     if not uniform:
-        _refuse_reflection(edges, times, sites)
-    rays = _rays(np.concatenate([sites, bonds]), times, uniform=uniform)
+        refuse_reflection(edges, times, sites)
+    rays = rays_to(np.concatenate([sites, bonds]), times, uniform=uniform)
     distinct, index = np.unique(rays, return_inverse=True)
-    refined = refine(solve, distinct, levels=len(STEP_LEVELS), target=STEP_TARGET, floor=STEP_FLOOR)
-    values, errors = (each[index.reshape(rays.shape)] for each in (refined.values, refined.errors))
+    target = STEP_TARGET if len(way.anisotropies) == 1 else COMBINED_TARGET
+
+    def refined(value: float) -> Refined:
+        def solve(level: int, some: Reals) -> Reals:
+            return _on_rays(_step_mesh(value, coupling, level), left, right, middle, some)
+
+        found = refine(solve, distinct, levels=len(STEP_LEVELS), target=target, floor=STEP_FLOOR)
+        return Refined(*(each[index.reshape(rays.shape)] for each in (found.values, found.errors)))
+
     method = "uniform" if uniform else "joined halves (self-similar)"
-    return _prediction(Refined(values, errors), sites.size, edges, method, STEP_REFERENCES)
+    return _prediction(way, refined, sites.size, edges, method, STEP_REFERENCES)
+
+
+def _step_mesh(anisotropy: float, coupling: float, level: int) -> RapidityMesh:
+    nodes, spacing = STEP_LEVELS[level]
+    return rapidity_mesh(anisotropy=anisotropy, coupling=coupling, nodes=nodes, spacing=spacing)
+
+
+def _edges_of_halves(anisotropy: float, coupling: float, left: State, right: State) -> tuple[float, float]:
+    mesh = _step_mesh(anisotropy, coupling, -2)
+    return light_cone_of_halves(mesh, thermal_on_mesh(mesh, left), thermal_on_mesh(mesh, right))
+
+
+def _on_rays(mesh: RapidityMesh, left: State, right: State, middle: State, rays: Reals) -> Reals:
+    """Return averages (ray, observable); at rays that are not numbers those of the state `middle`."""
+    result = np.empty((rays.size, len(OBSERVABLES)))
+    at_joint = np.isnan(rays)
+    result[at_joint] = uniform_averages(mesh, thermal_on_mesh(mesh, middle))
+    halves = thermal_on_mesh(mesh, left), thermal_on_mesh(mesh, right)
+    result[~at_joint] = join_halves(mesh, *halves, rays=rays[~at_joint])
+    return result
 
 
 def predict_smooth(
@@ -119,10 +126,10 @@ def predict_smooth(
     beta, beta_field : functions of position (any shape) in the chain
     times : (time,) in 1/J, not negative, ascending; sites, bonds : (site,), (bond,) positions, symmetric
     The light cone holds the extreme velocities of the initial profile.
-    Raises UnsupportedAnisotropy (a ValueError), ConvergenceError, and InputError for a profile that changes
-    within less than NARROWEST_SCALE.
+    Raises ConvergenceError, and InputError where |D| is not below 1 or too near to it, and for a profile that
+    changes within less than NARROWEST_SCALE.
     """
-    start = SmoothStart(anisotropy, coupling, beta, beta_field, wall=_wall(sites))
+    start = SmoothStart(anisotropy, coupling, beta, beta_field, wall=wall_of(sites))
     if start.is_uniform:
         state = start.ranges[0][0], start.ranges[1][0]
         return predict_step(
@@ -137,57 +144,52 @@ def predict_smooth(
         subject = "prediction"
         raise InputError(subject, [problem])
     places = np.concatenate([sites, bonds])
-    refined = refine(
-        lambda level, some: smooth_averages(start, SMOOTH_LEVELS[level], some, places),
-        times,
-        levels=len(SMOOTH_LEVELS),
-        target=SMOOTH_TARGET,
-        floor=SMOOTH_FLOOR,
-        least_gain=SMOOTH_GAIN,
-    )
-    return _prediction(refined, sites.size, initial_light_cone(start), "characteristics", SMOOTH_REFERENCES)
+    way = between(anisotropy)
 
-
-def _rays(places: Reals, times: Reals, *, uniform: bool) -> Reals:
-    """Return x/t (time, place); at t = 0 infinite, and not a number at the joint."""
-    if uniform:
-        rays = np.full((times.size, places.size), np.inf)
-        rays[np.ix_(times == 0.0, places == 0.0)] = np.nan
-        return rays
-    with np.errstate(divide="ignore", invalid="ignore"):
-        return np.asarray((places / times[:, None]).round(RAY_DECIMALS))
-
-
-def _wall(sites: Reals) -> float:
-    """Return where quasiparticles turn: free modes of an open chain vanish one site beyond its ends."""
-    return float(sites[-1]) + 1.0
-
-
-def _refuse_reflection(edges: tuple[float, float], times: Reals, sites: Reals) -> None:
-    arrival = _wall(sites) / max(-edges[0], edges[1])
-    if times.max(initial=0.0) > arrival:
-        problem = (
-            f"[evolution] until = {times.max():g}: light (velocities {edges[0]:.4g}, {edges[1]:.4g}) reaches "
-            f"the ends at t = {arrival:.4g}; the solution for two joined halves is that of an infinite "
-            "chain. Stop earlier, take more sites, or give the step a width"
+    def refined(value: float) -> Refined:
+        here = replace(start, anisotropy=value)
+        return refine(
+            lambda level, some: smooth_averages(here, SMOOTH_LEVELS[level], some, places),
+            times,
+            levels=len(SMOOTH_LEVELS),
+            target=SMOOTH_TARGET,
+            floor=SMOOTH_FLOOR,
+            least_gain=SMOOTH_GAIN,
         )
-        subject = "prediction"
-        raise InputError(subject, [problem])
+
+    edges = _combined_edges(way, lambda value: initial_light_cone(replace(start, anisotropy=value)))
+    return _prediction(way, refined, sites.size, edges, "characteristics", SMOOTH_REFERENCES)
+
+
+def _combined_edges(way: Between, edges: Callable[[float], tuple[float, float]]) -> tuple[float, float]:
+    values = [np.array(edges(value)) for value in way.anisotropies]
+    first, last = way.combine(values, spin=False)[0].tolist()
+    return first, last
 
 
 def _prediction(
-    refined: Refined, sites: int, light_cone: tuple[float, float], method: str, references: tuple[str, ...]
+    way: Between,
+    refined: Callable[[float], Refined],
+    sites: int,
+    light_cone: tuple[float, float],
+    method: str,
+    references: tuple[str, ...],
 ) -> Prediction:
-    """Sort values (time, site or bond, observable) into the observables' places.
+    """Combine anisotropies; sort values (time, site or bond, observable) into the observables' places.
 
-    A change under refinement may vanish by chance at a place: its error is the largest among its neighbours.
+    A difference may vanish by chance at a place: an error is the largest among its neighbours.
     """
-    fields, errors = {}, {}
+    solved = [refined(value) for value in way.anisotropies]
+    fields: dict[str, Reals] = {}
+    grid: dict[str, Reals] = {}
+    strings: dict[str, Reals] = {}
     for index, name in enumerate(OBSERVABLES):
         part = slice(None, sites) if OBSERVABLE_PLACES[name] == "site" else slice(sites, None)
-        fields[name] = refined.values[:, part, index].copy()
-        errors[name] = maximum_filter1d(refined.errors[:, part, index], size=3, axis=1)
-    for each in (fields, errors):
+        spin = name.startswith("charge")
+        fields[name], cost = way.combine([each.values[:, part, index] for each in solved], spin=spin)
+        bound = way.bound([each.errors[:, part, index] for each in solved], spin=spin)
+        strings[name] = maximum_filter1d(cost, size=STRINGS_NEIGHBOURS, axis=1)
+        grid[name] = maximum_filter1d(bound, size=3, axis=1)
+    for each in (fields, grid, strings):
         each["energy_current"][:, [0, -1]] = 0.0  # no bond beyond the end sites to carry energy
-    exact = {name: np.zeros_like(values) for name, values in fields.items()}
-    return Prediction(fields, errors, exact, light_cone, method, references)
+    return Prediction(fields, grid, strings, light_cone, method, references)

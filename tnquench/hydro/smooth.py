@@ -8,9 +8,10 @@ from functools import cached_property
 
 import numpy as np
 
+from tnquench.bethe.angles import rational_turn
 from tnquench.bethe.model import xxz_model
 from tnquench.bethe.states import effective_velocity, thermal_filling
-from tnquench.bethe.strings import supported_nu
+from tnquench.bethe.strings import string_table
 from tnquench.conventions import Reals
 from tnquench.hydro.characteristics import Flow, flow_to, local_equilibrium, prepare_flow
 from tnquench.hydro.counting import resample
@@ -101,6 +102,11 @@ class SmoothStart:
         )
         return float(np.min(change[varying] / steepest[varying]))
 
+    @property
+    def finest_angle(self) -> float:
+        """The unit of mesh spacings."""
+        return string_table(rational_turn(self.anisotropy)).finest_angle
+
     @cached_property
     def velocity_survey(self) -> tuple[float, float]:
         """Greatest |v_eff| of the corners of the parameter ranges, and its greatest slope in rapidity."""
@@ -141,8 +147,8 @@ def _flow(start: SmoothStart, level: SmoothLevel, *, until: float) -> Flow:
     fastest, steepest = start.velocity_survey
     core_spacing = np.inf
     if until > 0.0:
-        meeting = start.scale / (steepest * until) / (np.pi / supported_nu(start.anisotropy))
-        core_spacing = level.phase * meeting
+        meeting = start.scale / (steepest * until)
+        core_spacing = level.phase * meeting / start.finest_angle
     mesh = rapidity_mesh(
         anisotropy=start.anisotropy,
         coupling=start.coupling,
