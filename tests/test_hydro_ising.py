@@ -45,7 +45,8 @@ def test_a_uniform_chain_stays_in_equilibrium(coupling: float, field: float) -> 
     beta = 0.8
 
     def energy(k: float) -> float:
-        return 2.0 * np.sqrt(max(coupling**2 + field**2 + 2.0 * coupling * field * np.cos(k), 1e-30))
+        square = coupling**2 + field**2 + 2.0 * coupling * field * np.cos(k)
+        return 2.0 * float(np.sqrt(max(square, 1e-30)))
 
     expected = -mean(lambda k: 0.5 * energy(k) * np.tanh(0.5 * beta * energy(k)))
     along = mean(lambda k: 2.0 * (field + coupling * np.cos(k)) / energy(k) * np.tanh(0.5 * beta * energy(k)))
@@ -125,7 +126,7 @@ def test_smooth_profiles_approach_the_exact_chain(field: float) -> None:
             coupling=1.0,
             transverse_field=field,
             beta=beta(bond_positions(sites)),
-            times=np.array([0.0, time]),
+            times=[0.0, time],
         )
         inner = slice(sites // 4, -sites // 4)
         distances.append(

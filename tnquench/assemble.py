@@ -30,7 +30,7 @@ __all__ = [
 ]
 
 #: Error allowed in the start: this fraction of sqrt(discarded weight), the norm that one cut may lose.
-START_SHARE = 0.03
+START_SHARE = 0.1
 
 #: The coarser companion needs a step to double: a main run takes at least so many in each interval.
 FEWEST_STEPS = 2

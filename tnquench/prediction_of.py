@@ -8,7 +8,6 @@ from dataclasses import dataclass, replace
 
 import numpy as np
 
-from tnquench.bethe.strings import UnsupportedAnisotropy, supported_nu
 from tnquench.config.schema import Config
 from tnquench.conventions import Reals, bond_positions, site_positions
 from tnquench.errors import ConvergenceError, InputError
@@ -82,12 +81,7 @@ def no_prediction(config: Config) -> str:
     if "euler" not in config.hydrodynamics.levels:
         return "no hydrodynamic level was asked for"
     if config.chain.model == "hubbard":
-        return "there is no hydrodynamic prediction for hubbard in this version: the chain stands alone"
-    if config.chain.model != "ising":
-        try:
-            supported_nu(_as_xxz(config)[1])
-        except UnsupportedAnisotropy as refusal:
-            return str(refusal)
+        return "there is no hydrodynamic prediction for the Hubbard chain in this version"
     if config.chain.sites < FEWEST_PREDICTED:
         return (
             f"{config.chain.sites} sites are no hydrodynamic system; predictions begin at {FEWEST_PREDICTED}"

@@ -8,6 +8,7 @@ import numpy as np
 
 from tnquench.bethe.angles import anisotropy_of, is_rational, rational_turn, require_gapless
 from tnquench.bethe.free import free_thermodynamics
+from tnquench.bethe.functions import ERROR_TARGET, refined_functions
 from tnquench.bethe.gapped import gapped_equilibrium
 from tnquench.bethe.grid import RapidityGrid, interpolate, rapidity_grid
 from tnquench.bethe.interpolated import interpolate_in_anisotropy
@@ -22,24 +23,11 @@ __all__ = ["KEYS", "Equilibrium", "equilibrium", "string_thermodynamics"]
 NODE_LADDER = (32, 48, 72, 108, 162, 243)
 MOMENTUM_LADDER = tuple(2**power for power in range(6, 17))
 
-#: Refinement stops when every error is below this fraction of the value's scale.
-ERROR_TARGET = 1e-12
-
 #: Interpolation between anisotropies stops at this fraction.
 INTERPOLATION_TARGET = 1e-8
 
 #: ... and the values that it goes through are refined to this one.
 NODE_TARGET = 1e-10
-
-#: Rounding, as a fraction of the value's scale: the smallest error ever claimed (a few times the scatter
-#: between fine grids).
-ROUNDING = 5e-14
-
-#: The error of the finest resolution is at least this part of its distance from the last but one.
-LEAST_RATIO = 0.1
-
-#: Keeps ratios of vanishing movements finite.
-TINY = 1e-300
 
 #: Relative change of a value with D that is allowed for where D is rounded to a rational anisotropy.
 OFFSET_COST = 3.0
@@ -80,11 +68,19 @@ def _gapless(
     def solve_free(momenta: int) -> dict[str, float]:
         return free_thermodynamics(beta=beta, field=field, coupling=coupling, momenta=momenta)
 
+    def refined(
+        solve: Callable[[int], dict[str, float]], ladder: tuple[int, ...], target: float
+    ) -> tuple[dict[str, float], dict[str, float]]:
+        found = refined_functions(
+            solve, ladder, lambda key, value: scales.get(key, abs(value)), target=target
+        )
+        return dict(found.values), dict(found.errors)
+
     def at_rational(value: float, target: float = NODE_TARGET) -> tuple[dict[str, float], dict[str, float]]:
         if value == 0.0:
-            return _refine(solve_free, MOMENTUM_LADDER, scales)
+            return refined(solve_free, MOMENTUM_LADDER, ERROR_TARGET)
         solve = _string_solver(anisotropy=value, beta=beta, field=field, coupling=coupling)
-        return _refine(solve, NODE_LADDER, scales, target=target)
+        return refined(solve, NODE_LADDER, target)
 
     if is_rational(anisotropy):
         exact = anisotropy_of(rational_turn(anisotropy), negative=anisotropy < 0.0)
@@ -145,30 +141,3 @@ def _string_solver(
         return _functions(model, state, beta=beta, field=field)
 
     return solve
-
-
-def _refine(
-    solve: Callable[[int], dict[str, float]],
-    ladder: tuple[int, ...],
-    scales: dict[str, float],
-    *,
-    target: float = ERROR_TARGET,
-) -> tuple[dict[str, float], dict[str, float]]:
-    """Return values and errors, refining until the errors are small.
-
-    Convergence is exponential, so the last movement is the error of the last resolution but one. The error of
-    the last is smaller by the slowest observed ratio of movements; less than LEAST_RATIO of the movement is
-    never claimed, nor less than rounding.
-    """
-    values, moved = solve(ladder[0]), dict.fromkeys(KEYS, np.inf)
-    errors = dict.fromkeys(KEYS, np.inf)
-    for resolution in ladder[1:]:
-        coarse, values, before = values, solve(resolution), moved
-        moved = {key: abs(values[key] - coarse[key]) for key in KEYS}
-        sizes = {key: scales.get(key, abs(values[key])) for key in KEYS}
-        ratio = max(moved[key] / max(before[key], ROUNDING * sizes[key], TINY) for key in KEYS)
-        ratio = min(1.0, max(ratio, LEAST_RATIO))
-        errors = {key: ratio * moved[key] + ROUNDING * sizes[key] for key in KEYS}
-        if all(errors[key] <= target * sizes[key] for key in KEYS):
-            break
-    return values, errors

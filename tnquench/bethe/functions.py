@@ -36,14 +36,15 @@ class ThermodynamicFunctions:
 def refined_functions(
     solve: Callable[[int], dict[str, float]],
     ladder: Sequence[int],
-    scales: Mapping[str, float],
+    size: Callable[[str, float], float],
     *,
     target: float = ERROR_TARGET,
+    rounding: float = ROUNDING,
 ) -> ThermodynamicFunctions:
     """Return values at the first resolution of `ladder` whose errors are small, or at the last.
 
-    solve : maps a resolution to values by name; scales : sizes to which errors are compared, those of the
-    values where none is given
+    solve : maps a resolution to values by name; size : maps a name and its value to what errors are compared
+    to; target, rounding : as fractions of it
     Convergence is exponential, so the last movement is the error of the last resolution but one. The error of
     the last is smaller by the slowest observed ratio of movements; less than LEAST_RATIO of the movement is
     never claimed, nor less than rounding.
@@ -54,10 +55,10 @@ def refined_functions(
     for resolution in ladder[1:]:
         coarse, values, before = values, solve(resolution), moved
         moved = {key: abs(values[key] - coarse[key]) for key in values}
-        sizes = {key: scales.get(key, abs(values[key])) for key in values}
-        ratio = max(moved[key] / max(before[key], ROUNDING * sizes[key], TINY) for key in values)
+        sizes = {key: size(key, values[key]) for key in values}
+        ratio = max(moved[key] / max(before[key], rounding * sizes[key], TINY) for key in values)
         ratio = min(1.0, max(ratio, LEAST_RATIO))
-        errors = {key: ratio * moved[key] + ROUNDING * sizes[key] for key in values}
+        errors = {key: ratio * moved[key] + rounding * sizes[key] for key in values}
         if all(errors[key] <= target * sizes[key] for key in values):
             break
     return ThermodynamicFunctions(values, errors)

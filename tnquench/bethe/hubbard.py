@@ -7,6 +7,7 @@ from dataclasses import asdict, dataclass
 
 import numpy as np
 
+from tnquench.bethe.functions import refined_functions
 from tnquench.bethe.hubbard_equations import hubbard_equations
 from tnquench.bethe.hubbard_free import free_hubbard
 from tnquench.bethe.hubbard_state import Fields, HubbardState, solve_state
@@ -22,8 +23,8 @@ ERROR_TARGET = 1e-11
 #: Rounding, as a fraction of the value's scale: the smallest error ever claimed.
 ROUNDING = 1e-13
 
-#: The error of the finest resolution is at least this part of its distance from the last but one.
-LEAST_RATIO = 0.1
+#: Size to which errors of variances are compared, beside their own.
+LEAST_SCALE = 0.01
 
 #: States whose free energy is not known to this fraction of its scale are refused.
 ERROR_LIMIT = 1e-5
@@ -180,7 +181,7 @@ def _refine(
             values["double_occupancy"] -= 0.5 * (values["density"] - 1.0) + 0.25
             return values
 
-        return _climb(solve_free, MOMENTUM_LADDER, scales)
+        return _refined(solve_free, MOMENTUM_LADDER, scales)
     states: list[HubbardState] = []
 
     def solve(nodes: int) -> dict[str, float]:
@@ -189,29 +190,20 @@ def _refine(
         states.append(solve_state(equations, Fields(beta, 0.5 * beta * field, beta * mu), start))
         return thermodynamics(states[0])
 
-    return _climb(solve, NODE_LADDER, scales)
+    return _refined(solve, NODE_LADDER, scales)
 
 
-def _climb(
+def _refined(
     solve: Callable[[int], dict[str, float]], ladder: tuple[int, ...], scales: dict[str, float]
 ) -> tuple[dict[str, float], dict[str, float]]:
-    """Return values and errors of the finest resolution needed.
-
-    The last movement is the error of the last resolution but one; that of the last is smaller by the slowest
-    observed ratio of movements, never by more than LEAST_RATIO, and never below rounding.
-    """
-    values, moved = solve(ladder[0]), dict.fromkeys(KEYS, np.inf)
-    errors = dict.fromkeys(KEYS, np.inf)
-    for resolution in ladder[1:]:
-        coarse, values, before = values, solve(resolution), moved
-        moved = {key: abs(values[key] - coarse[key]) for key in KEYS}
-        floors = {key: ROUNDING * (scales.get(key, 0.01) + abs(values[key])) for key in KEYS}
-        ratio = max(moved[key] / max(before[key], floors[key]) for key in KEYS)
-        ratio = min(1.0, max(ratio, LEAST_RATIO))
-        errors = {key: ratio * moved[key] + floors[key] for key in KEYS}
-        if all(errors[key] <= ERROR_TARGET / ROUNDING * floors[key] for key in KEYS):
-            break
-    return values, errors
+    found = refined_functions(
+        solve,
+        ladder,
+        lambda key, value: scales.get(key, LEAST_SCALE) + abs(value),
+        target=ERROR_TARGET,
+        rounding=ROUNDING,
+    )
+    return dict(found.values), dict(found.errors)
 
 
 def _exchange_spin_and_charge(values: dict[str, float], errors: dict[str, float]) -> None:

@@ -13,19 +13,12 @@ from functools import cached_property, lru_cache
 
 import numpy as np
 
-from tnquench.bethe.angles import UnsupportedAnisotropy, continued_fraction, require_gapless
+from tnquench.bethe.angles import continued_fraction
 from tnquench.conventions import Integers, Reals
-
-__all__ = ["StringTable", "UnsupportedAnisotropy", "string_table", "supported_nu"]
 
 #: A basic function a_n^v depends on n g modulo 2 pi alone: it is named by its residue r, -q < r < q, with
 #: a = sin(w) / (cosh 2x - cos w) / pi, w = pi r/q. Residue 0 is the function that vanishes.
 Residue = int
-
-
-def supported_nu(anisotropy: float) -> None:
-    """Raise UnsupportedAnisotropy unless -1 < D < 1: the former name of `angles.require_gapless`."""
-    require_gapless(anisotropy)
 
 
 @dataclass(frozen=True)

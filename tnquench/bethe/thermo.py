@@ -13,11 +13,13 @@ from dataclasses import dataclass
 from tnquench.bethe.equilibrium import equilibrium
 from tnquench.bethe.free import ising_thermodynamics
 from tnquench.bethe.functions import ThermodynamicFunctions, refined_functions
-from tnquench.bethe.gapped import gapped_equilibrium
 from tnquench.bethe.hubbard import hubbard_equilibrium
 
 #: Equidistant momenta of successive refinements of free modes.
 MOMENTUM_LADDER = tuple(2**power for power in range(6, 17))
+
+#: Least size to which errors are compared.
+SMALL = 1e-3
 
 
 @dataclass(frozen=True)
@@ -49,8 +51,8 @@ def _split(numbers: Mapping[str, float]) -> ThermodynamicFunctions:
 
 
 def _xxz(*, beta: float, anisotropy: float, coupling: float, field: float) -> ThermodynamicFunctions:
-    solve = gapped_equilibrium if abs(anisotropy) >= 1.0 else equilibrium
-    return _split(solve(anisotropy=anisotropy, beta=beta, field=field, coupling=coupling).as_dict())
+    found = equilibrium(anisotropy=anisotropy, beta=beta, field=field, coupling=coupling)
+    return _split(found.as_dict())
 
 
 def _fermion(*, beta: float, repulsion: float, hopping: float, mu: float) -> ThermodynamicFunctions:
@@ -69,17 +71,13 @@ _AS_FERMIONS = {"magnetisation": "density"}
 
 def _ising(*, beta: float, transverse_field: float, coupling: float) -> ThermodynamicFunctions:
     energy = coupling + abs(transverse_field)
+    scales = {"free_energy": energy + 1.0 / beta, "energy": energy, "entropy": 1.0 + beta * energy}
     return refined_functions(
         lambda momenta: ising_thermodynamics(
             beta=beta, transverse_field=transverse_field, coupling=coupling, momenta=momenta
         ),
         MOMENTUM_LADDER,
-        {
-            "free_energy": energy + 1.0 / beta,
-            "energy": energy,
-            "entropy": 1.0 + beta * energy,
-            "magnetisation": 1.0,
-        },
+        lambda name, value: scales.get(name, abs(value) + SMALL),
     )
 
 
