@@ -23,7 +23,8 @@ import typer
 from threadpoolctl import threadpool_limits
 
 from tnquench.assemble import no_prediction
-from tnquench.bethe.thermo import THERMO_MODELS
+from tnquench.bethe.thermo import THERMO_MODELS, thermo
+from tnquench.bethe.transport import transport
 from tnquench.config.document import effective_toml, settings_page
 from tnquench.config.load import load_config
 from tnquench.dataset.integrity import check_run
@@ -32,6 +33,7 @@ from tnquench.report.page import write_report
 from tnquench.run import forecast, hydro, run
 from tnquench.terminal.cost import cost_numbers, cost_rows
 from tnquench.terminal.display import watching
+from tnquench.terminal.judging import judge_command
 from tnquench.terminal.summary import show_findings
 from tnquench.terminal.table import aligned, equilibrium_rows
 from tnquench.terminal.thermo import Scan, answer_thermo, plot_scan, scan_rows
@@ -152,6 +154,9 @@ def thermo_command(
     repulsion: Annotated[Scan | None, _setting("V (fermion), U (hubbard).")] = None,
     field: Annotated[Scan | None, _setting("h of exp[-beta (H - h S^z)] (xxz, hubbard).")] = None,
     mu: Annotated[Scan | None, _setting("mu of exp[-beta (H - mu N)] (fermion, hubbard).")] = None,
+    wants_transport: Annotated[
+        bool, typer.Option("--transport", help="Light cone, covariances and Drude weights instead.")
+    ] = False,
     as_json: AsJson = False,
     plot: Annotated[
         Path | None, typer.Option(metavar="FILE", help="Save a plot of a scan: svg, pdf or png.")
@@ -169,7 +174,7 @@ def thermo_command(
         "hopping": hopping, "repulsion": repulsion, "field": field, "mu": mu,
     }  # fmt: skip
     with threadpool_limits(1):
-        found = answer_thermo(model, options)
+        found = answer_thermo(model, options, solve=transport if wants_transport else thermo)
     if plot is not None:
         plot_scan(found, plot)
     for failure in found.failures:
@@ -212,6 +217,11 @@ def report_command(
         watch.stage("report", None)
         page = write_report(dataset)
     typer.echo(str(page))
+
+
+app.command("judge", epilog=f"Example: {PROGRAM} judge ghd.csv --against results/demo --allow euler")(
+    judge_command
+)
 
 
 @app.command("settings", epilog=f"Example: {PROGRAM} settings > settings.md")

@@ -36,6 +36,23 @@ def free_thermodynamics(*, beta: float, field: float, coupling: float, momenta: 
     }
 
 
+def ising_modes(*, transverse_field: float, coupling: float, momenta: int) -> tuple[Reals, Reals]:
+    """Return energies and velocities of equidistant modes, each (momenta,); the sign of g does not matter.
+
+    epsilon = 2 sqrt(J^2 + g^2 + 2 J |g| cos k), v = d epsilon/dk; a negative g only moves the momenta by pi.
+    """
+    wave, product = _waves(momenta), coupling * abs(transverse_field)
+    # J^2 + g^2 + 2 J g cos k without cancellation where the gap closes
+    square = (coupling - abs(transverse_field)) ** 2 + 2.0 * product * (1.0 + wave)
+    energy = 2.0 * np.sqrt(square)
+    return energy, -4.0 * product * np.sin(2.0 * np.pi * (np.arange(momenta) + 0.5) / momenta) / energy
+
+
+def _waves(momenta: int) -> Reals:
+    """Return cos k at equidistant k that avoid 0 and pi."""
+    return np.asarray(np.cos(2.0 * np.pi * (np.arange(momenta) + 0.5) / momenta))
+
+
 def ising_thermodynamics(
     *, beta: float, transverse_field: float, coupling: float, momenta: int
 ) -> dict[str, float]:
@@ -46,11 +63,9 @@ def ising_thermodynamics(
     momenta : number of equidistant k; every integrand is analytic in epsilon^2, so that convergence is
     exponential even where the gap closes
     """
-    wave = np.cos(2.0 * np.pi * (np.arange(momenta) + 0.5) / momenta)
-    strength = abs(transverse_field)  # its sign only moves the momenta by pi and turns the spins
-    # J^2 + g^2 + 2 J g cos k without cancellation where the gap closes
-    half = beta * np.sqrt((coupling - strength) ** 2 + 2.0 * coupling * strength * (1.0 + wave))
-    slope = strength + coupling * wave
+    energies, _ = ising_modes(transverse_field=transverse_field, coupling=coupling, momenta=momenta)
+    half = 0.5 * beta * energies
+    slope = abs(transverse_field) + coupling * _waves(momenta)
     log_partition = float(np.mean(np.logaddexp(half, -half)))
     energy = -float(np.mean(half * np.tanh(half))) / beta
     aligned = beta * float(np.mean(slope * _tanh_ratio(half)))

@@ -25,6 +25,9 @@ REFERENCES: dict[str, str] = {
     "composition methods, SIAM J. Sci. Comput. 16, 151 (1995).",
     "pfeuty_1970": "P. Pfeuty, The one-dimensional Ising model with a transverse field, Ann. Phys. 57, 79 "
     "(1970).",
+    "piroli_2017": "L. Piroli, J. De Nardis, M. Collura, B. Bertini and M. Fagotti, Transport in "
+    "out-of-equilibrium XXZ chains: nonballistic behavior and correlation functions, Phys. Rev. B 96, 115124 "
+    "(2017).",
     "strang_1968": "G. Strang, On the construction and comparison of difference schemes, SIAM J. Numer. "
     "Anal. 5, 506 "
     "(1968).",

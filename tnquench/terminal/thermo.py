@@ -3,7 +3,7 @@
 from __future__ import annotations
 
 import math
-from collections.abc import Mapping
+from collections.abc import Callable, Mapping
 from dataclasses import dataclass
 from pathlib import Path
 
@@ -95,10 +95,13 @@ class ThermoAnswer:
         }
 
 
-def answer_thermo(model: str, options: Mapping[str, Scan | None]) -> ThermoAnswer:
+def answer_thermo(
+    model: str, options: Mapping[str, Scan | None], *, solve: Callable[..., ThermodynamicFunctions] = thermo
+) -> ThermoAnswer:
     """Solve one point, or every point of the option that is a scan.
 
     options : beta and all settings of any model by name, None where not given
+    solve : `thermo` or `transport`
     Raises InputError with one line per problem, ConvergenceError if no point at all has an answer.
     """
     given = {name: scan for name, scan in options.items() if scan is not None}
@@ -112,7 +115,7 @@ def answer_thermo(model: str, options: Mapping[str, Scan | None]) -> ThermoAnswe
     for point in points:
         settings = {**fixed, scanned: point} if scanned else fixed
         try:
-            functions.append(thermo(model, **settings))
+            functions.append(solve(model, **settings))
         except (ConvergenceError, InputError, ValueError) as failure:
             if not scanned:
                 raise _refusal(failure) from failure
