@@ -23,7 +23,7 @@ from tnquench.report.units import Units, units_of
 from tnquench.report.verdict import headline
 from tnquench.terminal.summary import findings
 
-REASON = "there is no hydrodynamic prediction for hubbard in this version"
+REASON = "there is no hydrodynamic prediction for the Hubbard chain in this version"
 
 Change = Callable[[dict[str, Any]], None]
 
@@ -120,7 +120,7 @@ def test_a_model_without_words_of_its_own_is_still_told() -> None:
 def test_without_a_prediction_the_verdict_says_so_and_gives_the_error(alone: tuple[Path, Page, Run]) -> None:
     folder, page, run = alone
     sentence = page.texts["verdict"].strip().splitlines()[0]
-    opening = "There is no hydrodynamic prediction for hubbard in this version. Here are the quantum side"
+    opening = "There is no hydrodynamic prediction for the Hubbard chain in this version. Here are the quantum side"
     assert sentence.startswith(opening)
     assert "mostly truncation" in sentence
     budget, x = run.budget["energy_density"], run.coordinates["bond"].values
