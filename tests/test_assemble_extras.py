@@ -95,7 +95,7 @@ def test_a_uniform_field_on_ising_shifts_the_transverse_field() -> None:
 def test_hubbard_stands_alone() -> None:
     config = config_of(start={"beta": STEP}, model="hubbard", repulsion=4.0, sites=8)
     assert build_prediction(config) == (None, no_prediction(config))
-    assert "no hydrodynamic prediction for hubbard" in no_prediction(config)
+    assert "no hydrodynamic prediction for the Hubbard chain" in no_prediction(config)
 
 
 def synthetic(sites: int) -> Prediction:
@@ -190,34 +190,34 @@ XXZ: dict[str, Any] = {"anisotropy": 0.5}
 ISING: dict[str, Any] = {"model": "ising", "transverse_field": 1.0}
 SENTENCES = [
     ({"kind": "next_nearest", "strength": 0.2}, XXZ,
-     "next_nearest acts and breaks integrability; the prediction is that of the xxz chain without it"),
+     "a next-nearest-neighbour coupling breaks integrability; the prediction is that of the xxz chain without it"),
     ({"kind": "staggered_field", "strength": 0.2, "in_start": False}, XXZ,
-     "staggered_field acts from t = 0 on and breaks integrability; the prediction is that of the xxz chain "
+     "a staggered field, absent from the start, breaks integrability; the prediction is that of the xxz chain "
      "without it"),
     ({"kind": "uniform_field", "strength": 0.2}, XXZ,
-     "uniform_field acts and commutes with the Hamiltonian, which stays integrable; the prediction contains "
+     "a uniform field commutes with the rest of the Hamiltonian and by itself breaks nothing; the prediction contains "
      "it exactly"),
     ({"kind": "potential", "shape": "harmonic", "strength": 0.2}, XXZ,
-     "potential (harmonic) acts and breaks integrability; the prediction is that of the xxz chain without "
+     "a harmonic potential breaks integrability; the prediction is that of the xxz chain without "
      "it, save that it is part of the energy and of the local state at t = 0; the force on the "
      "quasiparticles is left out"),
     ({"kind": "potential", "shape": "box", "strength": 0.2, "width": 4.0}, {"anisotropy": 0.0},
-     "potential (box) acts and leaves a chain of free fermions, but not a uniform one; the prediction is "
+     "a box potential by itself leaves a chain of free fermions, but not a uniform one; the prediction is "
      "that of the xxz chain without it"),
     ({"kind": "next_nearest", "strength": 0.2}, {"anisotropy": 0.0},
-     "next_nearest acts and breaks integrability; the prediction is that of the xxz chain without it"),
+     "a next-nearest-neighbour coupling breaks integrability; the prediction is that of the xxz chain without it"),
     ({"kind": "site_disorder", "strength": 0.2}, ISING,
-     "site_disorder acts and leaves a chain of free fermions, but not a uniform one; the prediction is that "
+     "disorder on the sites by itself leaves a chain of free fermions, but not a uniform one; the prediction is that "
      "of the ising chain without it"),
     ({"kind": "longitudinal_field", "strength": 0.2}, ISING,
-     "longitudinal_field acts and breaks integrability; the prediction is that of the ising chain without "
+     "a field along x breaks integrability; the prediction is that of the ising chain without "
      "it"),
     ({"kind": "uniform_field", "strength": 0.2}, ISING,
-     "uniform_field acts and only shifts the transverse field; the prediction contains it exactly"),
+     "a uniform field only shifts the transverse field; the prediction contains it exactly"),
     ({"kind": "uniform_field", "strength": 0.0}, XXZ,
-     "uniform_field acts and changes nothing, for its strength is zero; the prediction contains it exactly"),
+     "a uniform field changes nothing, for its strength is zero; the prediction contains it exactly"),
     ({"kind": "bond_disorder", "strength": 0.2}, {"model": "hubbard", "repulsion": 4.0},
-     "bond_disorder acts and breaks integrability"),
+     "disorder of the bonds breaks integrability"),
 ]  # fmt: skip
 
 

@@ -140,6 +140,23 @@ def test_smooth_profiles_approach_the_exact_chain(field: float) -> None:
     assert np.max(distances[0]) < 0.02
 
 
+@pytest.mark.parametrize("field", [0.7, 1.0, -1.6])
+def test_modes_come_back_from_the_ends_in_time(field: float) -> None:
+    """A warm middle whose fastest modes have come back from the ends, against the exact chain."""
+    sites, time = 96, 36.0 / min(1.0, abs(field))
+
+    def beta(x: Reals) -> Reals:
+        return np.asarray(0.8 - 0.4 * np.exp(-0.5 * (x / 8.0) ** 2))
+
+    found = predict(field=field, beta=beta, times=[0.0, time], sites=sites, joined=False)
+    exact = ising_quench(
+        sites=sites, coupling=1.0, transverse_field=field, beta=beta(bond_positions(sites)), times=[0.0, time]
+    )
+    difference = (found.fields["energy_current"] - exact["energy_current"])[1, 8:-8]
+    largest = np.abs(exact["energy_current"][1, 8:-8]).max()
+    assert np.abs(difference).max() < 0.02 * largest
+
+
 def test_a_steep_tangent_approaches_the_step() -> None:
     """Two methods, one limit: the difference is of first order in the tangent's width."""
     sites = 61

@@ -120,7 +120,9 @@ def test_a_model_without_words_of_its_own_is_still_told() -> None:
 def test_without_a_prediction_the_verdict_says_so_and_gives_the_error(alone: tuple[Path, Page, Run]) -> None:
     folder, page, run = alone
     sentence = page.texts["verdict"].strip().splitlines()[0]
-    opening = "There is no hydrodynamic prediction for the Hubbard chain in this version. Here are the quantum side"
+    opening = (
+        "There is no hydrodynamic prediction for the Hubbard chain in this version. Here are the quantum side"
+    )
     assert sentence.startswith(opening)
     assert "mostly truncation" in sentence
     budget, x = run.budget["energy_density"], run.coordinates["bond"].values
@@ -187,7 +189,7 @@ def ising(tmp_path_factory: pytest.TempPathFactory) -> tuple[Page, Run]:
         in_config("[start.beta]", extra),
         event(
             "extra",
-            "longitudinal_field acts from t = 0 on and breaks integrability; the prediction is theirs",
+            "a field along x, absent from the start, breaks integrability; the prediction is theirs",
         ),
         model="ising",
         sites=24,
@@ -213,7 +215,7 @@ def test_what_is_not_predicted_has_an_error_and_no_deviation(ising: tuple[Page, 
 
 def test_extra_terms_stand_beside_the_verdict_and_in_the_question(ising: tuple[Page, Run]) -> None:
     page, run = ising
-    sentence = "Longitudinal field acts from t = 0 on and breaks integrability; the prediction is theirs."
+    sentence = "A field along x, absent from the start, breaks integrability; the prediction is theirs."
     assert sentence in page.texts["verdict"]
     assert page.texts["verdict"].count("breaks integrability") == 1
     assert ("p", {"class": "notice"}) in page.tags

@@ -112,12 +112,13 @@ def test_irrational_angles_answer_only_what_is_continuous() -> None:
         assert found.values[key] == pytest.approx(0.5 * (near[0][key] + near[1][key]), abs=1e-4)
 
 
-def test_transverse_field_chain_in_closed_form() -> None:
+@pytest.mark.parametrize("field", [-1.4, 0.6])
+def test_transverse_field_chain_in_closed_form(field: float) -> None:
     """int dk/2pi n(1 - n) v^2 epsilon^2; the fastest mode has 2 min(J, |g|).
 
     Source of the modes: P. Pfeuty, Ann. Phys. 57, 79 (1970).
     """
-    beta, field = 0.9, -1.4
+    beta = 0.9
 
     def energy(k: float) -> float:
         return float(2.0 * np.sqrt(1.0 + field**2 + 2.0 * field * np.cos(k)))
@@ -125,7 +126,7 @@ def test_transverse_field_chain_in_closed_form() -> None:
     found = transport("ising", transverse_field=field, beta=beta).values
     carried = mean(lambda k: (4.0 * field * np.sin(k)) ** 2 * 0.25 / np.cosh(0.5 * beta * energy(k)) ** 2)
     assert found["energy_drude_weight"] == pytest.approx(carried, abs=1e-11)
-    assert found["light_cone"] == pytest.approx(2.0, abs=1e-12)
+    assert found["light_cone"] == pytest.approx(2.0 * min(1.0, abs(field)), abs=1e-12)
 
 
 def test_command_prints_transport() -> None:

@@ -96,14 +96,25 @@ def budget_settings(config: Config, quench: Quench) -> RunSettings:
     )
 
 
+_EXTRA_NAMES = {
+    "staggered_field": "a staggered field",
+    "uniform_field": "a uniform field",
+    "longitudinal_field": "a field along x",
+    "next_nearest": "a next-nearest-neighbour coupling",
+    "bond_alternation": "an alternation of the bonds",
+    "bond_disorder": "disorder of the bonds",
+    "site_disorder": "disorder on the sites",
+}
+
+
 def extra_events(config: Config) -> list[dict[str, object]]:
     """Return one event for each extra term: what it does to integrability, and what the prediction has of
     it."""
     events: list[dict[str, object]] = []
     for extra in extra_terms(config):
-        name = f"{extra.kind} ({extra.shape})" if extra.shape else extra.kind
-        when = "" if extra.in_start else " from t = 0 on"
-        sentence = f"{name} acts{when} and {_effect(config, extra)}"
+        name = f"a {extra.shape} potential" if extra.shape else _EXTRA_NAMES[extra.kind]
+        when = "" if extra.in_start else ", absent from the start,"
+        sentence = f"{name}{when} {_effect(config, extra)}"
         if not no_prediction(config):
             sentence += f"; {_predicted(config, extra)}"
         events.append({"kind": "extra", "detail": sentence})
@@ -118,13 +129,13 @@ def _effect(config: Config, extra: ExtraTerm) -> str:
     if extra.kind == "uniform_field":
         if model == "ising":
             return "only shifts the transverse field"
-        return "commutes with the Hamiltonian, which stays integrable"
+        return "commutes with the rest of the Hamiltonian and by itself breaks nothing"
     free = model == "ising" or 0.0 in (
         config.chain.parameters.get("anisotropy"),
         config.chain.parameters.get("repulsion"),
     )
     if free and extra.kind in _ONE_BODY:
-        return "leaves a chain of free fermions, but not a uniform one"
+        return "by itself leaves a chain of free fermions, but not a uniform one"
     return "breaks integrability"
 
 

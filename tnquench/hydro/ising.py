@@ -218,11 +218,16 @@ def _smooth_averages(
     sites: Reals,
     momenta: int,
 ) -> Reals:
-    """Return averages (time, place, observable) of a smooth profile between two reflecting ends."""
-    wall = float(sites[-1]) + 1.0  # free modes of an open chain vanish one site beyond its ends
+    """Return averages (time, place, observable) of a smooth profile between two reflecting ends.
+
+    The modes of L sites obey L k + arg(exp(ik) + J/g) = n pi (Pfeuty 1970), so that a packet of momentum k
+    returns as if it had turned where L/2 is lengthened by half the derivative of that phase,
+    1/2 + 2 (g^2 - J^2)/epsilon^2.
+    """
     ends = np.array([0.0, np.pi])
     modes = modes_between(coupling, transverse_field, ends[:1], ends[1:], momenta)
     modes = Modes(*(each[0] for each in (modes.energy, modes.velocity, modes.response, modes.weights)))
+    wall = float(sites[-1]) + 0.75 + (transverse_field**2 - coupling**2) / modes.energy**2
     result = np.empty((times.size, places.size, len(OBSERVABLES)))
     together = max(1, BLOCK // modes.energy.size)
     for row, time in enumerate(times):
@@ -235,7 +240,7 @@ def _smooth_averages(
     return result
 
 
-def _folded(x: Reals, wall: float) -> Reals:
-    """Return positions of any shape folded into the chain by reflections at plus and minus `wall`."""
+def _folded(x: Reals, wall: Reals) -> Reals:
+    """Return positions (..., mode) folded into the chain by reflections at plus and minus `wall` (mode,)."""
     turned = np.mod(x + wall, 4.0 * wall)
     return np.asarray(np.minimum(turned, 4.0 * wall - turned) - wall)

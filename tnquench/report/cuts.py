@@ -104,7 +104,8 @@ def _values(axes: Axes, field: Comparison, index: int) -> None:
         theory = LEVEL_NAMES.get(field.level, field.level)
         axes.plot(x, field.prediction[index], color=PREDICTION, label=theory, zorder=2)
     axes.set_xlim(*reach(x[field.stretch]))
-    low, high = span(field.known[:, field.framed], margin=0.06)
+    drawn = [each[:, field.framed] for each in (field.quantum, field.prediction) if each is not None]
+    low, high = span(np.concatenate(drawn), margin=0.06)
     axes.set_ylim(low, high)
     unit = linear(axes.yaxis, max(abs(low), abs(high)), field.unit)
     axes.set_ylabel(field.axis_label(unit))

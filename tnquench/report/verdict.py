@@ -17,6 +17,8 @@ FIT_SAMPLES = 5
 EXPONENT_ERROR = 0.25
 #: Nor is one that differs by more than twice this between the early and the late half of the fit.
 SLOPE_SPREAD = 0.25
+#: A deviation that is there at t = 0 is told where it is at least this part of the last one.
+LARGE_PART = 0.3
 #: Exponents this small, uncertainty included, describe something that stays as it is.
 STEADY = 0.15
 
@@ -140,7 +142,19 @@ def _resolved(field: Comparison, place: int, resolved: Verdicts) -> str:
             f"{theory} gives the {said} {_at(field, place)} to within "
             f"{plain(field.resolve_at)} times the numerical error (deviation {at_place}, error {error})"
         )
-    return f"{opening}; {_history(field, place, resolved)}{_trend(field, resolved)}."
+    history, trend = _history(field, place, resolved), _trend(field, resolved)
+    return f"{opening}{_from_the_start(field, place)}; {history}{trend}."
+
+
+def _from_the_start(field: Comparison, place: int) -> str:
+    """Say how much of the deviation at a place is there at t = 0 already, if that is a large part of it."""
+    assert field.deviation is not None
+    if field.times[0] != 0.0:
+        return ""
+    first, last = float(field.deviation[0, place]), float(field.deviation[-1, place])
+    if first * last <= 0.0 or abs(first) < LARGE_PART * abs(last):
+        return ""
+    return f", of which {quantity(min(abs(first), abs(last)), field.unit)} are there at t = 0 already"
 
 
 def _history(field: Comparison, place: int, resolved: Verdicts) -> str:

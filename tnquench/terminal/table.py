@@ -12,6 +12,16 @@ EQUILIBRIUM_UNITS = {
     "energy": "{}",
     "susceptibility": "1/{}",
     "compressibility": "1/{}",
+    "light_cone": "{}",
+    "energy_variance": "{}^2",
+    "energy_spin_covariance": "{}",
+    "energy_particle_covariance": "{}",
+    "energy_drude_weight": "{}^4",
+    "energy_spin_drude_weight": "{}^3",
+    "energy_particle_drude_weight": "{}^3",
+    "spin_drude_weight": "{}^2",
+    "particle_drude_weight": "{}^2",
+    "spin_particle_drude_weight": "{}^2",
 }
 
 #: Most decimals shown: no double has more to tell.
