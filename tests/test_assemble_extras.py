@@ -190,12 +190,15 @@ XXZ: dict[str, Any] = {"anisotropy": 0.5}
 ISING: dict[str, Any] = {"model": "ising", "transverse_field": 1.0}
 SENTENCES = [
     ({"kind": "next_nearest", "strength": 0.2}, XXZ,
-     "a next-nearest-neighbour coupling breaks integrability; the prediction is that of the xxz chain without it"),
+     "a next-nearest-neighbour coupling breaks integrability; the prediction is that of the xxz "
+     "chain without it"),
     ({"kind": "staggered_field", "strength": 0.2, "in_start": False}, XXZ,
-     "a staggered field, absent from the start, breaks integrability; the prediction is that of the xxz chain "
+     "a staggered field, absent from the start, breaks integrability; the prediction is that of the "
+     "xxz chain "
      "without it"),
     ({"kind": "uniform_field", "strength": 0.2}, XXZ,
-     "a uniform field commutes with the rest of the Hamiltonian and by itself breaks nothing; the prediction contains "
+     "a uniform field commutes with the rest of the Hamiltonian and by itself breaks nothing; the "
+     "prediction contains "
      "it exactly"),
     ({"kind": "potential", "shape": "harmonic", "strength": 0.2}, XXZ,
      "a harmonic potential breaks integrability; the prediction is that of the xxz chain without "
@@ -205,9 +208,11 @@ SENTENCES = [
      "a box potential by itself leaves a chain of free fermions, but not a uniform one; the prediction is "
      "that of the xxz chain without it"),
     ({"kind": "next_nearest", "strength": 0.2}, {"anisotropy": 0.0},
-     "a next-nearest-neighbour coupling breaks integrability; the prediction is that of the xxz chain without it"),
+     "a next-nearest-neighbour coupling breaks integrability; the prediction is that of the xxz "
+     "chain without it"),
     ({"kind": "site_disorder", "strength": 0.2}, ISING,
-     "disorder on the sites by itself leaves a chain of free fermions, but not a uniform one; the prediction is that "
+     "disorder on the sites by itself leaves a chain of free fermions, but not a uniform one; the "
+     "prediction is that "
      "of the ising chain without it"),
     ({"kind": "longitudinal_field", "strength": 0.2}, ISING,
      "a field along x breaks integrability; the prediction is that of the ising chain without "

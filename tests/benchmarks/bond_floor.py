@@ -14,8 +14,8 @@ from threadpoolctl import threadpool_limits
 from tests.oracles.free_fermions import free_evolution
 from tnquench.conventions import bond_positions
 from tnquench.model.chain import start_terms
-from tnquench.model.spins import xxz_chain
 from tnquench.model.profiles import step
+from tnquench.model.spins import xxz_chain
 from tnquench.observables.quench import Quench, simulate
 
 SITES = 64

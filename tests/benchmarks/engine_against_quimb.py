@@ -26,9 +26,9 @@ from tnquench.evolution.preparation import prepare
 from tnquench.evolution.real_time import evolve
 from tnquench.evolution.trotter import SCHEMES
 from tnquench.model.chain import start_terms
-from tnquench.model.spins import xxz_chain
 from tnquench.model.grading import derive_grading
 from tnquench.model.profiles import step
+from tnquench.model.spins import xxz_chain
 from tnquench.observables.local import LocalObservables
 
 SITES, WEIGHT, TIME_STEP = 64, 1e-10, 0.1

@@ -46,7 +46,7 @@ def starts() -> None:
         )
         bond, seconds = start.state.bond_dimensions.max(), time.process_time() - began
         print(
-            f"{name}, beta {left:g} | {right:g}, distance {share * sqrt(weight):.0e} asked: {start.steps} steps, "
+            f"{name}, beta {left:g} | {right:g}, {share * sqrt(weight):.0e} asked: {start.steps} steps, "
             f"bond {bond}, {seconds:.1f} s, distance {start.distance:.1e}, reached: {start.reached}"
         )
 
