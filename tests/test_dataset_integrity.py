@@ -234,7 +234,7 @@ def test_a_fault_is_named_in_one_plain_line(copy: Path, fault: str) -> None:
 def test_a_newer_format_is_refused_by_name(copy: Path) -> None:
     with h5py.File(copy, "r+") as file:
         file["provenance"].attrs["format_version"] = 99
-    expected = "format version 99 is newer than 2, the newest this program reads"
+    expected = "format version 99 is newer than 3, the newest this program reads"
     assert check_run(copy) == [expected]
     with pytest.raises(InputError, match=expected):
         open_run(copy, verify=False)

@@ -50,7 +50,8 @@ def effective_toml(config: Config) -> str:
     """
     lines = [f"title = {written(config.title)}"]
     for name in SECTIONS:
-        lines += ["", *_table(name, getattr(config, name))]
+        table = list(_table(name, getattr(config, name)))
+        lines += ["", *table] if len(table) > 1 else []  # without any setting a section says nothing
     return "\n".join(lines) + "\n"
 
 

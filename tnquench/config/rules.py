@@ -8,6 +8,7 @@ from typing import Any
 from tnquench.config.chain_rules import Settings, Unusable, chain_conflicts, section_of
 from tnquench.config.energies import ENERGY_IN_WORDS, bond_energy
 from tnquench.config.notation import quantity, shown
+from tnquench.config.stretch import stretch_conflicts
 
 MOST_TIMES = 100_000
 MOST_STEPS = 10_000_000
@@ -28,7 +29,17 @@ def conflicts(settings: Settings) -> list[str]:
 
     settings : value or `Unusable` by dotted name, "section.key"; profiles as mappings of their own keys
     """
-    rules = (_weight_or_accuracy, _times, _steps, _gram_weight, _widths, _tables, _separate, _levels)
+    rules = (
+        _weight_or_accuracy,
+        _times,
+        _steps,
+        _gram_weight,
+        _widths,
+        _tables,
+        _separate,
+        _levels,
+        stretch_conflicts,
+    )
     return [*chain_conflicts(settings), *(problem for rule in rules for problem in rule(settings))]
 
 

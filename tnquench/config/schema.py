@@ -11,6 +11,7 @@ from tnquench.config.energies import bond_energy
 from tnquench.config.profile import Profile
 from tnquench.config.rules import conflicts, default_time_step
 from tnquench.config.setting import Section, setting
+from tnquench.config.stretch import Stretch
 
 
 class Start(Section):
@@ -24,7 +25,8 @@ class Start(Section):
 
     joint: Literal["coupled", "separate"] = setting(
         "coupled: every bond belongs to the start, the bond at x = 0 with the mean of both sides of a step; "
-        "separate: the bond at x = 0 is absent from it (steps and an even number of sites only)",
+        "separate: the bond at x = 0 is absent from it, with its half of the on-site terms of H on both its "
+        "sites (steps and an even number of sites only)",
         default="coupled",
     )
     beta: Profile = setting("inverse temperature, one value a bond", unit="1/J")
@@ -144,6 +146,7 @@ class Config(Section):
     evolution: Evolution
     hydrodynamics: Hydrodynamics = Hydrodynamics()
     budget: Budget = Budget()
+    stretch: Stretch = Stretch()
 
     @model_validator(mode="after")
     def _settle(self) -> Self:
@@ -169,6 +172,7 @@ SECTIONS: dict[str, type[Section]] = {
     "evolution": Evolution,
     "hydrodynamics": Hydrodynamics,
     "budget": Budget,
+    "stretch": Stretch,
 }
 
 #: Settings of `[start]` that are profiles, tables with settings of their own.
