@@ -40,7 +40,7 @@ def test_run_tells_each_stage_in_one_line_and_then_the_verdict(finished: tuple[P
     _, answer = finished
     expected = ["prediction", "main run: 8 sites, t up to 0.5, discarded weight 1e-8, step 0.1667"]
     expected += [f"companion {name}" for name in ("weight_10", "weight_100", "step_2", "length")]
-    expected += ["budget, dataset and report"]
+    expected += ["budget and dataset", "report"]
     assert answer.lines[: len(expected)] == expected
     assert "energy density" in answer.lines[len(expected)]
 

@@ -30,9 +30,12 @@ RANKS = {
     "prediction_of": 8,
     "assemble": 9,
     "outcome": 10,
-    "run": 11,
-    "terminal": 12,
-    "cli": 13,
+    "stretch_of": 11,
+    "side_by_side": 11,
+    "run": 12,
+    "refine": 13,
+    "terminal": 14,
+    "cli": 15,
 }
 
 #: What the report may see: files, and the budget's norms and windows; any report can be rebuilt from its

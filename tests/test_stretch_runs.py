@@ -5,6 +5,7 @@ from __future__ import annotations
 import re
 import shutil
 from pathlib import Path
+from typing import Any
 
 import numpy as np
 import pytest
@@ -73,7 +74,7 @@ def test_the_study_is_made_of_the_datasets(family):
         norms = study[f"{name}_euler_deviation"].sel(norm="maximum").values
         edge = 3.0 if name == "energy_density" else 3.5  # four spacings from the ends of the smaller chain
         for row, factor, dataset in zip(norms, (1.0, 2.0), (main, other), strict=True):
-            deviation = np.abs(dataset.budget[name]["euler_deviation"])
+            deviation: Any = np.abs(dataset.budget[name]["euler_deviation"])
             inner = np.abs(dataset.coordinates[deviation.dims[1]].values) <= factor * edge
             np.testing.assert_allclose(row, deviation.values[:, inner].max(axis=1), rtol=1e-12)
         whole = study[f"{name}_euler_window_deviation"].sel(norm="maximum", window="whole").values

@@ -30,10 +30,11 @@ from tnquench.config.load import load_config
 from tnquench.dataset.integrity import check_run
 from tnquench.errors import TnquenchError, VerdictNegative
 from tnquench.report.page import write_report
-from tnquench.run import forecast, hydro, run
-from tnquench.terminal.cost import cost_numbers, cost_rows
+from tnquench.run import forecast, forecast_stretched, hydro, run
+from tnquench.terminal.cost import cost_numbers, cost_rows, with_study
 from tnquench.terminal.display import watching
 from tnquench.terminal.judging import judge_command
+from tnquench.terminal.refining import refine_command
 from tnquench.terminal.summary import show_findings
 from tnquench.terminal.table import aligned, equilibrium_rows
 from tnquench.terminal.thermo import Scan, answer_thermo, plot_scan, scan_rows
@@ -125,7 +126,12 @@ def forecast_command(config: ConfigFile, threads: Threads = None, as_json: AsJso
     with watching() as watch:
         watch.stage("pilot runs", None)
         settings, quench, estimate = forecast(config)
-    numbers = cost_numbers(settings, quench, estimate, threads=threads or usable_cores())
+        stretched = forecast_stretched(settings)
+    cores = threads or usable_cores()
+    numbers = with_study(
+        cost_numbers(settings, quench, estimate, threads=cores),
+        {factor: cost_numbers(*costs, threads=cores) for factor, costs in stretched.items()},
+    )
     typer.echo(_as_json(numbers) if as_json else aligned(list(cost_rows(numbers))))
 
 
@@ -222,6 +228,9 @@ def report_command(
 app.command("judge", epilog=f"Example: {PROGRAM} judge ghd.csv --against results/demo --allow euler")(
     judge_command
 )
+
+
+app.command("refine", epilog=f"Example: {PROGRAM} refine results/demo --weight 1e-9")(refine_command)
 
 
 @app.command("settings", epilog=f"Example: {PROGRAM} settings > settings.md")

@@ -46,6 +46,22 @@ ERROR_SOURCES: tuple[str, ...] = (
     "initial_gradient",
 )
 
+#: Norms of a deviation over the light-cone window that the stretch study follows.
+STRETCH_NORMS: tuple[str, ...] = ("rms", "maximum")
+
+#: What the exponent p of deviation ~ stretch^-p may mean: no verdict; p = 0 or less; between 0 and 1; 1;
+#: between 1 and 2; 2; more; or several of these within the uncertainty.
+STRETCH_FINDINGS: tuple[str, ...] = (
+    "unresolved",
+    "not_falling",
+    "slower",
+    "first_order",
+    "between",
+    "second_order",
+    "faster",
+    "undecided",
+)
+
 #: Sources that are physics rather than numerics: reported apart, never summed into the numerical error.
 PHYSICAL_SOURCES: frozenset[str] = frozenset({"initial_gradient"})
 

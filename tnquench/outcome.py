@@ -6,6 +6,7 @@ import os
 import platform
 import resource
 import sys
+from collections.abc import Mapping
 from dataclasses import dataclass, field
 from datetime import UTC, datetime
 from importlib.metadata import PackageNotFoundError, version
@@ -15,7 +16,10 @@ from typing import Any
 import numpy as np
 
 from tnquench.assemble import budget_settings, extra_events, sample_times, start_reach
-from tnquench.budget.assess import PredictedLevel, assess
+from tnquench.budget.advice import advise
+from tnquench.budget.assess import PredictedLevel, RunSettings, assess
+from tnquench.budget.bounds import state_numbers
+from tnquench.budget.companions import CompanionRun
 from tnquench.budget.verdict import SHARP_REACH, SOURCE_KINDS, ObservableBudget
 from tnquench.config.document import effective_toml
 from tnquench.config.schema import Config
@@ -29,19 +33,31 @@ PACKAGES = ("tnquench", "numpy", "scipy", "quimb", "h5py", "h5netcdf", "xarray",
 
 @dataclass(frozen=True)
 class QuantumSide:
-    """The main run and its companions with their settings, and events of the choice of settings."""
+    """The main run and its companions with their settings, and events of the choice of settings.
+
+    failures : events of companions that failed; state_distance : norm of the difference of the last states of
+    the main run and of the companion at ten times its weight, nan where it is not known
+    settings : what the budget must know, if it does not follow from the quench
+    """
 
     quench: Quench
     main: QuantumRecord
     companion_quenches: dict[str, Quench]
-    companions: dict[str, QuantumRecord]
+    companions: Mapping[str, CompanionRun]
     in_processes: bool = False
     events: tuple[dict[str, object], ...] = ()
+    failures: tuple[dict[str, object], ...] = ()
+    state_distance: float = float("nan")
+    settings: RunSettings | None = None
 
     @property
     def cpu_elsewhere(self) -> float:
         """Processor time of the companions that ran in processes of their own."""
-        return sum(record.cpu_seconds for record in self.companions.values()) if self.in_processes else 0.0
+        if not self.in_processes:
+            return 0.0
+        return sum(
+            record.cpu_seconds for record in self.companions.values() if isinstance(record, QuantumRecord)
+        )
 
 
 @dataclass
@@ -83,15 +99,17 @@ def run_pieces(
         quantum.companions,
         {} if prediction is None else {"euler": _level(prediction)},
         positions={"site": site_positions(sites), "bond": bond_positions(sites)},
-        settings=budget_settings(config, quantum.quench),
+        settings=quantum.settings or budget_settings(config, quantum.quench),
     )
     for name, budget in budgets.items():
         _add_budget(pieces, name, budget, config, judged=bool(quantum.companions))
     for name, record in quantum.companions.items():
-        _add_companion(pieces, name, quantum.companion_quenches[name], record, sites)
+        former = quantum.settings is not None and name in quantum.settings.unloosened
+        _add_companion(pieces, name, record, sites, former_main=former)
     pieces.provenance["events"] = [
         *extra_events(config),
         *quantum.events,
+        *quantum.failures,
         *main.events,
         *_outlook(config, prediction, absence),
     ]
@@ -108,7 +126,8 @@ def run_pieces(
         "cuts": float(main.cuts[-1]),
         "seconds": main.seconds,
         "state_bytes": main.peak_state_bytes,
-    }
+    } | state_numbers(main, quantum.state_distance)
+    pieces.provenance["advice"] = advise(main, quantum.companions, budgets, quantum.quench)
     return pieces
 
 
@@ -163,7 +182,7 @@ def _add_prediction(pieces: Pieces, config: Config, prediction: Prediction) -> N
 
 def _add_budget(pieces: Pieces, name: str, budget: ObservableBudget, config: Config, *, judged: bool) -> None:
     """Add one observable's budget; without companions only the rigorous bound and the deviation are known."""
-    rows: dict[str, Any] = {"bound": budget.bound}
+    rows: dict[str, Any] = {"bound": budget.bound, **budget.tighter}
     if judged:
         rows |= {
             "error": budget.error,
@@ -186,21 +205,22 @@ def _add_budget(pieces: Pieces, name: str, budget: ObservableBudget, config: Con
     }
 
 
-def _add_companion(pieces: Pieces, name: str, quench: Quench, record: QuantumRecord, sites: int) -> None:
-    """Add a companion's observables and settings."""
-    length = quench.chain.sites
+def _add_companion(pieces: Pieces, name: str, record: CompanionRun, sites: int, *, former_main: bool) -> None:
+    """Add a companion's observables, what its cuts lost, and its settings."""
+    length = record.fields["energy_current"].shape[1]
     own = (
         {}
         if length == sites
         else {"site_length": site_positions(length), "bond_length": bond_positions(length)}
     )
-    pieces.groups[f"companions/{name}"] = {**record.fields, **own}
+    lost = {"discarded_weight": record.discarded_weight} if np.isfinite(record.discarded_weight).all() else {}
+    pieces.groups[f"companions/{name}"] = {**record.fields, **lost, **own}
     pieces.attributes[f"companions/{name}"] = {
-        "discarded_weight": quench.discarded_weight,
-        "time_step": quench.time_step,
+        "discarded_weight": record.weight_asked,
+        "time_step": record.time_step,
         "sites": length,
         "seconds": record.seconds,
-    }
+    } | ({"former_main": 1} if former_main else {})
 
 
 def _level(prediction: Prediction) -> PredictedLevel:

@@ -3,14 +3,9 @@ design."""
 
 from __future__ import annotations
 
-import signal
-import threading
 import time
-from collections.abc import Callable, Iterator, Mapping
-from concurrent.futures import Future, ProcessPoolExecutor
-from contextlib import contextmanager
+from collections.abc import Callable, Mapping
 from dataclasses import dataclass, replace
-from multiprocessing import active_children, get_context
 from pathlib import Path
 
 from threadpoolctl import threadpool_limits
@@ -24,8 +19,17 @@ from tnquench.config.schema import Config
 from tnquench.dataset.writer import require_writable, write_run
 from tnquench.errors import InputError
 from tnquench.observables.quench import Progress, QuantumRecord, Quench, simulate
-from tnquench.outcome import QuantumSide, prediction_pieces, run_pieces
+from tnquench.outcome import Pieces, QuantumSide, prediction_pieces, run_pieces
 from tnquench.report.page import write_report
+from tnquench.side_by_side import (
+    SURVIVABLE,
+    background,
+    companion_record,
+    failure_event,
+    fetched,
+    state_distance,
+)
+from tnquench.stretch_of import add_study, other_factors, stretched_config, stretched_folder
 
 #: Where results go unless told otherwise, below the working directory.
 DEFAULT_FOLDER = Path("results")
@@ -54,29 +58,68 @@ def run(config_file: Path, *, into: Path | None = None, threads: int = 1, watch:
     """Simulate a config with its companions, predict, judge, and write dataset and report; return the folder.
 
     into : folder of the results, results/<name of the config> if not given; threads : processes used at most.
-    Results do not depend on it: each simulation runs on one core.
+    Results do not depend on it: each simulation runs on one core. With a stretch study the stretched runs
+    follow, each a dataset of its own in FOLDER/stretch_<factor>, and the study joins the dataset of the run.
     Raises InputError for a config or folder that cannot be used.
     """
-    began, cpu = time.perf_counter(), time.process_time()
     config = load_config(config_file)
     folder = into or DEFAULT_FOLDER / config_file.stem
-    require_writable(folder)
+    factors = other_factors(config)
+    for place in (folder, *(folder / stretched_folder(factor) for factor in factors)):
+        require_writable(place)
     with threadpool_limits(1):
-        watch.stage("prediction", None)
-        prediction, absence = build_prediction(config)
-        if prediction is None:
-            watch.stage(f"no prediction: {absence}", None)
-        quantum = quantum_side(config, threads=threads, watch=watch)
-        watch.stage("budget, dataset and report", None)
-        pieces = run_pieces(config, config_file, quantum, prediction, absence)
+        pieces = judged_run(config, config_file, threads=threads, watch=watch)
+        write_run(folder, **pieces.as_arguments())
+        if factors:
+            family = {1.0: pieces} | stretched_runs(config, config_file, folder, threads=threads, watch=watch)
+            add_study(pieces, config, family)
+            write_run(folder, **pieces.as_arguments())
+    watch.stage("report", None)
+    write_report(folder)
+    return folder
+
+
+def judged_run(config: Config, config_file: Path, *, threads: int, watch: Watch) -> Pieces:
+    """Predict and simulate one config, and judge the one by the other; return the pieces of the dataset.
+
+    Raises InputError for a stretch study without a prediction.
+    """
+    began, cpu = time.perf_counter(), time.process_time()
+    watch.stage("prediction", None)
+    prediction, absence = build_prediction(config)
+    if prediction is None:
+        if config.stretch.factors:
+            raise InputError(str(config_file), [f"[stretch] needs a prediction to be studied: {absence}"])
+        watch.stage(f"no prediction: {absence}", None)
+    quantum = quantum_side(config, threads=threads, watch=watch)
+    watch.stage("budget and dataset", None)
+    pieces = run_pieces(config, config_file, quantum, prediction, absence)
     spent = {
         "wall_seconds": time.perf_counter() - began,
         "cpu_seconds": time.process_time() - cpu + quantum.cpu_elsewhere,
     }
     pieces.provenance.update(spent)
-    write_run(folder, **pieces.as_arguments())
-    write_report(folder)
-    return folder
+    return pieces
+
+
+def stretched_runs(
+    config: Config, config_file: Path, folder: Path, *, threads: int, watch: Watch
+) -> dict[float, Pieces]:
+    """Run a config stretched by each factor of its study but 1, write the datasets, and return their pieces
+    by factor."""
+    family = {}
+    for factor in other_factors(config):
+        told = _telling(watch, f"stretch {factor:g}")
+        family[factor] = judged_run(
+            stretched_config(config, factor), config_file, threads=threads, watch=told
+        )
+        write_run(folder / stretched_folder(factor), **family[factor].as_arguments())
+    return family
+
+
+def _telling(watch: Watch, said: str) -> Watch:
+    """Return a watch whose stages begin with these words."""
+    return Watch(stage=lambda name, quench: watch.stage(f"{said}, {name}", quench), progress=watch.progress)
 
 
 def hydro(config_file: Path, *, into: Path | None = None) -> Path:
@@ -102,11 +145,19 @@ def hydro(config_file: Path, *, into: Path | None = None) -> Path:
 
 
 def forecast(config_file: Path) -> tuple[Config, Quench, Forecast]:
-    """Estimate what a config will cost from short pilot runs; nothing is written.
+    """Estimate what a config will cost from short pilot runs, its stretch study left out; nothing is written.
 
     With an accuracy in place of a weight the pilots that choose the weight are run too.
     """
-    config = load_config(config_file)
+    return _forecast(load_config(config_file))
+
+
+def forecast_stretched(config: Config) -> dict[float, tuple[Config, Quench, Forecast]]:
+    """Estimate what each stretched run of a config's study will cost, by factor; empty without a study."""
+    return {factor: _forecast(stretched_config(config, factor)) for factor in other_factors(config)}
+
+
+def _forecast(config: Config) -> tuple[Config, Quench, Forecast]:
     with threadpool_limits(1):
         weight, time_step = chosen_settings(config)
         quench = build_quench(config, weight=weight, time_step=time_step)
@@ -153,7 +204,7 @@ def quantum_side(config: Config, *, threads: int, watch: Watch) -> QuantumSide:
         detail = f"{chosen}: numerical error {error:.1e} at most ({largest}), {accuracy:.1e} asked"
         side = replace(side, events=({"kind": kind, "detail": detail},))
         step_is_fixed = source == "time_step" and config.evolution.time_step is not None
-        if error <= accuracy or step_is_fixed:
+        if error <= accuracy or step_is_fixed or side.failures:  # no repeat mends a missing companion
             break
         if source == "time_step":
             time_step = quench.time_step / 2.0
@@ -168,57 +219,30 @@ def simulate_all(
     """Run a main quench and its companions, the companions in processes of their own if there is more than
     one thread.
 
-    Results are the same either way.
+    Results are the same either way. A companion that fails is left out, and an event says so.
     """
-    with _background(companions, workers=threads - 1) as pending:
+    failures: list[dict[str, object]] = []
+    with background(companions, workers=threads - 1) as pending:
         watch.stage("main run", quench)
         main = simulate(quench, report=watch.progress)
         records: dict[str, QuantumRecord] = {}
         for name, companion in companions.items():
             watch.stage(f"companion {name}", None if pending else companion)
-            records[name] = pending[name].result() if pending else simulate(companion, report=watch.progress)
-    return QuantumSide(quench, main, dict(companions), records, in_processes=bool(pending))
-
-
-@contextmanager
-def _background(
-    quenches: Mapping[str, Quench], *, workers: int
-) -> Iterator[dict[str, Future[QuantumRecord]]]:
-    """Start quenches in processes of their own; yield their futures by name, none without workers.
-
-    On any exception the processes are ended: nobody will fetch their results.
-    """
-    if workers < 1 or not quenches:
-        yield {}
-        return
-    others = set(active_children())
-    with ProcessPoolExecutor(
-        min(workers, len(quenches)), mp_context=get_context("spawn"), initializer=_one_core
-    ) as pool:
-        try:
-            with _interrupts_ignored():
-                pending = {name: pool.submit(simulate, quench) for name, quench in quenches.items()}
-            yield pending
-        except BaseException:
-            pool.shutdown(wait=False, cancel_futures=True)
-            for worker in set(active_children()) - others:
-                worker.terminate()
-            raise
-
-
-@contextmanager
-def _interrupts_ignored() -> Iterator[None]:
-    """Ignore Ctrl-C while processes start: they inherit it, so that only this process answers to it later."""
-    if threading.current_thread() is not threading.main_thread():
-        yield
-        return
-    previous = signal.signal(signal.SIGINT, signal.SIG_IGN)
-    try:
-        yield
-    finally:
-        signal.signal(signal.SIGINT, previous)
-
-
-def _one_core() -> None:
-    """Keep a worker's linear algebra on one core."""
-    threadpool_limits(1)
+            try:
+                records[name] = (
+                    fetched(name, companion, pending[name])
+                    if pending
+                    else companion_record(name, companion, watch.progress)
+                )
+            except tuple(SURVIVABLE) as error:
+                failures.append(failure_event(name, error))
+                watch.stage(str(failures[-1]["detail"]), None)
+    return QuantumSide(
+        quench,
+        replace(main, last_state=None),
+        {name: companions[name] for name in records},
+        {name: replace(record, last_state=None) for name, record in records.items()},
+        in_processes=bool(pending),
+        failures=tuple(failures),
+        state_distance=state_distance(main, records),
+    )

@@ -4,13 +4,20 @@ prediction."""
 from __future__ import annotations
 
 from collections.abc import Mapping
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 
 import numpy as np
 
 from tnquench.budget import sources
-from tnquench.budget.companions import COARSE, LOOSE, LOOSER, SHORT
-from tnquench.budget.verdict import SHARP_REACH, ObservableBudget, judge_observable, light_cone_window
+from tnquench.budget.bounds import layer_bound, light_cone_bound
+from tnquench.budget.companions import COARSE, SHORT, CompanionRun, ladder, partner
+from tnquench.budget.verdict import (
+    SHARP_REACH,
+    TIGHTER_BOUNDS,
+    ObservableBudget,
+    judge_observable,
+    light_cone_window,
+)
 from tnquench.conventions import OBSERVABLE_PLACES, Reals
 from tnquench.observables.quench import QuantumRecord
 
@@ -34,56 +41,116 @@ class RunSettings:
 
     step_ratio : the coarser companion's step over the main one; trotter_order : of both
     resolve_at : k of the verdict; reach : how far from x = 0 the start varies
+    shrunk : main step over the step at which the companions measured its error
+    unloosened : companions that were main runs themselves: their bond floor is the main run's
     """
 
     step_ratio: float
     trotter_order: int
     resolve_at: float
     reach: float = SHARP_REACH
+    shrunk: float = 1.0
+    unloosened: frozenset[str] = frozenset()
 
 
 def quantum_sources(
-    name: str, main: QuantumRecord, companions: Mapping[str, QuantumRecord], settings: RunSettings
+    name: str, main: QuantumRecord, companions: Mapping[str, CompanionRun], settings: RunSettings
 ) -> dict[str, Reals]:
     """Return the sources of error of the quantum side of one observable, each of shape (time, place).
 
-    With no companions at all truncation, step and length cannot be estimated and are nan.
+    With no companions at all truncation, step and length cannot be estimated and are nan. Where one is
+    missing its source claims more, from what is there.
     """
-    values = main.fields[name]
+    values, norm = main.fields[name], main.norms[name]
     found = {
         "preparation": sources.preparation(start_error=main.start_error[name], shape=values.shape),
-        "arithmetic": sources.arithmetic(cuts=main.cuts, norm=main.norms[name], shape=values.shape),
+        "arithmetic": sources.arithmetic(cuts=main.cuts, norm=norm, shape=values.shape),
     }
     if not companions:
         unknown = np.full(values.shape, np.nan)
         return found | {"truncation": unknown, "time_step": unknown, "length": unknown}
-    loose = companions[LOOSE].fields[name]
-    found["truncation"] = sources.truncation(
-        main=_truncated(main, name),
-        loose=_truncated(companions[LOOSE], name),
-        looser=_truncated(companions[LOOSER], name),
-    )
-    found["time_step"] = sources.time_step(
-        fine=loose,
-        coarse=companions[COARSE].fields[name],
-        step_ratio=settings.step_ratio,
-        order=settings.trotter_order,
-    )
-    if SHORT not in companions:
-        found["length"] = sources.length_unknown(norm=main.norms[name], shape=values.shape)
+    found["truncation"] = _truncation(name, main, companions, settings)
+    if COARSE in companions:
+        at_companions = sources.time_step(
+            fine=_beside(COARSE, companions, main).fields[name],
+            coarse=companions[COARSE].fields[name],
+            step_ratio=settings.step_ratio,
+            order=settings.trotter_order,
+        )
+        found["time_step"] = at_companions * settings.shrunk**settings.trotter_order
     else:
-        noise = sources.WIDENING * sources.local_scale(loose - values) + found["truncation"]
-        found["length"] = sources.length(long=loose, short=companions[SHORT].fields[name], noise=noise)
+        found["time_step"] = sources.unknown(norm=norm, shape=values.shape)
+    if SHORT in companions:
+        long = _beside(SHORT, companions, main).fields[name]
+        noise = sources.WIDENING * sources.local_scale(long - values) + found["truncation"]
+        found["length"] = sources.length(long=long, short=companions[SHORT].fields[name], noise=noise)
+    else:
+        found["length"] = sources.unknown(norm=norm, shape=values.shape)
     return found
 
 
-def _truncated(record: QuantumRecord, name: str) -> sources.TruncatedRun:
+def _beside(
+    name: str, companions: Mapping[str, CompanionRun], main: QuantumRecord
+) -> CompanionRun | QuantumRecord:
+    """Return the run from which a companion differs by its step or length alone.
+
+    Where that is missing it is the main run: the difference then contains truncation and claims more.
+    """
+    found = partner(companions, name)
+    return main if found is None else companions[found]
+
+
+def _truncation(
+    name: str, main: QuantumRecord, companions: Mapping[str, CompanionRun], settings: RunSettings
+) -> Reals:
+    """Estimate the truncation error from the companions that there are.
+
+    One that was a main run has the same bond floor and is blind to what it hides: the next looser one is
+    asked too, and the larger claim counts. Without any that differ by the cuts alone the one with the coarser
+    step stands in, whose difference contains the step's error; without that the rigorous bound is claimed.
+    """
+    rungs = [rung for rung in ladder(companions) if np.isfinite(companions[rung].discarded_weight).all()]
+    rungs = rungs or [rung for rung in (COARSE,) if rung in companions]
+    if not rungs:
+        bounds = [_angle_bound(name, main), *_tighter_bounds(name, main).values()]
+        return np.asarray(np.minimum.reduce(bounds))
+    claims = []
+    for rung, next_one in zip(rungs, [*rungs[1:], None], strict=True):
+        claims.append(
+            sources.truncation(
+                main=_truncated(main, name),
+                loose=_truncated(companions[rung], name),
+                looser=None if next_one is None else _truncated(companions[next_one], name),
+            )
+        )
+        if rung not in settings.unloosened:
+            break
+    return np.asarray(np.maximum.reduce(claims))
+
+
+def _truncated(record: CompanionRun | QuantumRecord, name: str) -> sources.TruncatedRun:
     """Return one observable of a run with the weights its cuts have lost."""
     return sources.TruncatedRun(record.fields[name], record.discarded_weight)
 
 
+def _angle_bound(name: str, main: QuantumRecord) -> Reals:
+    """Return the rigorous bound by the sum of all angles, (time, place)."""
+    return sources.truncation_bound(
+        angle=main.angle, norm=main.norms[name], shape=(len(main.times), main.fields[name].shape[1])
+    )
+
+
+def _tighter_bounds(name: str, main: QuantumRecord) -> dict[str, Reals]:
+    """Return the rigorous bounds by layers and by light cones, none where the run has not kept its cuts."""
+    if main.trail is None:
+        return {}
+    samples = len(main.times) - 1
+    found = (bound(main.trail, name, samples=samples) for bound in (layer_bound, light_cone_bound))
+    return dict(zip(TIGHTER_BOUNDS, found, strict=True))
+
+
 def quantum_error(
-    main: QuantumRecord, companions: Mapping[str, QuantumRecord], settings: RunSettings
+    main: QuantumRecord, companions: Mapping[str, CompanionRun], settings: RunSettings
 ) -> tuple[float, str]:
     """Return the largest error that weight, step, start and rounding leave anywhere, and its largest source.
 
@@ -103,7 +170,7 @@ def quantum_error(
 
 def assess(
     main: QuantumRecord,
-    companions: Mapping[str, QuantumRecord],
+    companions: Mapping[str, CompanionRun],
     predictions: Mapping[str, PredictedLevel],
     *,
     positions: Mapping[str, Reals],
@@ -123,17 +190,18 @@ def assess(
         place = positions[OBSERVABLE_PLACES[name]]
         values = main.fields[name]
         predicted = {level: found for level, found in predictions.items() if name in found.fields}
-        budgets[name] = judge_observable(
+        budget = judge_observable(
             quantum=values,
             sources=quantum_sources(name, main, companions, settings)
             | _prediction_sources(name, values, predicted),
-            bound=sources.truncation_bound(angle=main.angle, norm=main.norms[name], shape=values.shape),
+            bound=_angle_bound(name, main),
             predictions={level: found.fields[name] for level, found in predicted.items()},
             window=light_cone_window(times=main.times, positions=place, light_cone=cone, reach=reach),
             positions=place,
             times=main.times,
             resolve_at=settings.resolve_at,
         )
+        budgets[name] = replace(budget, tighter=_tighter_bounds(name, main))
     return budgets
 
 

@@ -6,23 +6,72 @@ isolate each source of error by differences at otherwise equal settings.
 
 from __future__ import annotations
 
-from dataclasses import dataclass, replace
+from collections.abc import Mapping
+from dataclasses import replace
+from math import isclose
+from typing import Protocol
 
+import numpy as np
+
+from tnquench.conventions import Reals
 from tnquench.observables.quench import Quench
 
 #: Factor r between the weights of neighbouring companions.
 WEIGHT_RATIO = 10.0
 
+WEIGHT = "weight_"
 LOOSE, LOOSER, COARSE, SHORT = "weight_10", "weight_100", "step_2", "length"
 
 
-@dataclass(frozen=True)
-class CompanionSettings:
-    """How a companion differs from the main run; the budget needs these ratios."""
+#: What becomes of the budget without a companion.
+WITHOUT: dict[str, str] = {
+    LOOSE: "truncation is estimated from a looser run and the least power of the weight, step and ends from "
+    "the main run, which claims more",
+    LOOSER: "the power of the weight is not measured, and the least one claims more",
+    COARSE: "the error of the time step is unknown and claimed as twice the norm of each observable",
+    SHORT: "the influence of the ends is unknown and claimed as twice the norm of each observable",
+}
 
-    weight: float
-    steps: int
-    sites: int
+
+class CompanionRun(Protocol):
+    """What the budget takes of a companion run; a `QuantumRecord` has it all.
+
+    fields : observable -> (time, place); discarded_weight (time, bond), nan where it is not known
+    weight_asked, time_step : its settings, nan where they are not known
+    """
+
+    @property
+    def fields(self) -> Mapping[str, Reals]: ...  # noqa: D102
+
+    @property
+    def discarded_weight(self) -> Reals: ...  # noqa: D102
+
+    @property
+    def weight_asked(self) -> float: ...  # noqa: D102
+
+    @property
+    def time_step(self) -> float: ...  # noqa: D102
+
+    @property
+    def seconds(self) -> float: ...  # noqa: D102
+
+
+def ladder(companions: Mapping[str, CompanionRun]) -> list[str]:
+    """Return the companions that differ from the main run by what their cuts lose alone, tightest first."""
+    rungs = [name for name in companions if name.startswith(WEIGHT) and name != COARSE]
+    return sorted(rungs, key=lambda name: float(name.removeprefix(WEIGHT)))
+
+
+def partner(companions: Mapping[str, CompanionRun], name: str) -> str | None:
+    """Return the companion from which `name` differs by the step or the length alone, None if it is missing.
+
+    It has the same weight; where weights are not known it is the one at ten times the main run's.
+    """
+    weight = companions[name].weight_asked
+    if np.isnan(weight):
+        return LOOSE if LOOSE in companions else None
+    rungs = (rung for rung in ladder(companions) if isclose(companions[rung].weight_asked, weight))
+    return next(rungs, None)
 
 
 def shorter_length(sites: int) -> int | None:

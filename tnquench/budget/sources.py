@@ -30,6 +30,9 @@ LEAST_POWER, LARGEST_POWER = 0.5, 0.6
 LEAST_RATIO, LARGEST_RATIO = 3.0, 1e6
 SMALLEST_WEIGHT = 1e-24
 
+#: Largest ratio over which an error is extrapolated without a measured power.
+UNMEASURED_RATIO = 10.0
+
 #: Rounding unit of double precision.
 ROUNDING = float(np.finfo(np.float64).eps)
 
@@ -85,15 +88,21 @@ def weight_power(*, main: TruncatedRun, loose: TruncatedRun, looser: TruncatedRu
     return np.asarray(np.clip(power, LEAST_POWER, LARGEST_POWER))[:, None]
 
 
-def truncation(*, main: TruncatedRun, loose: TruncatedRun, looser: TruncatedRun) -> Reals:
+def truncation(*, main: TruncatedRun, loose: TruncatedRun, looser: TruncatedRun | None) -> Reals:
     """Estimate the truncation error of the main run from two runs that cut more.
+
+    Without the second one no power is measured: the least one is taken, over a tenfold weight at most,
+    whatever the first run has lost.
 
     If the error is c W^p of the weight W lost around a point, O(loose) - O(main) = c W^p (rho^p - 1) with rho
     the local ratio of the lost weights; it is far above the ratio of the weights asked for where the bond
     floor binds.
     """
-    power = weight_power(main=main, loose=loose, looser=looser)
-    ratio = np.clip(loose.local_weight() / main.local_weight(), LEAST_RATIO, LARGEST_RATIO)
+    power: Reals | float = LEAST_POWER
+    if looser is not None:
+        power = weight_power(main=main, loose=loose, looser=looser)
+    largest = UNMEASURED_RATIO if looser is None else LARGEST_RATIO
+    ratio = np.clip(loose.local_weight() / main.local_weight(), LEAST_RATIO, largest)
     return np.asarray(WIDENING * local_scale(loose.values - main.values) / (ratio**power - 1.0))
 
 
@@ -127,9 +136,9 @@ def length(*, long: Reals, short: Reals, noise: Reals) -> Reals:
     return np.asarray(excess[:, np.where(from_left, reach, short.shape[1] - 1 - reach)])
 
 
-def length_unknown(*, norm: float, shape: tuple[int, int]) -> Reals:
-    """Return 2 ||O||, all that is known of the ends' influence where the chain is too short for a shorter
-    one."""
+def unknown(*, norm: float, shape: tuple[int, int]) -> Reals:
+    """Return 2 ||O||, all that is known of a source that nothing measures: the ends' influence where no
+    shorter chain was run, the step's error where no longer step was."""
     return np.full(shape, 2.0 * norm)
 
 

@@ -4,7 +4,7 @@ verdict."""
 from __future__ import annotations
 
 from collections.abc import Mapping
-from dataclasses import dataclass
+from dataclasses import dataclass, field
 
 import numpy as np
 
@@ -22,6 +22,9 @@ SOURCE_KINDS: dict[str, str] = {
     "initial_gradient": "physics",
 }
 
+
+#: Names of the rigorous bounds on truncation beside the sum of all angles.
+TIGHTER_BOUNDS = ("layer_bound", "light_cone_bound")
 
 #: Reach of a sharp step: the points next to the joint, so that no window is empty.
 SHARP_REACH = 1.5
@@ -57,9 +60,10 @@ class ObservableBudget:
     """Errors of one observable and the verdict on each level.
 
     error (source, time, place) : by source; numerical (time, place) : sum of all but the physical ones
-    bound (time, place) : rigorous bound on the real-time truncation
+    bound (time, place) : rigorous bound on the real-time truncation; tighter (time, place) : further ones by
+    name, where the run kept what they need
     numerical_norm (time,) : root mean square over the light-cone window
-    dominant_source (time,) : index of the largest source there
+    dominant_source (time,) : index of the largest source there; source_norms (source, time) : of all
     levels : verdict by hydrodynamic level
     """
 
@@ -69,6 +73,8 @@ class ObservableBudget:
     numerical_norm: Reals
     dominant_source: np.ndarray
     levels: dict[str, LevelVerdict]
+    tighter: dict[str, Reals] = field(default_factory=dict)
+    source_norms: Reals = field(default_factory=lambda: np.zeros((len(ERROR_SOURCES), 0)))
 
 
 def light_cone_window(
@@ -119,13 +125,14 @@ def judge_observable(
     error = np.stack([np.broadcast_to(sources.get(name, 0.0), quantum.shape) for name in ERROR_SOURCES])
     numerical_rows = [index for index, name in enumerate(ERROR_SOURCES) if name not in PHYSICAL_SOURCES]
     numerical = error[numerical_rows].sum(axis=0)
-    norms = np.stack([window_norm(error[row], window) for row in numerical_rows])
+    norms = np.stack([window_norm(row, window) for row in error])
     return ObservableBudget(
         error=error,
         numerical=numerical,
         bound=bound,
         numerical_norm=window_norm(numerical, window),
-        dominant_source=np.array(numerical_rows)[norms.argmax(axis=0)],
+        dominant_source=np.array(numerical_rows)[norms[numerical_rows].argmax(axis=0)],
+        source_norms=norms,
         levels={
             level: _level_verdict(
                 quantum - prediction, resolve_at * numerical, window, interior(positions), times

@@ -7,6 +7,7 @@ from collections.abc import Iterator, Mapping
 from pathlib import Path
 
 import numpy as np
+from numpy.typing import NDArray
 
 from tnquench.dataset.contents import Contents, StoredVariable, digest_of_contents
 from tnquench.dataset.storage import DamagedFile, decode, locate, read_bytes
@@ -19,9 +20,13 @@ from tnquench.dataset.variables import (
     MEASURED,
     OBSERVABLES,
     OWN_COORDINATES,
+    STRETCH_COORDINATES,
+    STRETCH_FAMILY,
+    TIGHTER,
     Variable,
     attributes_of,
     held_by,
+    stretch_rows,
     variables_of,
 )
 from tnquench.errors import InputError
@@ -160,6 +165,7 @@ def _group_findings(contents: Contents, group: str) -> Iterator[str]:
     own = {name: found[name] for name in OWN_COORDINATES if name in found}
     try:
         table = variables_of(group, own_places=bool(own))
+        own |= {name: found[name] for name in STRETCH_COORDINATES if name in found}
     except ValueError:
         yield f"unknown group {group}"
         return
@@ -179,12 +185,25 @@ def _required(contents: Contents, group: str) -> set[str]:
     if head == "hydrodynamics":
         errors = ("", "_grid_error", "_strings_error")
         return {f"{name}{error}" for name in _predicted(contents, tail) for error in errors}
+    if group == "stretch":
+        return _required_of_stretch(contents)
     return held_by(group, observables_of(contents))
+
+
+def _required_of_stretch(contents: Contents) -> set[str]:
+    """A study has all rows of an observable against a theory, or none where a run lacks the prediction."""
+    found = contents.group("stretch")
+    required = {*STRETCH_COORDINATES, *STRETCH_FAMILY}
+    for name in OBSERVABLES:
+        for level in LEVELS:
+            rows = stretch_rows(name, level)
+            required |= set(rows) if set(rows) & set(found) else set()
+    return required
 
 
 def _required_of_budget(contents: Contents, name: str) -> set[str]:
     absent = tuple(f"{level}_" for level in LEVELS if name not in _predicted(contents, level))
-    required = {row for row in variables_of(f"budget/{name}") if not row.startswith(absent)}
+    required = {row for row in variables_of(f"budget/{name}") if not row.startswith(absent)} - TIGHTER
     if _is_measured(contents):
         return required
     return {row for row in required if row not in MEASURED and not row.endswith("_resolved")}
@@ -233,11 +252,16 @@ def _value_findings(path: str, variable: StoredVariable, row: Variable) -> Itera
         return
     if variable.attributes.get("units") != row.units:
         yield f"{path} has units {variable.attributes.get('units')!r}, expected {row.units!r}"
-    if kind == "f" and (bad := int(np.count_nonzero(~np.isfinite(values)))):
+    if kind == "f" and (bad := int(np.count_nonzero(_unsound(values, row)))):
         yield f"{path} holds {bad} values that are not finite numbers"
     meanings = str(variable.attributes.get("flag_meanings", "")).split()
     if meanings and values.size and not (values.min() >= 0 and values.max() < len(meanings)):
         yield f"{path} holds values outside 0..{len(meanings) - 1}"
+
+
+def _unsound(values: NDArray[np.float64], row: Variable) -> NDArray[np.bool_]:
+    """Return which values are no numbers that the row allows."""
+    return np.isinf(values) if row.gaps else ~np.isfinite(values)
 
 
 def _shape_findings(

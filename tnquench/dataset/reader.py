@@ -4,7 +4,7 @@ from __future__ import annotations
 
 import json
 from collections.abc import Mapping
-from dataclasses import dataclass
+from dataclasses import dataclass, field
 from pathlib import Path
 from typing import Any
 
@@ -13,7 +13,7 @@ import xarray
 from tnquench.dataset.contents import Attribute, Contents, StoredVariable
 from tnquench.dataset.integrity import digest_complaint, read_contents, version_complaint
 from tnquench.dataset.storage import locate
-from tnquench.dataset.variables import COORDINATES, JSON_ATTRIBUTES, OWN_COORDINATES
+from tnquench.dataset.variables import COORDINATES, JSON_ATTRIBUTES, OWN_COORDINATES, STRETCH_COORDINATES
 from tnquench.errors import InputError
 
 
@@ -29,6 +29,7 @@ class Run:
     coordinates   : `time`, `site`, `bond`, `source`
     attributes    : attributes of the file itself
     provenance    : where it comes from; versions, events and preparation as Python lists and mappings
+    stretch       : the stretch study, such as `energy_density_euler_exponent` (norm, window); empty without
     """
 
     path: Path
@@ -39,6 +40,7 @@ class Run:
     coordinates: xarray.Dataset
     attributes: Mapping[str, Any]
     provenance: Mapping[str, Any]
+    stretch: xarray.Dataset = field(default_factory=xarray.Dataset)
 
     def __repr__(self) -> str:
         sizes = ", ".join(f"{name} {size}" for name, size in self.coordinates.sizes.items())
@@ -76,6 +78,7 @@ def _build(file: Path, contents: Contents) -> Run:
         coordinates=_dataset(contents, ""),
         attributes=_decoded(contents.attributes.get("", {})),
         provenance=_decoded(contents.attributes["provenance"]),
+        stretch=datasets.get("stretch", xarray.Dataset()),
     )
 
 
@@ -89,7 +92,8 @@ def _dataset(contents: Contents, group: str) -> xarray.Dataset:
     found = contents.group(group)
     used = {*found, *(dim for variable in found.values() for dim in variable.dims)}
     scales = {**contents.group(""), **found}
-    names = [name for name in (*COORDINATES, *OWN_COORDINATES) if name in scales and name in used]
+    known = (*COORDINATES, *OWN_COORDINATES, *STRETCH_COORDINATES)
+    names = [name for name in known if name in scales and name in used]
     return xarray.Dataset(
         {name: _labelled(variable) for name, variable in found.items() if name not in names},
         {name: _labelled(scales[name]) for name in names},

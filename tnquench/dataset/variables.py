@@ -10,11 +10,14 @@ from __future__ import annotations
 from collections.abc import Iterable
 from dataclasses import dataclass, replace
 
-from tnquench.conventions import CURRENTS, OBSERVABLE_PLACES
+from tnquench.conventions import CURRENTS, OBSERVABLE_PLACES, STRETCH_FINDINGS
 
 #: Version of the layout below; a reader refuses a file whose version is larger. Files of version 1 are of the
-#: XXZ chain and hold `FIRST_OBSERVABLES`.
-FORMAT_VERSION = 2
+#: XXZ chain and hold `FIRST_OBSERVABLES`. A file is of the first version that has all of its groups.
+FORMAT_VERSION = 3
+#: Version of a file without any of the groups that came later, and these groups.
+PLAIN_VERSION = 2
+SINCE: dict[str, int] = {"stretch": 3}
 FIRST_OBSERVABLES: tuple[str, ...] = ("energy_density", "energy_current", "charge_density", "charge_current")
 
 #: Name of the dataset in its folder.
@@ -40,6 +43,8 @@ class Variable:
     dtype: str = "float64"
     #: Meanings of the values 0, 1, 2..., without blanks; empty where a value is a number.
     flags: tuple[str, ...] = ()
+    #: Whether nan may stand for a value that could not be determined.
+    gaps: bool = False
 
 
 #: Dimension scales of the root group.
@@ -56,6 +61,21 @@ OWN_COORDINATES: dict[str, Variable] = {
         COORDINATES[place], dims=(own,), long_name=f"{COORDINATES[place].long_name}, companion chain"
     )
     for place, own in OWN_PLACES.items()
+}
+
+#: Dimension scales of the stretch study: factors of the family, norms of a deviation, parts of the time.
+STRETCH_COORDINATES: dict[str, Variable] = {
+    "factor": Variable(("factor",), "1", "factor by which profiles, chain and times are stretched"),
+    "norm": Variable(("norm",), "1", "norm over the light-cone window", "str"),
+    "window": Variable(("window",), "1", "part of the time", "str"),
+}
+
+#: What the stretch study says of the family as a whole.
+STRETCH_FAMILY: dict[str, Variable] = {
+    "window_start": Variable(("window",), "1/energy", "first time of the part, divided by the factor"),
+    "window_end": Variable(("window",), "1/energy", "last time of the part, divided by the factor"),
+    "sites": Variable(("factor",), "1", "number of sites", "int64"),
+    "wall_seconds": Variable(("factor",), "s", "wall time of the run and its companions"),
 }
 
 #: Units and meaning of each local observable. What the charge is depends on the model.
@@ -90,9 +110,12 @@ _QUANTUM: dict[str, Variable] = (
     | TOTALS
 )
 
+#: A companion's observables, and what its cuts lost.
+_COMPANION: dict[str, Variable] = OBSERVABLES | {"discarded_weight": _QUANTUM["discarded_weight"]}
+
 _ON_OWN_PLACES: dict[str, Variable] = OWN_COORDINATES | {
     name: replace(row, dims=tuple(OWN_PLACES.get(dim, dim) for dim in row.dims))
-    for name, row in OBSERVABLES.items()
+    for name, row in _COMPANION.items()
 }
 
 #: What `/provenance` must say; the writer adds the last two.
@@ -113,8 +136,11 @@ PROVENANCE: tuple[str, ...] = (
 
 #: Attributes that hold a list or a mapping as JSON text, decoded when a run is opened.
 JSON_ATTRIBUTES: frozenset[str] = frozenset(
-    {"versions", "events", "preparation", "references", "main_run", "model"}
+    {"versions", "events", "preparation", "references", "main_run", "model", "advice"}
 )
+
+#: Rigorous bounds that a file may lack: older ones do.
+TIGHTER: frozenset[str] = frozenset({"layer_bound", "light_cone_bound"})
 
 #: Variables of a budget that exist only where companion runs measured the errors; so do the verdicts.
 MEASURED: frozenset[str] = frozenset({"error", "numerical", "numerical_norm", "dominant_source"})
@@ -129,12 +155,14 @@ def variables_of(group: str, *, own_places: bool = False) -> dict[str, Variable]
     head, _, tail = group.partition("/")
     if group == "quantum":
         return _QUANTUM
+    if group == "stretch":
+        return STRETCH_COORDINATES | STRETCH_FAMILY | _stretch_variables()
     if head == "hydrodynamics" and tail in LEVELS:
         return _prediction_variables(tail)
     if head == "budget" and tail in OBSERVABLES:
         return _budget_variables(tail)
     if head == "companions" and tail and "/" not in tail:
-        return _ON_OWN_PLACES if own_places else OBSERVABLES
+        return _ON_OWN_PLACES if own_places else _COMPANION
     message = f"no such group in a dataset: {group!r}"
     raise ValueError(message)
 
@@ -161,6 +189,7 @@ def attributes_of(group: str, *, sources: Iterable[str]) -> tuple[str, ...]:
         "hydrodynamics": ("light_cone_left", "light_cone_right", "method", "references"),
         "budget": (*(f"kind_{source}" for source in sources), "first_resolved_time", "resolve_at"),
         "companions": ("discarded_weight", "time_step", "sites", "seconds"),
+        "stretch": ("resolve_at", "reach"),
     }
     return required.get(head, ())
 
@@ -186,6 +215,8 @@ def _budget_variables(name: str) -> dict[str, Variable]:
     table = {
         "error": Variable(("source", *dims), units, f"error of the {said} by source"),
         "bound": Variable(dims, units, f"rigorous bound on the real-time truncation error of the {said}"),
+        "layer_bound": Variable(dims, units, f"rigorous bound on that error by the angles of layers, {said}"),
+        "light_cone_bound": Variable(dims, units, f"rigorous bound on that error by cuts in reach, {said}"),
         "numerical": Variable(dims, units, f"summed numerical error of the {said}"),
         "numerical_norm": Variable(("time",), units, f"numerical error of the {said}, {RMS}"),
         "dominant_source": Variable(("time",), "1", f"largest source of error of the {said}", "int64"),
@@ -198,3 +229,35 @@ def _budget_variables(name: str) -> dict[str, Variable]:
         )
         table[f"{level}_deviation_norm"] = Variable(("time",), units, f"{deviation}, {RMS}")
     return table
+
+
+def stretch_rows(name: str, level: str) -> dict[str, Variable]:
+    """Return the variables of the stretch study of one observable against one theory."""
+    key, units, said = f"{name}_{level}", OBSERVABLES[name].units, f"{words(name)}, quantum minus {level}"
+    at_times, in_windows, of_fits = (
+        ("norm", "factor", "time"),
+        ("norm", "factor", "window"),
+        ("norm", "window"),
+    )
+    p = f"p of {said} ~ factor^-p"
+    return {
+        f"{key}_deviation": Variable(at_times, units, f"norm of {said}, at time/factor"),
+        f"{key}_numerical": Variable(at_times, units, f"numerical error of the norm of {said}"),
+        f"{key}_window_deviation": Variable(in_windows, units, f"norm of {said} over a part of the time"),
+        f"{key}_window_numerical": Variable(in_windows, units, f"numerical error of that norm of {said}"),
+        f"{key}_exponent": Variable(of_fits, "1", p, gaps=True),
+        f"{key}_uncertainty": Variable(of_fits, "1", f"uncertainty of {p}", gaps=True),
+        f"{key}_numerical_uncertainty": Variable(
+            of_fits, "1", f"part of numerical errors in the uncertainty of {p}", gaps=True
+        ),
+        f"{key}_change": Variable(of_fits, "1", f"change from smaller to larger factors of {p}", gaps=True),
+        f"{key}_used": Variable(
+            in_windows, "1", f"whether the fit has the factor: {p}", "int8", ("left_out", "used")
+        ),
+        f"{key}_finding": Variable(of_fits, "1", f"verdict on {p}", "int8", STRETCH_FINDINGS),
+    }
+
+
+def _stretch_variables() -> dict[str, Variable]:
+    rows = (stretch_rows(name, level) for name in OBSERVABLES for level in LEVELS)
+    return {key: row for table in rows for key, row in table.items()}

@@ -5,7 +5,7 @@ from __future__ import annotations
 import contextlib
 import json
 import os
-from collections.abc import Iterator, Mapping
+from collections.abc import Iterable, Iterator, Mapping
 from pathlib import Path
 from typing import Any
 
@@ -17,10 +17,11 @@ from tnquench.dataset.storage import encode
 from tnquench.dataset.variables import (
     COORDINATES,
     FILE_NAME,
-    FORMAT_VERSION,
     JSON_ATTRIBUTES,
     OBSERVABLES,
     OWN_COORDINATES,
+    PLAIN_VERSION,
+    SINCE,
     Variable,
     variables_of,
 )
@@ -98,10 +99,15 @@ def assemble_contents(
         "content": "run" if "quantum" in groups else "prediction",
         "observables": " ".join(_observables(groups)),
     }
-    said["provenance"] = {**_plain_attributes(provenance), "format_version": FORMAT_VERSION}
+    said["provenance"] = {**_plain_attributes(provenance), "format_version": _version_of(groups)}
     digest = digest_of_contents(Contents(variables=variables, attributes=said))
     said["provenance"] = {**said["provenance"], "digest": digest}
     return Contents(variables=variables, attributes=said)
+
+
+def _version_of(groups: Iterable[str]) -> int:
+    """Return the first version of the layout that has all groups: older programs read what they can."""
+    return max((SINCE.get(group, PLAIN_VERSION) for group in groups), default=PLAIN_VERSION)
 
 
 def _observables(groups: Mapping[str, Mapping[str, ArrayLike]]) -> list[str]:

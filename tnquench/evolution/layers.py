@@ -1,20 +1,22 @@
 """Layers of gates applied by a sweep of the orthogonality centre, and the ledger of what the cuts cost.
 
 The chain is in exact mixed canonical form at every cut, so each discarded weight is the true loss of squared
-norm and the angles arcsin sqrt(w) add up to a rigorous bound on the distance from the uncut state.
+norm and the angles arcsin sqrt(w) add up to a rigorous bound on the distance from the uncut state. What the
+cuts of one sweep lose is mutually orthogonal, so that a whole layer turns the state by less than the sum of
+its angles: the ledger keeps the weights of every layer apart.
 """
 
 from __future__ import annotations
 
 from collections.abc import Mapping
-from dataclasses import dataclass
+from dataclasses import dataclass, field
 
 import numpy as np
 
 from tnquench.conventions import Reals
 from tnquench.errors import StateError
 from tnquench.evolution.chain_state import ChainState, move_centre
-from tnquench.evolution.cutting import Cut, CutRule, cut
+from tnquench.evolution.cutting import GRAM_FLOOR, Cut, CutRule, cut
 from tnquench.evolution.gates import Gate, apply_gate
 
 
@@ -28,6 +30,10 @@ class CutLedger:
     (bond,)
     fallbacks        : singular value decompositions that needed the slower driver
     log_norm         : logarithm of the norm removed by non-unitary gates
+    layers           : for each layer the direction of its sweep (True: rightwards) and its weights (bond,)
+    two_sided        : all cuts kept Schmidt vectors (up to rounding), so that each is the image of a
+    projector on the sites of either side of its bond. The subspace method's is one on the side that the sweep
+    has passed
     """
 
     discarded_weight: Reals
@@ -36,14 +42,22 @@ class CutLedger:
     fallbacks: int = 0
     log_norm: float = 0.0
     cuts: int = 0
+    layers: list[tuple[bool, Reals]] = field(default_factory=list)
+    two_sided: bool = True
 
     @classmethod
     def empty(cls, sites: int) -> CutLedger:
         """Return a ledger without entries for a chain of so many sites."""
         return cls(np.zeros(sites - 1), np.zeros(sites - 1), np.zeros(sites - 1))
 
+    def open_layer(self, *, rightwards: bool) -> None:
+        """Begin a sweep, to whose layer the following cuts belong."""
+        self.layers.append((rightwards, np.zeros_like(self.discarded_weight)))
+
     def enter(self, bond: int, result: Cut, rule: CutRule) -> None:
         """Add one cut."""
+        self.layers[-1][1][bond] = min(result.discarded_weight + result.uncertainty, 1.0)
+        self.two_sided &= rule.method != "subspace" or rule.weight_target < GRAM_FLOOR
         self.discarded_weight[bond] += result.discarded_weight
         self.angle[bond] += np.arcsin(np.sqrt(min(result.discarded_weight + result.uncertainty, 1.0)))
         self.ceiling_cuts[bond] += (
@@ -61,7 +75,9 @@ def apply_layer(state: ChainState, gates: Mapping[int, Gate], rule: CutRule, led
     Raises StateError if the state no longer holds finite numbers.
     """
     last = state.sites - 1
-    if 2 * state.centre <= last:
+    rightwards = 2 * state.centre <= last
+    ledger.open_layer(rightwards=rightwards)
+    if rightwards:
         move_centre(state, 0)
         for bond in sorted(gates):
             move_centre(state, bond)

@@ -4,7 +4,7 @@ from __future__ import annotations
 
 import time
 from collections.abc import Callable, Iterable, Mapping, Sequence
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 
 import numpy as np
 
@@ -12,6 +12,7 @@ from tnquench.conventions import CURRENTS, Integers, Reals
 from tnquench.evolution.chain_state import ChainState
 from tnquench.evolution.cutting import BOND_FLOOR, CutRule
 from tnquench.evolution.layers import CutLedger
+from tnquench.evolution.light_cone import CutTrail, trail_of
 from tnquench.evolution.preparation import Preparation, prepare
 from tnquench.evolution.real_time import Moment, evolve
 from tnquench.evolution.trotter import SCHEMES
@@ -75,6 +76,9 @@ class QuantumRecord:
     start_error : estimated error of each observable in the start
     totals : each conserved total (time,), by name: see `conserved_totals`; events : what the user must know,
     with its time; seconds, cpu_seconds : wall and processor time; cuts (time,) : real-time cuts made so far
+    weight_asked, time_step : settings of the run, nan where they are not known
+    trail : what each cut lost, and how far it can be felt; last_state : at the last sample; both None where
+    they were not kept
     """
 
     times: Reals
@@ -94,6 +98,10 @@ class QuantumRecord:
     cpu_seconds: float
     cuts: Reals
     peak_state_bytes: int
+    weight_asked: float = float("nan")
+    time_step: float = float("nan")
+    trail: CutTrail | None = None
+    last_state: ChainState | None = None
 
 
 def simulate(quench: Quench, *, report: Callable[[Progress], None] | None = None) -> QuantumRecord:
@@ -122,6 +130,7 @@ def simulate(quench: Quench, *, report: Callable[[Progress], None] | None = None
         bond_floor=quench.bond_floor,
         method=quench.cutting,
     )
+    moment = None
     for moment in evolve(
         start.state,
         chain.bond_terms,
@@ -133,21 +142,38 @@ def simulate(quench: Quench, *, report: Callable[[Progress], None] | None = None
         after_layer=_progress_reporter(report),
     ):
         diary.write(moment)
-    events = list(diary.events)
-    if not start.reached:
-        detail = (
-            f"state within {start.distance:.1e} of the exact start, {quench.preparation_distance:.1e} asked"
-        )
-        events.insert(0, {"kind": "preparation", "detail": detail})
-    return diary.record(
+    assert moment is not None, "the start is a moment"
+    record = diary.record(
         charges=tuple(chain.charges),
         norms={name: largest_norm(members) for name, members in operators.items()},
         start=start,
         start_error=start_error,
-        events=tuple(events),
+        events=(*_start_events(start, quench), *diary.events),
         seconds=time.perf_counter() - began,
         cpu_seconds=time.process_time() - cpu,
     )
+    return replace(
+        record,
+        weight_asked=quench.discarded_weight,
+        time_step=quench.time_step,
+        trail=trail_of(
+            moment.cuts,
+            chain,
+            operators,
+            every=quench.every,
+            steps=quench.steps,
+            scheme=SCHEMES[quench.trotter_order],
+        ),
+        last_state=moment.state,
+    )
+
+
+def _start_events(start: Preparation, quench: Quench) -> list[dict[str, object]]:
+    """Return the event of a start that is not as near to the exact one as asked."""
+    if start.reached:
+        return []
+    detail = f"state within {start.distance:.1e} of the exact start, {quench.preparation_distance:.1e} asked"
+    return [{"kind": "preparation", "detail": detail}]
 
 
 def _start_error(meter: LocalObservables, start: Preparation) -> dict[str, float]:

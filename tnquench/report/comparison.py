@@ -37,7 +37,7 @@ class Comparison:
     deviation : quantum minus prediction; resolved : the verdict on it
     numerical : summed numerical error, None where no companion runs measured it; errors : the same by source,
     each an estimate or a bound as kinds says
-    bound : rigorous, on truncation alone
+    bound : rigorous, on truncation alone; tighter : another one, by the cuts in reach of each point
     deviation_norm, numerical_norm (time,) : norms over the light-cone window; dominant : one source a time
     light_cone : leftmost and rightmost velocity of the prediction; reach : how far from x = 0 the start
     varies; joined : the start joins halves at x = 0
@@ -66,6 +66,7 @@ class Comparison:
     light_cone: tuple[float, float] | None
     reach: float
     joined: bool
+    tighter: Reals | None = None
 
     def axis_label(self, unit: str) -> str:
         """Return the label of an axis of a figure with values of the observable in `unit`."""
@@ -154,6 +155,7 @@ def compare(run: Run, name: str) -> Comparison:
         light_cone=(float(cone[0]), float(cone[1])) if cone[0] is not None and cone[1] is not None else None,
         reach=float(theory.attrs.get("light_cone_reach", SHARP_REACH)),
         joined=is_step(settings),
+        tighter=_values(budget, "light_cone_bound"),
     )
 
 

@@ -15,7 +15,10 @@ from tnquench.report.maps import map_note, map_plate
 from tnquench.report.models import words_of
 from tnquench.report.overlays import overlay_note, overlay_plate
 from tnquench.report.question import settings_of, subject
-from tnquench.report.sources import budget_plate, start_plate
+from tnquench.report.sources import advice_of, budget_plate, start_plate
+from tnquench.report.stretch import stretch_note, stretch_summary, stretched
+from tnquench.report.stretch_figures import stretch_plate
+from tnquench.report.tables import Summary
 from tnquench.report.traces import conservation_plate, growth_plate
 from tnquench.report.units import units_of
 
@@ -25,12 +28,13 @@ MANY = 4
 
 @dataclass(frozen=True)
 class Chapter:
-    """A section of the report: its anchor, its heading, how to read it, and its plates."""
+    """A section of the report: its anchor, its heading, how to read it, its plates and perhaps a table."""
 
     anchor: str
     heading: str
     note: str
     plates: tuple[Plate, ...]
+    table: Summary | None = None
 
 
 def comparisons(run: Run) -> tuple[list[Comparison], list[Comparison]]:
@@ -74,7 +78,11 @@ def chapters(run: Run, fields: list[Comparison]) -> list[Chapter]:
     if compared:
         found.append(_alone("start", start_plate(compared)))
     if budgeted := _budgeted(first):
-        found.append(_alone("budget", budget_plate(budgeted)))
+        found.append(_alone("budget", budget_plate(budgeted, advice=advice_of(run))))
+    if studies := stretched(run, first):
+        plates = (stretch_plate(studies),)
+        table = stretch_summary(stretched(run, fields))
+        found.append(Chapter("stretch", plates[0].heading, stretch_note(studies), plates, table))
     if len(run.quantum):
         units = units_of(settings)
         found += [

@@ -17,7 +17,15 @@ from tnquench.report.figures import Chapter, chapters, comparisons
 from tnquench.report.models import words_of
 from tnquench.report.provenance import event_remarks, event_rows, notices, provenance_rows
 from tnquench.report.question import absence, question, settings_of, subject
-from tnquench.report.references import CUT_KEYS, EULER_KEYS, QUANTUM_KEYS, TROTTER_KEYS, citations
+from tnquench.report.references import (
+    CUT_KEYS,
+    EULER_KEYS,
+    QUANTUM_KEYS,
+    STRETCH_KEYS,
+    TROTTER_KEYS,
+    citations,
+)
+from tnquench.report.stretch import stretch_sentence
 from tnquench.report.tables import summary
 from tnquench.report.units import units_of
 from tnquench.report.verdict import headline, remarks
@@ -72,6 +80,7 @@ def render_page(run: Run, figures: Path) -> str:
         question=[(heading, unbroken(text)) for heading, text in question(run, settings)],
         kind=KINDS[(bool(len(run.quantum)), bool(run.hydrodynamics))],
         verdict=unbroken(headline(drawn, about=subject(settings), absence=absence(run))),
+        study=unbroken(stretch_sentence(run, drawn, about=subject(settings))),
         notices=[unbroken(notice) for notice in notices(run)],
         remarks=[*remarks(zero), *event_remarks(run)],
         summary=summary(drawn),
@@ -93,6 +102,7 @@ def _chapter(chapter: Chapter, figures: Path) -> dict[str, Any]:
         "anchor": chapter.anchor,
         "heading": chapter.heading,
         "note": chapter.note,
+        "table": chapter.table,
         "plates": [
             {
                 "heading": plate.heading,
@@ -118,6 +128,7 @@ def _references(run: Run, settings: dict[str, Any]) -> list[str]:
         keys += [*words.references, *QUANTUM_KEYS]
         keys += TROTTER_KEYS.get(evolution.get("trotter_order", 4), ())
         keys += CUT_KEYS.get(evolution.get("cut", "subspace"), ())
+    keys += STRETCH_KEYS if len(run.stretch) else ()
     for theory in run.hydrodynamics.values():
         keys += [*EULER_KEYS, *words.solution]
         named = theory.attrs.get("references", [])

@@ -12,10 +12,14 @@ REFERENCES: dict[str, str] = {
     "castro_alvaredo_2016": "O. A. Castro-Alvaredo, B. Doyon and T. Yoshimura, Emergent hydrodynamics in "
     "integrable "
     "quantum systems out of equilibrium, Phys. Rev. X 6, 041065 (2016).",
+    "de_nardis_2018": "J. De Nardis, D. Bernard and B. Doyon, Hydrodynamic diffusion in integrable systems, "
+    "Phys. Rev. Lett. 121, 160603 (2018).",
     "doyon_2018": "B. Doyon, H. Spohn and T. Yoshimura, A geometric viewpoint on generalized hydrodynamics, "
     "Nucl. Phys. B 926, 570 (2018).",
     "eckart_1936": "C. Eckart and G. Young, The approximation of one matrix by another of lower rank, "
     "Psychometrika 1, 211 (1936).",
+    "fagotti_2017": "M. Fagotti, Higher-order generalized hydrodynamics in one dimension: the noninteracting "
+    "test, Phys. Rev. B 96, 220302 (2017).",
     "jordan_1928": "P. Jordan and E. Wigner, Über das Paulische Äquivalenzverbot, Z. Phys. 47, 631 (1928).",
     "karrasch_2012": "C. Karrasch, J. H. Bardarson and J. E. Moore, Finite-temperature dynamical density "
     "matrix "
@@ -55,6 +59,9 @@ QUANTUM_KEYS: tuple[str, ...] = (
     "eckart_1936",
     "mclachlan_1995",
 )
+
+#: Behind the orders that a stretch study tells apart.
+STRETCH_KEYS: tuple[str, ...] = ("de_nardis_2018", "fagotti_2017")
 
 #: Behind the Suzuki-Trotter scheme of each order, and behind each method that cuts a bond.
 TROTTER_KEYS: dict[int, tuple[str, ...]] = {2: ("strang_1968",), 4: ("mclachlan_1995",)}

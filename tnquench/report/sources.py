@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import re
 from functools import partial
 
 import numpy as np
@@ -9,6 +10,7 @@ from matplotlib.axes import Axes
 from matplotlib.figure import FigureBase
 
 from tnquench.conventions import Reals
+from tnquench.dataset.reader import Run
 from tnquench.report.canvas import FAINT, INK, PREDICTION, QUANTUM, SOURCE_STYLES, Panel, Plate, axes_at
 from tnquench.report.comparison import NOTHING_PREDICTED, Comparison, Verdicts, numerical_sources
 from tnquench.report.maps import X_LABEL
@@ -18,6 +20,7 @@ from tnquench.report.wording import (
     SOURCE_NAMES,
     capitalised,
     labelled,
+    number,
     plain,
     quantity,
     typeset,
@@ -29,10 +32,22 @@ START = (5.6, 2.9)
 THEORY_SOURCES = ("prediction_grid", "strings")
 #: The axis ends this far below the smaller of deviation and summed error; a source below it is negligible.
 NEGLIGIBLE = 1e-4
+#: A number in the notation of a computer, as the advice has it.
+POWER = re.compile(r"\d\.\d+e[+-]\d+")
 
 
-def budget_plate(fields: list[Comparison]) -> Plate:
-    """Return each source of error against time, one panel an observable, as norms inside the light cone."""
+def advice_of(run: Run) -> str:
+    """Return what the dataset says of dominant sources and of what would help; empty where it is silent."""
+    advice = run.provenance.get("advice")
+    sentences = advice.get("sentences", []) if isinstance(advice, dict) else []
+    return POWER.sub(lambda found: number(float(found.group())), " ".join(map(str, sentences)))
+
+
+def budget_plate(fields: list[Comparison], *, advice: str = "") -> Plate:
+    """Return each source of error against time, one panel an observable, as norms inside the light cone.
+
+    advice : sentences that end the caption
+    """
     panels = tuple(
         Panel(
             f"{field.name}_budget",
@@ -48,10 +63,15 @@ def budget_plate(fields: list[Comparison]) -> Plate:
         caption += ", sources in the order of their size at the end"
     caption += (
         ". Dashed grey: the rigorous bound on what the cuts of the real-time evolution can do, which needs "
-        "no estimate (start and step are not in it)."
+        "no estimate (start and step are not in it)"
     )
+    if any(field.tighter is not None for field in fields):
+        caption += "; dotted grey: the tighter one that counts only what the cuts in reach of a point can do"
+    caption += "."
     if any(field.deviation is not None and field.errors for field in fields):
         caption += " Where the black line leaves the shaded sum, it is the theory that fails."
+    if advice:
+        caption += f" {advice}"
     return Plate("budget", "Error budget", caption, panels, columns=2)
 
 
@@ -120,7 +140,8 @@ def _draw_budget(field: Comparison, figure: FigureBase) -> None:
         if field.prediction is not None or source not in THEORY_SOURCES
     }
     bound = None if field.bound is None else field.norm(field.bound)
-    low, high = _range([field.deviation_norm, field.numerical_norm], [*norms.values(), bound])
+    tighter = None if field.tighter is None else field.norm(field.tighter)
+    low, high = _range([field.deviation_norm, field.numerical_norm], [*norms.values(), bound, tighter])
     if field.deviation_norm is not None:
         axes.plot(t, _above(field.deviation_norm, low), color=INK, lw=2.0, label="deviation")
     if field.numerical_norm is not None:
@@ -131,6 +152,8 @@ def _draw_budget(field: Comparison, figure: FigureBase) -> None:
         _draw_source(axes, field, source, norm, low)
     if bound is not None:
         axes.plot(t, _above(bound, low), "--", color=FAINT, lw=1.3, label="truncation,\nrigorous bound")
+    if tighter is not None:
+        axes.plot(t, _above(tighter, low), ":", color=FAINT, lw=1.5, label="cuts in reach,\nrigorous bound")
     said = typeset(labelled("norm", field.unit))
     axes.set(title=capitalised(field.said), xlabel=field.units.time_label, ylabel=said)
     axes.set_xlim(0.0, float(t[-1]) or 1.0)

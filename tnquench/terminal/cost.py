@@ -51,6 +51,22 @@ def cost_numbers(config: Config, quench: Quench, forecast: Forecast, *, threads:
     }
 
 
+def with_study(numbers: dict[str, Any], stretched: Mapping[float, dict[str, Any]]) -> dict[str, Any]:
+    """Return the forecast of a run with that of its stretch study; unchanged without one.
+
+    stretched : numbers of each stretched run by factor; they stand under "stretched", and wall time, memory
+    and disk of the whole become those of all runs, one after the other
+    """
+    if not stretched:
+        return numbers
+    family = [numbers, *stretched.values()]
+    whole: dict[str, Any] = {
+        name: sum(run[name] for run in family) for name in ("wall_seconds", "disk_bytes", "pilot_seconds")
+    }
+    whole |= {name: max(run[name] for run in family) for name in ("memory_bytes", "total_memory_bytes")}
+    return numbers | whole | {"stretched": [{"factor": factor} | run for factor, run in stretched.items()]}
+
+
 def cost_rows(numbers: Mapping[str, Any]) -> Iterator[tuple[str, str]]:
     """Yield the forecast as pairs of a name and a value with its unit."""
     times, bonds = numbers["time"], numbers["bond_dimension"]
@@ -59,9 +75,16 @@ def cost_rows(numbers: Mapping[str, Any]) -> Iterator[tuple[str, str]]:
     weight, step = plain(numbers["discarded_weight"]), plain(numbers["time_step"])
     yield f"main run (discarded weight {weight}, time step {step})", duration(numbers["main_seconds"])
     yield f"its {numbers['companions']} companions together", duration(numbers["companion_seconds"])
+    for run in numbers.get("stretched", ()):
+        bonds, seconds = run["bond_dimension"][-1], run["main_seconds"] + run["companion_seconds"]
+        said = (
+            f"stretched by {plain(run['factor'])}, to t = {plain(run['time'][-1])} (bond dimension {bonds})"
+        )
+        yield f"{said}, with companions", duration(seconds)
     threads = "1 thread" if numbers["threads"] == 1 else f"{numbers['threads']} threads"
     yield f"all simulations on {threads}", duration(numbers["wall_seconds"])
-    yield "memory of the main run", size(numbers["memory_bytes"])
+    largest = "largest" if "stretched" in numbers else "main"
+    yield f"memory of the {largest} run", size(numbers["memory_bytes"])
     yield f"memory of all processes on {threads}, at most", size(numbers["total_memory_bytes"])
     yield "dataset on disk; report and figures add a few MB", size(numbers["disk_bytes"])
 

@@ -11,6 +11,7 @@ from tnquench.dataset.reader import open_run
 from tnquench.report.figures import comparisons
 from tnquench.report.provenance import event_remarks, notices
 from tnquench.report.question import absence, settings_of, subject
+from tnquench.report.stretch import stretch_sentence
 from tnquench.report.verdict import headline
 
 
@@ -25,5 +26,7 @@ def findings(folder: Path) -> list[str]:
     """Return the verdict of the dataset in `folder`, its extra terms and its events, one sentence each."""
     run = open_run(folder)
     drawn, _ = comparisons(run)
-    verdict = headline(drawn, about=subject(settings_of(run)), absence=absence(run))
-    return [verdict, *notices(run), *event_remarks(run)]
+    about = subject(settings_of(run))
+    study = stretch_sentence(run, drawn, about=about)
+    verdict = headline(drawn, about=about, absence=absence(run))
+    return [verdict, *([study] if study else []), *notices(run), *event_remarks(run)]

@@ -1,0 +1,32 @@
+"""The command `refine`."""
+
+from __future__ import annotations
+
+from pathlib import Path
+from typing import Annotated
+
+import typer
+
+from tnquench.refine import refine
+from tnquench.terminal.display import watching
+from tnquench.terminal.summary import show_findings
+
+
+def refine_command(
+    dataset: Annotated[Path, typer.Argument(metavar="FOLDER", help="The folder of a run, or its run.h5.")],
+    weight: Annotated[
+        float | None, typer.Option(metavar="W", help="New discarded weight; default: a tenth of the old one.")
+    ] = None,
+    step: Annotated[
+        float | None, typer.Option(metavar="DT", help="New time step; default: the old one.")
+    ] = None,
+) -> None:
+    """Add a tighter main run to a finished run, which becomes a companion of it.
+
+    Only the new main run is simulated; the errors are judged by the runs that are there. run.h5 and the
+    report are replaced at the end; the folder's path is printed.
+    """
+    with watching() as watch:
+        folder = refine(dataset, weight=weight, time_step=step, watch=watch)
+    show_findings(folder)
+    typer.echo(str(folder))
