@@ -24,8 +24,9 @@ FIRST_STRINGS, STRINGS_BY_ETA, WIDE_STRINGS = 1, 5.0, 4
 DEFAULT_ACCURACY = 1e-9
 ACCURACY_LIMIT = 1e-4
 
-#: Rounding, as a fraction of the value's scale: the smallest error ever claimed.
-ROUNDING = 1e-13
+#: Rounding, as a fraction of the value's scale (of variances ROUNDED_SHARE times theirs, as they are sums
+#: that cancel) and growing with every ROUNDED_STRINGS strings: the smallest error ever claimed.
+ROUNDING, ROUNDED_SHARE, ROUNDED_STRINGS = 1e-13, 10.0, 10
 
 #: Movements under refinement are taken to fall by a factor between these two; the error is what remains of
 #: the geometric series. From 2/3 on (N^-1 in the number of strings) nothing is known.
@@ -125,6 +126,16 @@ class _Task:
         }
         return {key: max(scales[key], abs(values[key])) for key in KEYS}
 
+    def rounding(self, sizes: Values, strings: int) -> Values:
+        """Return what rounding leaves of values whose errors are compared to `sizes`."""
+        energy = self.coupling + self.field
+        least = {
+            "specific_heat": ROUNDED_SHARE * SMALL_VARIANCE * (self.beta * energy) ** 2,
+            "susceptibility": ROUNDED_SHARE * SMALL_VARIANCE * self.beta,
+        }
+        share = ROUNDING * max(1.0, strings / ROUNDED_STRINGS)
+        return {key: share * max(sizes[key], least.get(key, 0.0)) for key in KEYS}
+
     def refined(self) -> tuple[Values, Values, float]:
         """Return values, errors and the largest error relative to its scale.
 
@@ -143,7 +154,8 @@ class _Task:
             values = values if level == nodes else self.values(strings, level)
             moved = {key: abs(values[key] - coarse[key]) for key in KEYS}
             sizes, share = self.sizes(values), LEAST_RATIO / (1.0 - LEAST_RATIO)
-            errors = {key: missed[key] + share * moved[key] + ROUNDING * sizes[key] for key in KEYS}
+            rounding = self.rounding(sizes, STRINGS[strings])
+            errors = {key: missed[key] + share * moved[key] + rounding[key] for key in KEYS}
             if self._size({key: share * moved[key] for key in KEYS}, sizes) <= self.accuracy:
                 break
             coarse = values

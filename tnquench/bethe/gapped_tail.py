@@ -18,11 +18,9 @@ from __future__ import annotations
 from dataclasses import dataclass
 
 import numpy as np
+from scipy.linalg import lu_factor, lu_solve
 
 from tnquench.conventions import Reals
-
-#: Step of the differences in a that differentiate the tail's smoothing, in units of 1/(number of strings).
-FIELD_STEP = 0.1
 
 #: coth(x) - 1/x = x sum_k c_k x^(2k), highest power first, good to rounding below 0.3.
 LANGEVIN_SERIES = np.array(
@@ -123,12 +121,46 @@ def tail_correction(poisson: Reals, strings: int, a: float) -> Reals:
 
 
 def correction_derivatives(poisson: Reals, strings: int, a: float) -> tuple[Reals, Reals]:
-    """Return the first and second derivative of `tail_correction` by a, from five values (even in a).
+    """Return the first and second derivative of `tail_correction` by a, (node, node) each.
 
-    The correction itself is small, so differences are accurate enough.
+    From K = P U L^-1 - C_(N+1)/C_N with U, L = (1 - P^2) cosh(a) + (1 + P^2) C, C of N + 1 and N.
     """
-    step = FIELD_STEP / strings
-    values = [tail_correction(poisson, strings, abs(a + shift * step)) for shift in (-2, -1, 0, 1, 2)]
-    first = (values[0] - 8.0 * values[1] + 8.0 * values[3] - values[4]) / (12.0 * step)
-    second = -(values[0] + values[4]) + 16.0 * (values[1] + values[3]) - 30.0 * values[2]
-    return first, second / (12.0 * step**2)
+    lengths = strings + np.arange(2.0)
+    ratios, slopes, bends = _field_ratio_derivatives(lengths, a)
+    twice, unit = poisson @ poisson, np.eye(poisson.shape[0])
+    # of L and U, each: itself, first and second derivative
+    lower, upper = (
+        [
+            (unit - twice) * hyperbolic + (unit + twice) * ratio
+            for hyperbolic, ratio in zip((np.cosh(a), np.sinh(a), np.cosh(a)), parts, strict=True)
+        ]
+        for parts in zip(ratios, ratios * slopes, ratios * (bends + slopes**2), strict=True)
+    )
+    factors = lu_factor(lower[0].T)
+
+    def over_lower(matrix: Reals) -> Reals:
+        return np.asarray(lu_solve(factors, matrix.T).T)
+
+    quotient = over_lower(upper[0])
+    first = over_lower(upper[1] - quotient @ lower[1])
+    second = over_lower(upper[2] - 2.0 * first @ lower[1] - quotient @ lower[2])
+    step, ratio = slopes[1] - slopes[0], ratios[1] / ratios[0]
+    return (
+        np.asarray(poisson @ first - ratio * step * unit),
+        np.asarray(poisson @ second - ratio * (bends[1] - bends[0] + step**2) * unit),
+    )
+
+
+def _field_ratio_derivatives(lengths: Reals, a: float) -> tuple[Reals, Reals, Reals]:
+    """Return C_n = sinh(a) coth(nu a), nu = n + 1, and the first and second derivative of ln C_n, (length,).
+
+    (ln C_n)' = coth(a) - 2 nu/sinh(2 nu a), where 1/sinh(y) = coth(y/2) - coth(y).
+    """
+    multiples = lengths + 1.0
+    own, half, full = (_langevin(np.asarray(x)) for x in (a, multiples * a, 2.0 * multiples * a))
+    ratios = np.array([field_ratio(float(length), a) for length in lengths])
+    return (
+        ratios,
+        np.asarray(own[0] - 2.0 * multiples * (half[0] - full[0])),
+        np.asarray(own[1] - 4.0 * multiples**2 * (0.5 * half[1] - full[1])),
+    )

@@ -7,7 +7,7 @@ from dataclasses import dataclass
 import numpy as np
 from scipy.special import sici
 
-from tnquench.bethe.grid import interpolate
+from tnquench.bethe.grid import interpolation_matrix, unit_of_rapidity
 from tnquench.conventions import Integers, Reals
 from tnquench.hydro.mesh import RapidityMesh
 
@@ -103,7 +103,8 @@ def _extrema(mesh: RapidityMesh, slopes: Reals, samples: Reals) -> tuple[Integer
 def _velocity_at(mesh: RapidityMesh, slopes: Reals, row: Integers, position: Reals) -> Reals:
     """Return v_eff of the rows ray*strings + string at mesh positions, shape (row,)."""
     ray, string = np.divmod(row, mesh.model.strings)
-    matrix = interpolate(mesh.grid, np.eye(mesh.model.nodes), mesh.layout.rapidities(position)).T
+    units = unit_of_rapidity(mesh.grid, mesh.layout.rapidities(position))
+    matrix = interpolation_matrix(mesh.grid, units)
     energy, momentum = (np.einsum("rn,rn->r", slopes[ray, k, string], matrix) for k in (0, 1))
     return np.asarray(energy / momentum)
 

@@ -10,7 +10,7 @@ SIAM Review 56, 385 (2014)).
 from __future__ import annotations
 
 from dataclasses import dataclass
-from functools import lru_cache
+from functools import cached_property, lru_cache
 
 import numpy as np
 from scipy.linalg import lu_factor, lu_solve
@@ -53,13 +53,20 @@ class Layout:
 
     def rapidities(self, positions: Reals) -> Reals:
         """Return the rapidities at tau = positions, any shape, by Newton's method from a table."""
-        middle = 0.5 * (self.points - 1)
-        table = np.linspace(-2.0 * MESH_REACH, 2.0 * MESH_REACH, 4 * self.points)
-        rapidities = np.interp(positions - middle, self._count(table), table)
+        counts = positions - 0.5 * (self.points - 1)
+        if np.isinf(self.core_spacing):
+            return np.asarray(self.spacing * counts)
+        rapidities = np.interp(counts, *self._table)
         for _ in range(NEWTON_STEPS):
-            excess = self._count(rapidities) - (positions - middle)
+            excess = self._count(rapidities) - counts
             rapidities = rapidities - excess * self.weights(rapidities)
         return np.asarray(rapidities)
+
+    @cached_property
+    def _table(self) -> tuple[Reals, Reals]:
+        """Counts and rapidities between which Newton's method starts."""
+        rapidities = np.linspace(-2.0 * MESH_REACH, 2.0 * MESH_REACH, 4 * self.points)
+        return self._count(rapidities), rapidities
 
     def _count(self, rapidities: Reals) -> Reals:
         return np.asarray(rapidities / self.spacing + np.tanh(rapidities) / self.core_spacing)

@@ -17,8 +17,8 @@ from tnquench.hydro.mesh import OBSERVABLES, RapidityMesh, rapidity_mesh, unifor
 from tnquench.hydro.predicted import Prediction as Prediction
 from tnquench.hydro.predicted import rays_to, refuse_reflection, wall_of
 from tnquench.hydro.refinement import Refined, refine
+from tnquench.hydro.smooth import COMBINED_LEVELS, SmoothStart, initial_light_cone, smooth_averages
 from tnquench.hydro.smooth import LEVELS as SMOOTH_LEVELS
-from tnquench.hydro.smooth import SmoothStart, initial_light_cone, smooth_averages
 from tnquench.hydro.thermal_states import State, thermal_on_mesh
 
 #: Smooth nodes a string and mesh spacing, in crossing angles, of successive refinements of joined halves.
@@ -26,11 +26,11 @@ STEP_LEVELS: tuple[tuple[int, float], ...] = ((32, 0.11), (48, 0.085), (64, 0.07
 
 #: Change at which refinement stops, and error that it cannot see: the cut rapidity mesh and iterations, for
 #: smooth profiles also the expansion of thermal states.
-STEP_TARGET, STEP_FLOOR = 1e-8, 1e-10
+STEP_TARGET, STEP_FLOOR = 5e-9, 1e-10
 SMOOTH_TARGET, SMOOTH_FLOOR = 1e-6, 1e-8
 
-#: Target of joined halves at the anisotropies between which others are combined.
-COMBINED_TARGET = 1e-6
+#: Targets of joined halves and of smooth profiles at the anisotropies between which others are combined.
+COMBINED_TARGET, COMBINED_SMOOTH_TARGET = 1e-6, 3e-6
 
 #: Kinks, as at ends where a profile is not flat, converge too slowly for more levels to be worth their cost.
 SMOOTH_GAIN = 1.5
@@ -145,14 +145,16 @@ def predict_smooth(
         raise InputError(subject, [problem])
     places = np.concatenate([sites, bonds])
     way = between(anisotropy)
+    combined = len(way.anisotropies) > 1
+    levels = COMBINED_LEVELS if combined else SMOOTH_LEVELS
 
     def refined(value: float) -> Refined:
         here = replace(start, anisotropy=value)
         return refine(
-            lambda level, some: smooth_averages(here, SMOOTH_LEVELS[level], some, places),
+            lambda level, some: smooth_averages(here, levels[level], some, places),
             times,
-            levels=len(SMOOTH_LEVELS),
-            target=SMOOTH_TARGET,
+            levels=len(levels),
+            target=COMBINED_SMOOTH_TARGET if combined else SMOOTH_TARGET,
             floor=SMOOTH_FLOOR,
             least_gain=SMOOTH_GAIN,
         )
