@@ -109,7 +109,7 @@ def test_specific_heat_maximum_of_the_heisenberg_chain() -> None:
 
 @pytest.mark.literature
 def test_susceptibility_maximum_of_the_heisenberg_chain() -> None:
-    """chi_max = 0.146926 /J at T = 0.640851 J.
+    """The largest chi is 0.146926 /J, at T = 0.640851 J.
 
     Source: as above; from memory, hence compared to five digits.
     """
