@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+from collections.abc import Iterator
 from pathlib import Path
 
 import numpy as np
@@ -20,11 +21,11 @@ WEIGHT = 1e-9
 
 
 @pytest.fixture(scope="module")
-def patched() -> pytest.MonkeyPatch:
-    patch = pytest.MonkeyPatch()
-    for module in (run, refine):
-        patch.setattr(module, "write_report", lambda _folder: None)  # seconds, and not in question
-    return patch
+def patched() -> Iterator[pytest.MonkeyPatch]:
+    with pytest.MonkeyPatch.context() as patch:
+        for module in (run, refine):
+            patch.setattr(module, "write_report", lambda _folder: None)  # seconds, and not in question
+        yield patch
 
 
 @pytest.fixture(scope="module")
