@@ -19,7 +19,7 @@ from tnquench.dataset.writer import write_run
 from tnquench.errors import InputError
 from tnquench.judge.points import OBSERVABLES, Points
 from tnquench.outcome import run_pieces
-from tnquench.run import SILENT, quantum_side
+from tnquench.quantum_of import SILENT, quantum_side
 
 Columns = dict[str, Reals]
 Field = Callable[[Reals, Reals], Reals]

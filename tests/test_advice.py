@@ -38,7 +38,9 @@ from tnquench.errors import StateError
 from tnquench.model.chain import start_terms
 from tnquench.model.spins import xxz_chain
 from tnquench.observables.quench import QuantumRecord, Quench, simulate
+from tnquench.quantum_of import SILENT, simulate_all
 from tnquench.report.sources import advice_of
+from tnquench.stopping import Stop
 
 # The advice.
 
@@ -208,7 +210,7 @@ def test_a_run_goes_on_without_a_companion_that_fails(
         return simulate(quench, **options)
 
     monkeypatch.setattr(side_by_side, "simulate", failing)
-    side = run_module.simulate_all(main, runs, threads=1, watch=run_module.SILENT)
+    side = simulate_all(main, runs, threads=1, watch=SILENT)
     assert list(side.companions) == [LOOSE, LOOSER]
     assert list(side.companion_quenches) == [LOOSE, LOOSER]
     (event,) = side.failures
@@ -223,7 +225,8 @@ def test_a_process_that_is_ended_gets_a_second_try_of_its_own() -> None:
     pending: Future[QuantumRecord] = Future()
     pending.set_exception(BrokenProcessPool())
     quench = replace(free_quench(4), samples=1)
-    found = side_by_side.fetched(LOOSER, quench, pending)
+    task, stop = side_by_side.Task(LOOSER, quench), Stop()
+    found = side_by_side.fetched(task, side_by_side.Background(None, {LOOSER: pending}), stop)
     np.testing.assert_array_equal(found.fields["energy_density"], simulate(quench).fields["energy_density"])
     assert found.last_state is None
     assert "ended from outside" in str(side_by_side.failure_event(LOOSER, BrokenProcessPool())["detail"])

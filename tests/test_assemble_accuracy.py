@@ -12,7 +12,8 @@ from tnquench.config.schema import Config
 from tnquench.dataset.reader import open_run
 from tnquench.observables.quench import Quench
 from tnquench.outcome import QuantumSide
-from tnquench.run import SILENT, Watch, quantum_side, run
+from tnquench.quantum_of import SILENT, Watch, quantum_side
+from tnquench.run import run
 
 
 def test_an_accuracy_is_met_and_said_to_be(tmp_path: Path) -> None:
@@ -96,7 +97,7 @@ def test_repeats_mend_the_largest_source(
     steps: tuple[float, ...],
 ) -> None:
     """Pilot runs that chose badly: each repeat cuts less, or steps less, and the last one is admitted."""
-    monkeypatch.setattr("tnquench.run.choose_settings", lambda *_, **__: pilots)
+    monkeypatch.setattr("tnquench.quantum_of.choose_settings", lambda *_, **__: pilots)
     _, mains = missed(hard_config())
     assert [main.discarded_weight for main in mains] == pytest.approx(weights)
     assert [main.time_step for main in mains] == pytest.approx(steps)

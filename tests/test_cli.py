@@ -17,7 +17,7 @@ from tnquench import cli
 from tnquench.config.document import settings_page
 from tnquench.config.load import load_config, read_config
 
-COMMANDS = ("run", "forecast", "hydro", "thermo", "check", "report", "judge", "refine", "settings")
+COMMANDS = ("run", "forecast", "hydro", "thermo", "check", "report", "judge", "refine", "sweep", "settings")
 
 QUANTITIES = ("free_energy", "energy", "entropy", "magnetisation", "specific_heat", "susceptibility")
 

@@ -18,7 +18,8 @@ import typer
 
 from tests.command_line import Answer, call, config_file, start
 from tests.synthetic_run import NAMES, write_synthetic_run
-from tnquench import cli, open_run
+from tnquench import open_run
+from tnquench.checkpoints import CHECKPOINTS
 from tnquench.errors import ConvergenceError, StateError
 
 
@@ -47,7 +48,7 @@ def test_run_tells_each_stage_in_one_line_and_then_the_verdict(finished: tuple[P
 
 def test_run_leaves_dataset_report_and_figures(finished: tuple[Path, Answer]) -> None:
     folder, _ = finished
-    assert {entry.name for entry in folder.iterdir()} == {"run.h5", "report.html", "figures"}
+    assert {entry.name for entry in folder.iterdir()} == {"run.h5", "report.html", "figures", "checkpoints"}
     dataset = open_run(folder)
     assert set(NAMES) <= set(dataset.quantum)
     assert list(dataset.hydrodynamics) == ["euler"]
@@ -156,7 +157,7 @@ def failing(monkeypatch: pytest.MonkeyPatch, error: BaseException) -> None:
     def fail(*_words: object, **_options: object) -> NoReturn:
         raise error
 
-    monkeypatch.setattr(cli, "run", fail)
+    monkeypatch.setattr("tnquench.terminal.running.load_config", fail)
 
 
 FAILURES = [
@@ -193,7 +194,7 @@ def test_debug_shows_the_traceback(monkeypatch: pytest.MonkeyPatch, words: tuple
 
 
 @pytest.mark.parametrize(("sign", "threads"), [(signal.SIGINT, 1), (signal.SIGTERM, 2)])
-def test_interrupted_run_ends_cleanly(tmp_path: Path, sign: signal.Signals, threads: int) -> None:
+def test_interrupted_run_leaves_a_checkpoint(tmp_path: Path, sign: signal.Signals, threads: int) -> None:
     file = config_file(tmp_path, until=500.0, discarded_weight=1e-14)
     process = start("run", file, "--into", tmp_path / "results", "--threads", threads)
     assert process.stderr is not None
@@ -203,9 +204,11 @@ def test_interrupted_run_ends_cleanly(tmp_path: Path, sign: signal.Signals, thre
     time.sleep(0.5)
     process.send_signal(sign)
     out, err = process.communicate(timeout=20)
-    assert (process.returncode, out) == (130, "")
-    assert err == "tnquench: interrupted; no file is left half-written\n"
-    assert list((tmp_path / "results").iterdir()) == []
+    assert (process.returncode, out) == (3, "")
+    why = "interrupted" if sign == signal.SIGINT else "asked to end (SIGTERM)"
+    assert err == f"tnquench: stopped, {why}; the same command goes on from the checkpoints\n"
+    assert [entry.name for entry in (tmp_path / "results").iterdir()] == [CHECKPOINTS]
+    assert len(list((tmp_path / "results" / CHECKPOINTS).glob("main-*.h5"))) == 1
     assert group_is_gone(process.pid), "a companion goes on behind our back"
 
 

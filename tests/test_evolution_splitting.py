@@ -144,14 +144,14 @@ def test_gates_refuse_wrong_terms(term: Operator, complaint: str) -> None:
 def test_bonds_with_the_same_term_share_a_gate() -> None:
     chain = xxz_chain(sites=9, anisotropy=0.5)
     grading = derive_grading(chain.bond_terms)
-    built: list[int] = []
+    built: list[float] = []
 
-    def exponential(term: Operator, first: int, fraction: float) -> Gate:
-        built.append(first)
-        return real_time_gate(term, time=fraction, first=first, grading=grading)
+    def exponential(term: Operator, fraction: float) -> Gate:
+        built.append(fraction)
+        return real_time_gate(term, time=fraction, first=0, grading=grading)
 
     groups = split(chain.bond_terms, sites=9)
     gates = LayerGates(groups, grading, exponential)
     for layer in plan(groups, SCHEMES[2], 5):
         assert set(gates.of(layer)) == set(range(layer[0].group, 8, 2))
-    assert built == [0, 1], "half steps of even bonds at both ends, whole steps of both parities between"
+    assert built == [0.5, 1.0], "half steps of even bonds at both ends, whole steps of both parities between"

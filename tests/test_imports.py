@@ -17,6 +17,7 @@ RANKS = {
     "config": 1,
     "model": 1,
     "dataset": 1,
+    "stopping": 1,
     "evolution": 2,
     "bethe": 2,
     "observables": 3,
@@ -30,12 +31,15 @@ RANKS = {
     "prediction_of": 8,
     "assemble": 9,
     "outcome": 10,
+    "checkpoints": 10,
     "stretch_of": 11,
     "side_by_side": 11,
-    "run": 12,
-    "refine": 13,
-    "terminal": 14,
-    "cli": 15,
+    "quantum_of": 12,
+    "run": 13,
+    "refine": 14,
+    "terminal": 15,
+    "cli": 16,
+    "__main__": 17,
 }
 
 #: What the report may see: files, and the budget's norms and windows; any report can be rebuilt from its

@@ -1,13 +1,12 @@
 """The commands: arguments in, one documented function each, exit codes out. Nothing else ends the process.
 
 Results go to standard output, everything else to standard error. Exit codes: 0 done, 1 a failure of the
-program, 2 bad input, 4 a check whose answer is no, 130 interrupted.
+program, 2 bad input, 3 stopped with checkpoints, 4 a check whose answer is no, 130 interrupted.
 """
 
 from __future__ import annotations
 
 import json
-import os
 import sys
 import traceback
 from collections.abc import Sequence
@@ -30,19 +29,18 @@ from tnquench.config.load import load_config
 from tnquench.dataset.integrity import check_run
 from tnquench.errors import TnquenchError, VerdictNegative
 from tnquench.report.page import write_report
-from tnquench.run import forecast, forecast_stretched, hydro, run
+from tnquench.run import forecast, forecast_stretched, hydro
 from tnquench.terminal.cost import cost_numbers, cost_rows, with_study
 from tnquench.terminal.display import watching
 from tnquench.terminal.judging import judge_command
+from tnquench.terminal.options import AsJson, ConfigFile, Into, Threads, usable_cores
 from tnquench.terminal.refining import refine_command
-from tnquench.terminal.summary import show_findings
+from tnquench.terminal.running import run_command
+from tnquench.terminal.sweeping import sweep_command
 from tnquench.terminal.table import aligned, equilibrium_rows
 from tnquench.terminal.thermo import Scan, answer_thermo, plot_scan, scan_rows
 
 PROGRAM = "tnquench"
-
-#: A main run and its four companions: more processes would idle.
-MOST_THREADS = 5
 
 #: Exit codes that no exception of ours carries.
 DONE, DEFECT, BAD_INPUT, INTERRUPTED = 0, 1, 2, 130
@@ -79,15 +77,6 @@ def _setting(meaning: str) -> Any:
     return typer.Option(help=meaning, parser=_scan, metavar="X", show_default=False)
 
 
-ConfigFile = Annotated[Path, typer.Argument(metavar="CONFIG", help="TOML file with the settings.")]
-Into = Annotated[Path | None, typer.Option("--into", metavar="FOLDER", help="Where the dataset goes.")]
-Threads = Annotated[
-    int | None,
-    typer.Option(metavar="N", min=1, help=f"Processes at once; default: one a core, at most {MOST_THREADS}."),
-]
-AsJson = Annotated[bool, typer.Option("--json", help="Print JSON.")]
-
-
 def _show_version(wanted: bool) -> None:
     if wanted:
         try:
@@ -107,17 +96,9 @@ def _program(
     """Judge hydrodynamics of one-dimensional quantum chains against error-controlled exact dynamics."""
 
 
-@app.command("run", epilog=f"Example: {PROGRAM} run configs/demo.toml --into results/demo --threads 2")
-def run_command(config: ConfigFile, into: Into = None, threads: Threads = None) -> None:
-    """Simulate a config with its companions, predict, judge; write dataset and report.
-
-    The folder, results/NAME-OF-CONFIG unless given, holds run.h5, report.html and figures; its path is
-    printed. Results do not depend on the number of threads.
-    """
-    with watching() as watch:
-        folder = run(config, into=into, threads=threads or usable_cores(), watch=watch)
-    show_findings(folder)
-    typer.echo(str(folder))
+app.command("run", epilog=f"Example: {PROGRAM} run configs/demo.toml --into results/demo --threads 2")(
+    run_command
+)
 
 
 @app.command("forecast", epilog=f"Example: {PROGRAM} forecast configs/demo.toml --threads 2")
@@ -233,16 +214,15 @@ app.command("judge", epilog=f"Example: {PROGRAM} judge ghd.csv --against results
 app.command("refine", epilog=f"Example: {PROGRAM} refine results/demo --weight 1e-9")(refine_command)
 
 
+app.command("sweep", epilog=f"Example: {PROGRAM} sweep configs/sweep.toml --into results/sweep --jobs 4")(
+    sweep_command
+)
+
+
 @app.command("settings", epilog=f"Example: {PROGRAM} settings > settings.md")
 def settings_command() -> None:
     """Print the reference page of every setting of a config, as Markdown."""
     typer.echo(settings_page())
-
-
-def usable_cores() -> int:
-    """Return how many processes a run takes unless told otherwise."""
-    cores = len(os.sched_getaffinity(0)) if hasattr(os, "sched_getaffinity") else os.cpu_count() or 1
-    return min(MOST_THREADS, cores)
 
 
 def _as_json(numbers: dict[str, Any]) -> str:

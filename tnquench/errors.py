@@ -53,3 +53,13 @@ class ConvergenceError(TnquenchError):
 
 class StateError(TnquenchError):
     """The chain state lost its norm or holds values that are not numbers; carries a diagnosis."""
+
+
+class Stopped(TnquenchError):  # noqa: N818 - a pause, not a fault
+    """A run ended before its time and can go on; carries why."""
+
+    exit_code = 3
+
+    def __init__(self, why: str) -> None:
+        self.why = why
+        super().__init__(why)

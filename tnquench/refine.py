@@ -15,17 +15,21 @@ from threadpoolctl import threadpool_limits
 from tnquench.assemble import budget_settings, build_prediction, build_quench
 from tnquench.budget.assess import RunSettings
 from tnquench.budget.companions import COARSE, SHORT, WEIGHT, WEIGHT_RATIO, CompanionRun, partner
+from tnquench.checkpoints import CHECKPOINTS, Store
 from tnquench.config.load import read_config
 from tnquench.config.schema import Config
 from tnquench.config.stretch import Stretch
 from tnquench.conventions import OBSERVABLE_PLACES, Reals
+from tnquench.dataset.lock import folder_lock
 from tnquench.dataset.reader import Run, open_run
 from tnquench.dataset.writer import require_writable, write_run
 from tnquench.errors import InputError
-from tnquench.observables.quench import Quench, simulate
+from tnquench.observables.quench import Quench
 from tnquench.outcome import Pieces, QuantumSide, run_pieces
+from tnquench.quantum_of import MAIN, SILENT, Watch, stage_name
 from tnquench.report.page import write_report
-from tnquench.run import SILENT, Watch
+from tnquench.side_by_side import Task, carry_out
+from tnquench.stopping import Stop
 
 #: A new weight must be at most this fraction of the old one: runs at nearly equal weights differ by noise
 #: alone, and the budget believes no smaller ratio of lost weights.
@@ -44,25 +48,34 @@ class KeptRun:
 
 
 def refine(
-    folder: Path, *, weight: float | None = None, time_step: float | None = None, watch: Watch = SILENT
+    folder: Path,
+    *,
+    weight: float | None = None,
+    time_step: float | None = None,
+    watch: Watch = SILENT,
+    stop: Stop | None = None,
 ) -> Path:
     """Run the quench of a dataset again at a smaller weight and judge it by what is there; return the folder.
 
     folder : of the run, or its run.h5; weight : a tenth of the old one if not given; time_step : kept if not
     given. run.h5 is replaced at the end, whole or not at all. The old main run joins the companions; those it
     had follow, named by their weight over the new one. A stretch study is left out: it was of the old run.
-    Raises InputError if there is no such run, or for a weight or step that refines nothing.
+    stop : asked between layers whether to end; the same call goes on later
+    Raises InputError if there is no such run, or for a weight or step that refines nothing, Stopped where
+    `stop` ends it.
     """
     began, cpu = time.perf_counter(), time.process_time()
     old = open_run(folder)
     config, quench = refined_quench(old, weight=weight, time_step=time_step)
     place = old.path.parent
     require_writable(place)
-    with threadpool_limits(1):
+    with folder_lock(place), threadpool_limits(1):
         watch.stage("prediction", None)
         prediction, absence = build_prediction(config)
-        watch.stage("main run", quench)
-        main = simulate(quench, report=watch.progress)
+        store = Store(place / CHECKPOINTS)
+        store.folder.mkdir(exist_ok=True)
+        watch.stage(stage_name(store, MAIN, "main run", quench), quench)
+        main = carry_out(Task(MAIN, quench, store=store), stop or Stop(), watch.progress)
         watch.stage("budget and dataset", None)
         kept, unloosened = kept_runs(old, weight=quench.discarded_weight)
         side = QuantumSide(
@@ -74,10 +87,11 @@ def refine(
             settings=refined_settings(config, quench, kept, unloosened),
         )
         pieces = run_pieces(config, Path(str(old.provenance["config_file"])), side, prediction, absence)
-    _add_times(pieces, old, wall=time.perf_counter() - began, cpu=time.process_time() - cpu)
-    write_run(place, **pieces.as_arguments())
-    watch.stage("report", None)
-    write_report(place)
+        _add_times(pieces, old, wall=time.perf_counter() - began, cpu=time.process_time() - cpu)
+        write_run(place, **pieces.as_arguments())
+        store.belongs_to(config)
+        watch.stage("report", None)
+        write_report(place)
     return place
 
 

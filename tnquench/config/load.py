@@ -4,7 +4,8 @@ from __future__ import annotations
 
 import re
 import tomllib
-from collections.abc import Mapping, Sequence
+from collections.abc import Callable, Mapping, Sequence
+from functools import partial
 from pathlib import Path
 from typing import Any
 
@@ -18,35 +19,62 @@ from tnquench.config.messages import problem_lines
 from tnquench.config.notation import shortened, shown, shown_section
 from tnquench.config.rules import conflicts
 from tnquench.config.schema import PROFILES, SECTIONS, Config
+from tnquench.config.sweep import first_point
 from tnquench.config.table import read_table
 from tnquench.errors import InputError
+
+#: Returns the numbers of a table file and what is wrong with it.
+TableReader = Callable[[str], tuple[list[float], list[str]]]
+
+#: Parts of a dotted name; no setting has so many, and the TOML parser takes time like their square.
+MOST_PARTS = 32
+_PART = r"""(?:[A-Za-z0-9_-]++|"[^"\n]*+"|'[^'\n]*+')[ \t]*+"""
+_LONG_NAME = re.compile(rf"(?<![A-Za-z0-9_-])(?:{_PART}\.[ \t]*+){{{MOST_PARTS}}}")
 
 _POSITION = re.compile(r" \(at line (\d+), column (\d+)\)$| \(at end of document\)$")
 
 
-def load_config(path: str | Path) -> Config:
+def load_config(path: str | Path, *, allow_outside: bool = False) -> Config:
     """Read the config in a TOML file.
 
     path : the file; a table that it names is sought beside it or below
+    allow_outside : tables may lie anywhere, by absolute paths too; only the user may say so, never the config
     Returns the settings with all defaults filled in; a table file has become its values.
     Raises InputError with one line per problem, all problems at once.
     """
+    folder = Path(path).parent
+    return read_config(config_text(path), subject=str(path), folder=folder, allow_outside=allow_outside)
+
+
+def config_text(path: str | Path) -> str:
+    """Return the text of a config; raises InputError if the file cannot be read."""
     file = Path(path)
     try:
-        text = read_text(file)
+        return read_text(file)
     except (UnreadableFileError, ValueError) as error:
         raise InputError(str(path), [f"{error}{_neighbour(file)}"]) from error
-    return read_config(text, subject=str(path), folder=file.parent)
 
 
-def read_config(text: str, *, subject: str, folder: Path | None = None) -> Config:
+def read_config(
+    text: str, *, subject: str, folder: Path | None = None, allow_outside: bool = False
+) -> Config:
     """Read a config from TOML text.
 
     subject : what messages call it
     folder  : where table files are sought; None refuses them
-    Returns and raises as `load_config`.
+    allow_outside : whether they may lie outside of it
+    Returns and raises as `load_config`. Swept settings have their first values.
     """
-    tables, problems = _with_table_files(_parsed(text, subject=subject), folder=folder)
+    given = first_point(parsed(text, subject=subject))
+    return read_tables(given, subject=subject, folder=folder, allow_outside=allow_outside)
+
+
+def read_tables(
+    given: dict[str, Any], *, subject: str, folder: Path | None = None, allow_outside: bool = False
+) -> Config:
+    """Read a config from the tables of its TOML; arguments, return and errors as `read_config`."""
+    read = partial(read_table, folder=folder, allow_outside=allow_outside)
+    tables, problems = _with_table_files(given, read)
     errors: Sequence[ErrorDetails] = ()
     try:
         config = Config.model_validate(tables)
@@ -58,7 +86,11 @@ def read_config(text: str, *, subject: str, folder: Path | None = None) -> Confi
     raise InputError(subject, [*problem_lines(errors), *problems, *conflicts(_usable(tables, errors))])
 
 
-def _parsed(text: str, *, subject: str) -> dict[str, Any]:
+def parsed(text: str, *, subject: str) -> dict[str, Any]:
+    """Return the tables of a TOML text; raises InputError, with line and column, where it is none."""
+    if found := _LONG_NAME.search(text):
+        line, limit = text.count("\n", 0, found.start()) + 1, f"more than {MOST_PARTS} parts"
+        raise InputError(subject, [f"line {line}: a dotted name of {limit}; no setting has so many"])
     try:
         return tomllib.loads(text)
     except tomllib.TOMLDecodeError as error:
@@ -83,29 +115,29 @@ def _syntax_problem(message: str, text: str) -> str:
     return f"line {position[1]}, column {position[2]}: not valid TOML ({complaint}{advice}): {shown(line)}"
 
 
-def _with_table_files(tables: dict[str, Any], *, folder: Path | None) -> tuple[dict[str, Any], list[str]]:
+def _with_table_files(tables: dict[str, Any], read: TableReader) -> tuple[dict[str, Any], list[str]]:
     """Put the values of table files in their place; return the tables and what is wrong with the files."""
     filled, problems = dict(tables), list[str]()
     start, chain = tables.get("start"), tables.get("chain")
     if isinstance(start, dict):
         profiles = dict(start)
         for name in PROFILES:
-            profiles[name] = _with_values(start.get(name), f"start.{name}", folder=folder, problems=problems)
+            profiles[name] = _with_values(start.get(name), f"start.{name}", read, problems)
         filled["start"] = {name: profile for name, profile in profiles.items() if name in start}
     if isinstance(chain, dict) and isinstance(chain.get("extra"), list):
         extras = [
-            _with_values(extra, f"chain.extra[{index}]", folder=folder, problems=problems)
+            _with_values(extra, f"chain.extra[{index}]", read, problems)
             for index, extra in enumerate(chain["extra"])
         ]
         filled["chain"] = {**chain, "extra": extras}
     return filled, problems
 
 
-def _with_values(table: Any, section: str, *, folder: Path | None, problems: list[str]) -> Any:
+def _with_values(table: Any, section: str, read: TableReader, problems: list[str]) -> Any:
     """Return a table with the values of the file that it names; add to `problems` what is wrong with it."""
     if not _names_file(table):
         return table
-    values, complaints = read_table(table["file"], folder=folder)
+    values, complaints = read(table["file"])
     place = f"{shown_section(section)} file = {shown(table['file'])}"
     problems += [f"{place}: {complaint}" for complaint in complaints]
     if complaints:

@@ -6,9 +6,11 @@ from collections.abc import Iterator, Mapping
 from typing import Any
 
 from tnquench.config.chain_rules import Settings, Unusable, chain_conflicts, section_of
+from tnquench.config.cluster import cluster_conflicts
 from tnquench.config.energies import ENERGY_IN_WORDS, bond_energy
 from tnquench.config.notation import quantity, shown
 from tnquench.config.stretch import stretch_conflicts
+from tnquench.config.sweep import sweep_conflicts
 
 MOST_TIMES = 100_000
 MOST_STEPS = 10_000_000
@@ -39,6 +41,8 @@ def conflicts(settings: Settings) -> list[str]:
         _separate,
         _levels,
         stretch_conflicts,
+        sweep_conflicts,
+        cluster_conflicts,
     )
     return [*chain_conflicts(settings), *(problem for rule in rules for problem in rule(settings))]
 

@@ -7,11 +7,13 @@ from typing import Annotated, ClassVar, Literal, Self
 from pydantic import Strict, model_validator
 
 from tnquench.config.chain import Chain
+from tnquench.config.cluster import Cluster
 from tnquench.config.energies import bond_energy
 from tnquench.config.profile import Profile
 from tnquench.config.rules import conflicts, default_time_step
 from tnquench.config.setting import Section, setting
 from tnquench.config.stretch import Stretch
+from tnquench.config.sweep import Sweep
 
 
 class Start(Section):
@@ -147,6 +149,8 @@ class Config(Section):
     hydrodynamics: Hydrodynamics = Hydrodynamics()
     budget: Budget = Budget()
     stretch: Stretch = Stretch()
+    sweep: Sweep = Sweep()
+    cluster: Cluster = Cluster()
 
     @model_validator(mode="after")
     def _settle(self) -> Self:
@@ -173,6 +177,8 @@ SECTIONS: dict[str, type[Section]] = {
     "hydrodynamics": Hydrodynamics,
     "budget": Budget,
     "stretch": Stretch,
+    "sweep": Sweep,
+    "cluster": Cluster,
 }
 
 #: Settings of `[start]` that are profiles, tables with settings of their own.

@@ -13,15 +13,18 @@ _HEADING = re.compile(r"[A-Za-z_][A-Za-z0-9_ ()/*.-]*")
 _MOST_PROBLEMS = 3
 
 
-def read_table(file: str, *, folder: Path | None) -> tuple[list[float], list[str]]:
+def read_table(
+    file: str, *, folder: Path | None, allow_outside: bool = False
+) -> tuple[list[float], list[str]]:
     """Return the numbers of a CSV file, one a line, and what is wrong with it.
 
     file   : path relative to `folder`, which it may not leave
     folder : folder of the config; None where there is none, so that no file may be read
+    allow_outside : the user has said on the command line that `file` may lie anywhere
     Blank lines, lines that begin with # and a heading before the first number are skipped.
     """
     try:
-        text = read_text(_confined(file, folder=folder))
+        text = read_text(_confined(file, folder=folder, allow_outside=allow_outside))
     except UnreadableFileError as error:
         return [], [str(error)]
     values: list[float] = []
@@ -45,7 +48,7 @@ def read_table(file: str, *, folder: Path | None) -> tuple[list[float], list[str
     return values, [*problems[:_MOST_PROBLEMS], *([f"{left_out} more such lines"] if left_out > 0 else [])]
 
 
-def _confined(file: str, *, folder: Path | None) -> Path:
+def _confined(file: str, *, folder: Path | None, allow_outside: bool) -> Path:
     """Resolve `file` below `folder`; links that lead out of it are followed and refused."""
     if folder is None:
         reason = "can be read only for a config that is a file itself; give values in its place"
@@ -59,7 +62,7 @@ def _confined(file: str, *, folder: Path | None) -> Path:
     except (OSError, RuntimeError) as error:  # a ring of links
         reason = "cannot be followed to a file"
         raise UnreadableFileError(reason) from error
-    if Path(file).is_absolute() or not path.is_relative_to(home):
+    if not allow_outside and (Path(file).is_absolute() or not path.is_relative_to(home)):
         reason = "lies outside the folder of the config; must be in it or below, by a relative path"
         raise UnreadableFileError(reason)
     return path

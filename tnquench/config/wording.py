@@ -67,6 +67,8 @@ def _allowed(annotation: Any, metadata: Sequence[Any]) -> Allowed:
         if item.noun == _SECTION:
             return Allowed(noun="a list of sections, each headed by the name in double brackets")
         return Allowed(noun=item.noun, bounds=item.bounds, choices=item.choices, listed=True)
+    if origin is dict:
+        return Allowed(noun="lists of values by name, in a section of their own")
     if origin is Literal:
         return Allowed(choices=arguments)
     nouns = {int: "a whole number", float: "a number", str: "text in quotes", bool: "true or false"}

@@ -2,7 +2,6 @@
 
 from __future__ import annotations
 
-import json
 from collections.abc import Iterator, Mapping
 from pathlib import Path
 
@@ -10,12 +9,13 @@ import numpy as np
 from numpy.typing import NDArray
 
 from tnquench.dataset.contents import Contents, StoredVariable, digest_of_contents
-from tnquench.dataset.storage import DamagedFile, decode, locate, read_bytes
+from tnquench.dataset.hdf5_image import DamagedFile
+from tnquench.dataset.kinds import kind_complaints
+from tnquench.dataset.storage import decode, locate, read_bytes
 from tnquench.dataset.variables import (
     COORDINATES,
     FIRST_OBSERVABLES,
     FORMAT_VERSION,
-    JSON_ATTRIBUTES,
     LEVELS,
     MEASURED,
     OBSERVABLES,
@@ -52,9 +52,7 @@ def check_run(path: Path | str) -> list[str]:
         contents = decode(image)
     except DamagedFile as damage:
         return [str(damage)]
-    if complaint := version_complaint(contents):
-        return [complaint]
-    return list(_findings(contents))
+    return findings_of(contents)
 
 
 def read_contents(path: Path) -> Contents:
@@ -66,13 +64,20 @@ def read_contents(path: Path) -> Contents:
         raise InputError(str(locate(path)), [str(damage)], consequence="") from damage
 
 
+def findings_of(contents: Contents) -> list[str]:
+    """Return what is wrong with `contents`, one plain line a finding."""
+    if complaint := version_complaint(contents):
+        return [complaint]
+    return [line if line.isprintable() else _printable(line) for line in _findings(contents)]
+
+
 def version_complaint(contents: Contents) -> str:
     """Return why the layout of `contents` cannot be understood, or nothing."""
     version = contents.attributes.get("provenance", {}).get("format_version")
     if version is None:
         return "no format version in /provenance: not a dataset of this program"
     if not isinstance(version, int) or version < 1:
-        return f"format version {version!r} in /provenance is not a positive integer"
+        return f"format version {str(version)[:20]!r} in /provenance is not a positive integer"
     if version > FORMAT_VERSION:
         return f"format version {version} is newer than {FORMAT_VERSION}, the newest this program reads"
     return ""
@@ -102,6 +107,9 @@ def _findings(contents: Contents) -> Iterator[str]:
         if group != "provenance":
             yield from _group_findings(contents, group)
         yield from _attribute_findings(contents, group)
+    yield from kind_complaints("", contents.attributes.get("", {}))
+    for path, variable in contents.variables.items():
+        yield from kind_complaints(path, variable.attributes)
     yield from _missing_groups(contents)
     yield from _observable_findings(contents)
 
@@ -223,9 +231,7 @@ def _attribute_findings(contents: Contents, group: str) -> Iterator[str]:
     for name in attributes_of(group, sources=[] if source is None else source.values.ravel().tolist()):
         if name not in found:
             yield f"missing attribute {name} of {group}"
-    for name, value in found.items():
-        if name in JSON_ATTRIBUTES and not _is_json(value):
-            yield f"attribute {name} of {group} is not JSON text"
+    yield from kind_complaints(group, found)
 
 
 def _presence_findings(
@@ -282,12 +288,8 @@ def _order_findings(name: str, scale: StoredVariable) -> Iterator[str]:
         yield f"{name} repeats a value"
 
 
-def _is_json(value: object) -> bool:
-    try:
-        json.loads(str(value))
-    except json.JSONDecodeError:
-        return False
-    return True
+def _printable(line: str) -> str:
+    return "".join(letter if letter.isprintable() else "?" for letter in line)
 
 
 def _listed(dims: tuple[str, ...]) -> str:

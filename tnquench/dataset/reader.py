@@ -2,7 +2,6 @@
 
 from __future__ import annotations
 
-import json
 from collections.abc import Mapping
 from dataclasses import dataclass, field
 from pathlib import Path
@@ -11,7 +10,8 @@ from typing import Any
 import xarray
 
 from tnquench.dataset.contents import Attribute, Contents, StoredVariable
-from tnquench.dataset.integrity import digest_complaint, read_contents, version_complaint
+from tnquench.dataset.integrity import findings_of, read_contents, version_complaint
+from tnquench.dataset.kinds import from_json
 from tnquench.dataset.storage import locate
 from tnquench.dataset.variables import COORDINATES, JSON_ATTRIBUTES, OWN_COORDINATES, STRETCH_COORDINATES
 from tnquench.errors import InputError
@@ -52,19 +52,20 @@ def open_run(path: Path | str, *, verify: bool = True) -> Run:
     """Return the dataset in folder `path`, or the dataset `path` itself, read into memory.
 
     verify : refuse a dataset that differs from its digest; without it such a dataset is opened as it is
-    Raises InputError if the dataset is missing, unreadable, damaged, altered, or of a newer format.
+    Raises InputError if the dataset is missing, unreadable, damaged, altered, incomplete, or of a newer
+    format.
     """
     contents = read_contents(Path(path))
     file = locate(Path(path))
-    complaint = version_complaint(contents) or (digest_complaint(contents) if verify else "")
-    if complaint:
-        raise InputError(str(file), [complaint], consequence="")
+    findings = findings_of(contents) if verify else [version_complaint(contents)]
+    if any(findings):
+        more = f" ({len(findings) - 1} more findings; tnquench check lists them)" if findings[1:] else ""
+        raise InputError(str(file), [findings[0] + more], consequence="")
     try:
         return _build(file, contents)
-    except (ValueError, KeyError) as error:  # dimensions that contradict each other
-        raise InputError(
-            str(file), [f"damaged dataset: {str(error).splitlines()[0]}"], consequence=""
-        ) from error
+    except Exception as error:  # unverified: dimensions that contradict each other, attributes of any kind
+        said = " ".join(str(error).split())[:200]
+        raise InputError(str(file), [f"damaged dataset: {said}"], consequence="") from error
 
 
 def _build(file: Path, contents: Contents) -> Run:
@@ -108,6 +109,5 @@ def _labelled(variable: StoredVariable) -> xarray.Variable:
 def _decoded(attributes: Mapping[str, Attribute]) -> dict[str, Any]:
     """Return attributes with JSON text turned into lists and mappings."""
     return {
-        name: json.loads(value) if name in JSON_ATTRIBUTES and isinstance(value, str) else value
-        for name, value in attributes.items()
+        name: from_json(value) if name in JSON_ATTRIBUTES else value for name, value in attributes.items()
     }

@@ -5,7 +5,7 @@ rho_0 = exp(-K)/Z, so sigma is proportional to exp(-K/2), reached by exp(-K/4) o
 
 from __future__ import annotations
 
-from collections.abc import Sequence
+from collections.abc import Callable, Sequence
 from dataclasses import dataclass, replace
 from math import ceil, log, sqrt
 
@@ -75,45 +75,97 @@ class Preparation:
     reached: bool
 
 
+@dataclass
+class Attempt:
+    """Where a preparation stands: one imaginary-time evolution under way, and what came before it.
+
+    steps, weight_target : of this attempt; layers : those of its layers that are applied
+    state, ledger : the chain so far, and what its cuts have cost in this attempt
+    coarser : the state of the attempt before, None in the first; previous : distance of the two before
+    (infinite until there are two); in_vain : refinements in a row that have not halved the distance
+    """
+
+    steps: int
+    weight_target: float
+    state: ChainState
+    ledger: CutLedger
+    layers: int = 0
+    coarser: ChainState | None = None
+    previous: float = float("inf")
+    in_vain: int = 0
+
+
 def prepare(
-    terms: Sequence[Operator], *, sites: int, grading: Grading, distance_target: float, rule: CutRule
+    terms: Sequence[Operator],
+    *,
+    sites: int,
+    grading: Grading,
+    distance_target: float,
+    rule: CutRule,
+    after_layer: Callable[[Attempt], None] | None = None,
+    resumed: Attempt | None = None,
 ) -> Preparation:
     """Prepare the start, refining it until the state is within `distance_target` of the exact one.
 
     terms : k_j with sum_j k_j = K, one operator a bond, on one site, two neighbours, or sites i and i + 2
     distance_target : norm of the state's allowed error; rule : how bonds are cut at first
+    after_layer : called after each layer with where the preparation stands; resumed : where to go on
     Each refinement halves the step and, where they lose too much, tightens the cuts. The distance of the last
     two states measures the coarser one's error; the finer one's follows from the ratio of the last two
     distances, but no less than the scheme promises, and the cuts' own error is added. If refining no longer
     helps, which is what a bond ceiling that binds looks like, the last state is returned with `reached`
     false.
     """
-    steps, previous, in_vain = _steps_at_first(terms), float("inf"), 0
-    most_steps = steps * 2**MOST_REFINEMENTS
-    state, ledger = _imaginary_evolution(terms, sites, grading, steps, rule)
+    at_first = _steps_at_first(terms)
+    attempt = resumed or _begun(at_first, rule.weight_target, sites, grading)
     while True:
-        steps *= 2
-        expected = 0.0 if previous == float("inf") else LIMIT_SHARE**2 * previous
-        rule = _tightened(rule, state, ledger, goal=max(distance_target, expected))
-        coarser, (state, ledger) = state, _imaginary_evolution(terms, sites, grading, steps, rule)
-        apart = distance(coarser, state)
-        step_error, cut_error = _share(apart / previous) * apart, _cut_error(ledger)
-        error = step_error + cut_error
-        in_vain = in_vain + 1 if apart > 0.5 * previous else 0
-        hopeless = in_vain > MOST_IN_VAIN or 2 * steps > most_steps
-        if ledger.ceiling_cuts.any():  # shorter steps only mean more cuts
-            hopeless = hopeless or in_vain > 0 or step_error < cut_error
-        if error <= distance_target or hopeless:
-            break
-        previous = max(apart, NEGLIGIBLE)
+        rule = replace(rule, weight_target=attempt.weight_target)
+        _finish(attempt, terms, rule, after_layer)
+        if attempt.coarser is not None:
+            apart = distance(attempt.coarser, attempt.state)
+            step_error, cut_error = _share(apart / attempt.previous) * apart, _cut_error(attempt.ledger)
+            attempt.in_vain = attempt.in_vain + 1 if apart > 0.5 * attempt.previous else 0
+            if step_error + cut_error <= distance_target or _hopeless(
+                attempt, step_error, cut_error, most_steps=at_first * 2**MOST_REFINEMENTS
+            ):
+                return _prepared(attempt, apart, step_error + cut_error, distance_target)
+            attempt.previous = max(apart, NEGLIGIBLE)
+        attempt = _refined(attempt, rule, distance_target)
+
+
+def _begun(steps: int, weight_target: float, sites: int, grading: Grading) -> Attempt:
+    """Return an attempt of which no layer is applied."""
+    return Attempt(steps, weight_target, infinite_temperature(sites, grading), CutLedger.empty(sites))
+
+
+def _refined(attempt: Attempt, rule: CutRule, distance_target: float) -> Attempt:
+    """Return the next attempt: half the step, and cuts as tight as it needs."""
+    expected = 0.0 if attempt.previous == float("inf") else LIMIT_SHARE**2 * attempt.previous
+    tighter = _tightened(rule, attempt.state, attempt.ledger, goal=max(distance_target, expected))
+    begun = _begun(2 * attempt.steps, tighter.weight_target, attempt.state.sites, attempt.state.grading)
+    return replace(begun, coarser=attempt.state, previous=attempt.previous, in_vain=attempt.in_vain)
+
+
+def _hopeless(attempt: Attempt, step_error: float, cut_error: float, *, most_steps: int) -> bool:
+    """Whether another refinement would not help."""
+    hopeless = attempt.in_vain > MOST_IN_VAIN or 2 * attempt.steps > most_steps
+    if attempt.ledger.ceiling_cuts.any():  # shorter steps only mean more cuts
+        hopeless = hopeless or attempt.in_vain > 0 or step_error < cut_error
+    return hopeless
+
+
+def _prepared(attempt: Attempt, apart: float, error: float, distance_target: float) -> Preparation:
+    """Return the finished preparation; apart : distance of its last two states, error : that of the last."""
+    state, ledger, coarser = attempt.state, attempt.ledger, attempt.coarser
+    assert coarser is not None, "a start is judged by the one before"
     return Preparation(
         state=state,
         coarser=coarser,
         error_share=error / apart if apart > 0.0 else 1.0,
         distance=error,
-        steps=steps,
+        steps=attempt.steps,
         cuts=ledger,
-        log_partition_function=2.0 * ledger.log_norm + sites * grading.qubits_per_site * log(2.0),
+        log_partition_function=2.0 * ledger.log_norm + state.sites * state.grading.qubits_per_site * log(2.0),
         reached=error <= distance_target,
     )
 
@@ -153,21 +205,25 @@ def _tightened(rule: CutRule, state: ChainState, ledger: CutLedger, *, goal: flo
     return replace(rule, weight_target=max(weight, TIGHTEST_WEIGHT))
 
 
-def _imaginary_evolution(
-    terms: Sequence[Operator], sites: int, grading: Grading, steps: int, rule: CutRule
-) -> tuple[ChainState, CutLedger]:
-    """Return exp(-K/2) normalised, and its ledger with the logarithm of its norm relative to the
-    identity's."""
-    state = infinite_temperature(sites, grading)
-    ledger = CutLedger.empty(sites)
-    groups = split(terms, sites=sites, qubits_per_site=grading.qubits_per_site)
+def _finish(
+    attempt: Attempt,
+    terms: Sequence[Operator],
+    rule: CutRule,
+    after_layer: Callable[[Attempt], None] | None,
+) -> None:
+    """Apply the layers that an attempt still lacks: its state becomes exp(-K/2) normalised, and its ledger
+    holds the logarithm of the norm relative to the identity's."""
+    grading = attempt.state.grading
+    groups = split(terms, sites=attempt.state.sites, qubits_per_site=grading.qubits_per_site)
     gates = LayerGates(
         groups,
         grading,
-        lambda term, first, fraction: imaginary_time_gate(
-            term, beta=0.25 * fraction / steps, first=first, grading=grading
+        lambda term, fraction: imaginary_time_gate(
+            term, beta=0.25 * fraction / attempt.steps, first=0, grading=grading
         ),
     )
-    for layer in plan(groups, SCHEME, steps):
-        apply_layer(state, gates.of(layer), rule, ledger)
-    return state, ledger
+    for layer in plan(groups, SCHEME, attempt.steps)[attempt.layers :]:
+        apply_layer(attempt.state, gates.of(layer), rule, attempt.ledger)
+        attempt.layers += 1
+        if after_layer is not None:
+            after_layer(attempt)

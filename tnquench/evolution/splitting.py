@@ -94,12 +94,16 @@ def plan(groups: Sequence[Group], scheme: TrotterScheme, steps: int) -> list[Lay
 
 
 class LayerGates:
-    """Builds the gates of layers and keeps them: bonds with the same term up to a translation share one."""
+    """Builds the gates of layers and keeps them: bonds with the same term up to a translation share one.
+
+    Each gate follows from its term and rounded fraction alone, whichever layer asks for it first, so that an
+    evolution that is taken up in the middle has the same gates.
+    """
 
     def __init__(
-        self, groups: Sequence[Group], grading: Grading, exponential: Callable[[Operator, int, float], Gate]
+        self, groups: Sequence[Group], grading: Grading, exponential: Callable[[Operator, float], Gate]
     ) -> None:
-        """exponential : (term, first site, fraction of a step) -> gate."""
+        """exponential : (term, moved to the first two sites, fraction of a step) -> gate."""
         self.groups = groups
         self.qubits_per_site = grading.qubits_per_site
         self.exponential = exponential
@@ -109,13 +113,13 @@ class LayerGates:
 
     def of(self, layer: Layer) -> dict[int, Gate]:
         """Return the gates of a layer, bond -> gate."""
-        key = tuple(
+        key = tuple(  # fractions that are the same number differ in how they were summed up
             Action(action.group, None if action.fraction is None else round(action.fraction, 14))
             for action in layer
         )
         if key not in self.layers:
             gates: dict[int, Gate] = {}
-            for action in layer:
+            for action in key:
                 for bond in _bonds(self.groups, action):
                     gate = self._gate(action, bond)
                     gates[bond] = composed(gates[bond], gate) if bond in gates else gate
@@ -132,9 +136,9 @@ class LayerGates:
             (tuple((qubit - first, letter) for qubit, letter in factors), value)
             for factors, value in term.items()
         )
-        key = (translated, round(action.fraction, 14))
+        key = (translated, action.fraction)
         if key not in self.gates:
-            self.gates[key] = self.exponential(term, bond, action.fraction)
+            self.gates[key] = self.exponential(dict(sorted(translated)), action.fraction)
         return self.gates[key]
 
 

@@ -4,6 +4,7 @@ from __future__ import annotations
 
 import io
 import json
+import os
 import subprocess
 import sys
 from collections.abc import Mapping
@@ -11,15 +12,19 @@ from dataclasses import dataclass
 from pathlib import Path
 
 import numpy as np
-from scipy.io import netcdf_file
+from numpy.typing import NDArray
 
 from tnquench.conventions import Reals
 from tnquench.judge import hdf5_child
+from tnquench.judge.classic_netcdf import read_classic_netcdf
 from tnquench.judge.csv_table import check_names
 from tnquench.judge.points import COORDINATES, MOST_POINTS, OBSERVABLES, Complaints, Points, check_points
 
 #: Longest time that reading a file may take, in seconds.
 PATIENCE = 120.0
+
+#: The HDF5 library loads no filters from shared libraries.
+WITHOUT_PLUGINS = {"HDF5_PLUGIN_PRELOAD": "::"}
 
 DAMAGED = "cannot be read to its end as HDF5; the file is damaged or no HDF5 file"
 
@@ -49,7 +54,9 @@ def load_hdf5(path: Path) -> ArrayFile | str:
     """Return the arrays of an HDF5 file, read by a process of its own, or why it cannot be read."""
     command = [sys.executable, "-P", hdf5_child.__file__, str(path), str(MOST_POINTS)]
     try:
-        child = subprocess.run(command, capture_output=True, timeout=PATIENCE, check=False)
+        child = subprocess.run(
+            command, capture_output=True, timeout=PATIENCE, check=False, env=os.environ | WITHOUT_PLUGINS
+        )
     except subprocess.TimeoutExpired:
         return f"not read within {PATIENCE:.0f} s; the file is damaged"
     if child.returncode != 0:
@@ -71,16 +78,15 @@ def load_hdf5(path: Path) -> ArrayFile | str:
 def load_classic_netcdf(image: bytes) -> ArrayFile | str:
     """Return the arrays of a netCDF file of the classic kind (before netCDF-4), or why it cannot be read."""
     try:
-        with netcdf_file(io.BytesIO(image), "r", mmap=False, maskandscale=False) as file:
-            arrays = {
-                name: StoredArray(
-                    tuple(stored.dimensions),
-                    tuple(int(size) for size in stored.shape),
-                    np.array(stored[:], dtype=np.float64) if _is_plain(stored) else None,
-                    hasattr(stored, "scale_factor") or hasattr(stored, "add_offset"),
-                )
-                for name, stored in file.variables.items()
-            }
+        arrays = {
+            name: StoredArray(
+                dims,
+                values.shape,
+                np.array(values, dtype=np.float64) if _is_plain(values) else None,
+                packed,
+            )
+            for name, (dims, values, packed) in read_classic_netcdf(image).items()
+        }
     except Exception:  # damaged bytes make the reader raise nearly anything
         return "cannot be read to its end as netCDF; the file is damaged"
     return ArrayFile(arrays)
@@ -114,8 +120,8 @@ def points_of(file: ArrayFile, *, subject: str) -> tuple[dict[str, Points], tupl
     return fields, remark + remarks
 
 
-def _is_plain(stored: netcdf_file) -> bool:
-    return stored.data.dtype.kind in "fiu" and 1 <= stored.data.ndim <= 2 and stored.data.size <= MOST_POINTS
+def _is_plain(values: NDArray[np.generic]) -> bool:
+    return values.dtype.kind in "fiu" and 1 <= values.ndim <= 2 and values.size <= MOST_POINTS
 
 
 def _one_group(
@@ -153,9 +159,8 @@ def _points(name: str, arrays: Mapping[str, StoredArray], complaints: Complaints
         if found.packed:
             complaints.add(f"{key}: packed by scale_factor or add_offset; store plain numbers")
         if found.values is None:
-            complaints.add(
-                f"{key}: shape {found.shape}; must be numbers in one or two dimensions, at most {MOST_POINTS}"
-            )
+            wanted = f"must be numbers in one or two dimensions, at most {MOST_POINTS}, all in this file"
+            complaints.add(f"{key}: shape {found.shape}; {wanted}")
         elif key != name and found.values.ndim != 1:
             complaints.add(f"{key}: shape {found.shape}; must have one dimension")
     time, x, values = (needed[key].values for key in ("time", place, name))

@@ -16,6 +16,7 @@ from tnquench.dataset.variables import LEVELS
 from tnquench.errors import InputError
 from tnquench.judge.array_file import ArrayFile, load_classic_netcdf, load_hdf5, points_of
 from tnquench.judge.csv_table import check_names, read_csv
+from tnquench.judge.function import Function, NamedFunction, candidate_of_function
 from tnquench.judge.points import (
     MOST_BYTES,
     OBSERVABLES,
@@ -31,21 +32,37 @@ from tnquench.report.question import settings_of
 
 CLASSIC_NETCDF_SIGNATURE = b"CDF"
 
-Source = Path | str | Run | Mapping[str, ArrayLike]
+#: Text beyond ASCII may take four times its size in memory; of that no more is read.
+MOST_FOREIGN_BYTES = 32 * 2**20
+
+Source = Path | str | Run | Mapping[str, ArrayLike] | Function
 
 
-def open_candidate(source: Source) -> Candidate:
+def open_candidate(
+    source: Source, *, coordinates: Mapping[str, Reals] | None = None, run_code: bool = False
+) -> Candidate:
     """Return the candidate meant by `source`.
 
-    source : a CSV, HDF5 or netCDF file; a dataset, its folder or its file; or columns in memory, a mapping
-    with the names of a CSV header
+    source : a CSV, HDF5 or netCDF file; a dataset, its folder or its file; columns in memory, a mapping
+    with the names of a CSV header; a Python function (see `function`), or its name as file.py:function
+    coordinates : "time", "site" and "bond" of the reference, on which a function is evaluated
+    run_code : whether the user has agreed to run a function named by its file
     Raises InputError with one line a problem.
     """
     if isinstance(source, Run):
         return candidate_of_run(source)
     if isinstance(source, Mapping):
         return _from_columns(source)
-    path = Path(source)
+    named = NamedFunction.parse(source)
+    if named is not None and not run_code:
+        named.refuse()
+    function = named or source
+    if isinstance(function, NamedFunction) or callable(function):
+        if coordinates is None:
+            problem = "is evaluated on the points of a reference, and there is none"
+            raise InputError(str(function), [problem], consequence="nothing was judged")
+        return candidate_of_function(function, coordinates)
+    path = Path(function)
     if path.is_dir():
         return candidate_of_run(open_run(path))
     image = _bytes_of(path)
@@ -53,13 +70,19 @@ def open_candidate(source: Source) -> Candidate:
         return _from_hdf5(path)
     if image.startswith(CLASSIC_NETCDF_SIGNATURE):
         return _from_arrays(path, load_classic_netcdf(image))
+    if path.suffix == ".py":
+        problem = f"is Python code; name a function in it, {path}:NAME"
+        raise _refusal(path, problem)
+    if len(image) > MOST_FOREIGN_BYTES and not image.isascii():
+        allowed = f"allowed: {MOST_FOREIGN_BYTES // 2**20} MB unless it is plain ASCII"
+        raise _refusal(path, f"{len(image) / 2**20:.0f} MB of text; {allowed}")
     try:
         text = image.decode("utf-8-sig")
     except UnicodeDecodeError as error:
         problem = f"byte {error.start}: not UTF-8 text, nor HDF5 or netCDF; give one of these"
         raise _refusal(path, problem) from error
     fields, remarks = read_csv(text, subject=str(path))
-    return Candidate(str(path), TABLE, fields, remarks)
+    return Candidate(_name(path), TABLE, fields, remarks)
 
 
 def candidate_of_run(run: Run) -> Candidate:
@@ -81,7 +104,7 @@ def candidate_of_run(run: Run) -> Candidate:
     }
     if not fields:
         raise _refusal(run.path, "holds neither a quantum side nor a prediction")
-    return Candidate(str(run.path), origin, fields, settings=settings_of(run))
+    return Candidate(_name(run.path), origin, fields, settings=settings_of(run))
 
 
 def _grid_points(times: Reals, positions: Reals, values: Reals, error: Reals | None) -> Points:
@@ -117,7 +140,7 @@ def _from_arrays(path: Path, file: ArrayFile | str) -> Candidate:
     if isinstance(file, str):
         raise _refusal(path, file)
     fields, remarks = points_of(file, subject=str(path))
-    return Candidate(str(path), TABLE, fields, remarks)
+    return Candidate(_name(path), TABLE, fields, remarks)
 
 
 def _from_columns(columns: Mapping[str, ArrayLike]) -> Candidate:
@@ -148,3 +171,8 @@ def _from_columns(columns: Mapping[str, ArrayLike]) -> Candidate:
 
 def _refusal(path: Path, problem: str) -> InputError:
     return InputError(str(path), [problem], consequence="nothing was judged")
+
+
+def _name(path: Path) -> str:
+    """Return a path as text that can be printed and stored: bytes that are not UTF-8 spelled out."""
+    return str(path).encode("utf-8", errors="backslashreplace").decode()

@@ -20,8 +20,10 @@ from tnquench.judge.points import (
     check_points,
 )
 
-#: As much of a bad cell as a message shows.
-SHOWN = 24
+#: As much of a bad cell as a message shows, and as much of a name as is compared with the known ones.
+SHOWN, COMPARED = 24, 40
+#: More columns, longer lines or more lines (comments and empty ones included) are no table of points.
+MOST_COLUMNS, LONGEST_LINE, MOST_LINES = 1000, 100_000, 2 * MOST_POINTS
 
 EXPECTED = "time,x,energy_density[,energy_current,charge_density,...]"
 
@@ -51,6 +53,9 @@ def read_csv(text: str, *, subject: str) -> tuple[dict[str, Points], tuple[str, 
         complaints.raise_if_any(subject)
         return {}, ()
     names = [cell.strip() for cell in header[1]]
+    if len(names) > MOST_COLUMNS:
+        complaints.add(f"line {header[0]}: {len(names)} columns; allowed: {MOST_COLUMNS}")
+        complaints.raise_if_any(subject)
     if foreign := _foreign_separator(names):
         complaints.add(f"line {header[0]}: separate columns by commas, not by {foreign}")
         complaints.raise_if_any(subject)
@@ -76,7 +81,7 @@ def check_names(names: Sequence[str], complaints: Complaints, *, what: str = "co
     misspelt = {
         name: close[0]
         for name in unknown
-        if (close := difflib.get_close_matches(name, known, n=1, cutoff=0.8))
+        if len(name) <= COMPARED and (close := difflib.get_close_matches(name, known, n=1, cutoff=0.8))
     }
     for name, near in misspelt.items():
         complaints.add(f'{what} "{_short(name)}" is unknown; did you mean "{near}"?')
@@ -90,13 +95,29 @@ def check_names(names: Sequence[str], complaints: Complaints, *, what: str = "co
 
 def _rows(text: str, complaints: Complaints) -> Iterator[tuple[int, list[str]]]:
     """Yield the number and the cells of each line that says something."""
-    numbered = ((number, line) for number, line in enumerate(text.splitlines(), start=1))
-    said = ((number, line) for number, line in numbered if line.strip() and not line.lstrip().startswith("#"))
-    for number, line in said:
+    for number, line in enumerate(_lines(text), start=1):
+        if number > MOST_LINES:
+            complaints.add(f"line {number}: more than {MOST_LINES} lines; judge a part of them")
+            return
+        if len(line) > LONGEST_LINE:
+            complaints.add(f"line {number}: longer than {LONGEST_LINE} characters", "long")
+            continue
+        if not line.strip() or line.lstrip().startswith("#"):
+            continue
         try:
             yield number, next(csv.reader([line]))
         except (csv.Error, StopIteration):
             complaints.add(f"line {number}: cannot be split into cells; separate them by commas", "split")
+
+
+def _lines(text: str) -> Iterator[str]:
+    """Yield the lines of a text one by one, without a list of all."""
+    mark, start = "\n" if "\n" in text else "\r", 0
+    while start < len(text):
+        end = text.find(mark, start)
+        end = len(text) if end < 0 else end
+        yield text[start:end].removesuffix("\r")
+        start = end + 1
 
 
 def _points(

@@ -20,6 +20,10 @@ import numpy as np
 MOST_OBJECTS = 2000
 #: All arrays together may have this many times the entries of the largest one.
 MOST_ARRAYS = 20
+#: Entries that are read and unpacked at once; a file that packs more into one piece is no table of numbers.
+LARGEST_CHUNK = 16 * 2**20
+#: Memory that this process may take beyond the libraries, in bytes.
+SPARE = 1024 * 2**20
 
 
 def entry_of(path: str, stored: Any) -> dict[str, Any]:
@@ -28,7 +32,9 @@ def entry_of(path: str, stored: Any) -> dict[str, Any]:
         dims = [path.rpartition("/")[2]]
     else:
         dims = [axis[0].name.rpartition("/")[2] if len(axis) else "" for axis in stored.dims]
-    numeric = stored.dtype.kind in "fiu" and stored.shape is not None
+    chunk = math.prod(stored.chunks) if stored.chunks else 0
+    inside = not (stored.is_virtual or stored.external)  # what lies in other files is never opened
+    numeric = stored.dtype.kind in "fiu" and stored.shape is not None and inside and chunk <= LARGEST_CHUNK
     packed = any(name in stored.attrs for name in ("scale_factor", "add_offset"))
     shape = list(stored.shape) if stored.shape is not None else None
     return {"path": path, "shape": shape, "dims": dims, "numeric": numeric, "packed": packed}
@@ -37,6 +43,18 @@ def entry_of(path: str, stored: Any) -> dict[str, Any]:
 def _wanted(entry: dict[str, Any], most_values: int) -> bool:
     shape = entry["shape"]
     return bool(entry["numeric"] and len(shape) in (1, 2) and math.prod(shape) <= most_values)
+
+
+def _limit_memory() -> None:
+    """Let this process take `SPARE` more bytes than it has, where the system knows such limits."""
+    try:
+        import resource  # absent on Windows
+
+        with open("/proc/self/statm") as stream:  # noqa: PTH123 - no pathlib needed in a script
+            taken = int(stream.read().split()[0]) * resource.getpagesize()
+        resource.setrlimit(resource.RLIMIT_AS, (taken + SPARE, taken + SPARE))
+    except (ImportError, OSError, ValueError):
+        return
 
 
 def main(path: str, most_values: int) -> None:
@@ -65,4 +83,5 @@ def main(path: str, most_values: int) -> None:
 
 
 if __name__ == "__main__":
+    _limit_memory()
     main(sys.argv[1], int(sys.argv[2]))

@@ -16,6 +16,7 @@ from tnquench.judge.allowance import Allowance
 from tnquench.judge.candidate import Source, open_candidate
 from tnquench.judge.conservation import Conservation, check_conservation
 from tnquench.judge.deviations import Deviations, measure
+from tnquench.judge.function import NamedFunction
 from tnquench.judge.points import OBSERVABLES, QUANTUM, TABLE, Candidate
 from tnquench.judge.reference import Faced, face, resolve_at, values_of
 from tnquench.report.models import ModelWords, words_of
@@ -107,24 +108,34 @@ class Judgement:
         raise KeyError(message)
 
 
-def judge(candidate: Source, against: Path | str | Run, allow: float | str | None = None) -> Judgement:
+def judge(
+    candidate: Source,
+    against: Path | str | Run,
+    allow: float | str | None = None,
+    *,
+    run_code: bool = False,
+) -> Judgement:
     """Judge a result against the quantum side of a dataset.
 
     candidate : a CSV file with the header time,x,energy_density[,...], an HDF5 or netCDF file with the same
     names, columns in memory under these names, or a second dataset (its quantum side is judged with its own
-    error, or its prediction where it holds nothing else)
+    error, or its prediction where it holds nothing else); or a Python function of times and positions (see
+    `tnquench.judge.function`), or the name of one, "path/to/file.py:function"
     against   : the dataset that judges, its folder or its file
     allow     : a number, the largest root mean square deviation beyond numerical error of each observable;
     "euler" (or "diffusive"), no farther from the chain than that prediction of the dataset; or nothing, the
     candidate must agree with the chain within its numerical error
+    run_code  : run the file of a function that is named; without it that is refused
     Returns norms, wrong points and verdict of each observable that both sides hold. The reference is
     interpolated where needed, with the error of that as a part of the total error.
     Raises InputError if either side cannot be used, or no point of the candidate can be judged.
     """
     allowance = Allowance.parse(allow)
+    if not run_code and (named := NamedFunction.parse(candidate)):
+        named.refuse()
     run = against if isinstance(against, Run) else open_run(against)
     _check_reference(run, allowance)
-    opened = open_candidate(candidate)
+    opened = open_candidate(candidate, coordinates=_coordinates(run), run_code=run_code)
     settings = settings_of(run)
     words, units = words_of(settings), units_of(settings)
     faced = _faced(run, opened, allowance)
@@ -142,6 +153,11 @@ def judge(candidate: Source, against: Path | str | Run, allow: float | str | Non
         conservation=check_conservation(opened.fields),
         remarks=tuple(_remarks(run, opened, faced, settings)),
     )
+
+
+def _coordinates(run: Run) -> dict[str, Reals]:
+    names = ("time", "site", "bond")
+    return {name: np.asarray(run.coordinates[name].values, dtype=np.float64) for name in names}
 
 
 def _judged(

@@ -4,29 +4,34 @@ from __future__ import annotations
 
 import time
 from collections.abc import Callable, Iterable, Mapping, Sequence
-from dataclasses import dataclass, replace
+from dataclasses import asdict, dataclass
+from typing import Any, Protocol
 
-import numpy as np
-
-from tnquench.conventions import CURRENTS, Integers, Reals
+from tnquench.conventions import Integers, Reals
 from tnquench.evolution.chain_state import ChainState
 from tnquench.evolution.cutting import BOND_FLOOR, CutRule
 from tnquench.evolution.layers import CutLedger
 from tnquench.evolution.light_cone import CutTrail, trail_of
-from tnquench.evolution.preparation import Preparation, prepare
-from tnquench.evolution.real_time import Moment, evolve
+from tnquench.evolution.real_time import Reached, evolve
 from tnquench.evolution.trotter import SCHEMES
 from tnquench.model.chain import Chain
-from tnquench.model.grading import derive_grading
+from tnquench.model.grading import Grading, derive_grading
 from tnquench.model.pauli import Operator, operator_norm
+from tnquench.observables.diary import Diary
 from tnquench.observables.local import LocalObservables
+from tnquench.observables.snapshot import (
+    Content,
+    of_attempt,
+    of_evolution,
+    of_start,
+    to_attempt,
+    to_evolution,
+    to_start,
+)
+from tnquench.observables.start import Start, StartFacts, prepare_start
 
 #: The start is cut at this fraction of the real-time weight, so that its own error stays in the background.
 PREPARATION_SHARE = 1e-4
-
-#: The two states whose difference measures the start's error share part of their cuts: for loosely prepared
-#: Hubbard starts the difference was found up to 1.5 times too small.
-START_SAFETY = 3.0
 
 
 @dataclass(frozen=True)
@@ -108,92 +113,198 @@ class QuantumRecord:
     last_state: ChainState | None = None
 
 
-def simulate(quench: Quench, *, report: Callable[[Progress], None] | None = None) -> QuantumRecord:
+class Keeper(Protocol):
+    """Keeps what a quench needs to go on after an interruption, as plain arrays, numbers and text."""
+
+    def load(self) -> Content | None:
+        """Return the content last saved, None if there is none."""
+
+    def load_start(self) -> Content | None:
+        """Return the finished start, None if it is not kept."""
+
+    def save_start(self, content: Content) -> None:
+        """Save the finished start."""
+
+    def after_layer(self, header: Mapping[str, Any], content: Callable[[], Content]) -> None:
+        """Save the content if it is time to; may raise to end the quench."""
+
+    def save(self, header: Mapping[str, Any], content: Content) -> None:
+        """Save the content of the finished quench."""
+
+
+class _Tools:
+    """What a quench is simulated with: charges, what is measured, how bonds are cut."""
+
+    def __init__(self, quench: Quench) -> None:
+        chain = quench.chain
+        self.grading: Grading = derive_grading(
+            (*chain.bond_terms, *quench.start_terms), qubits_per_site=chain.qubits_per_site
+        )
+        self.operators = chain.observables()
+        self.meter = LocalObservables(self.operators, sites=chain.sites, grading=self.grading)
+        self.rule = CutRule(
+            quench.discarded_weight,
+            bond_ceiling=quench.bond_ceiling,
+            bond_floor=quench.bond_floor,
+            method=quench.cutting,
+        )
+
+
+class _Clock:
+    """Wall and processor time of a quench, with what earlier parts of it have taken."""
+
+    def __init__(self, saved: Content | None) -> None:
+        self.began, self.cpu = time.perf_counter(), time.process_time()
+        self.before = (0.0, 0.0) if saved is None else (saved["seconds"], saved["cpu_seconds"])
+
+    def spent(self) -> dict[str, float]:
+        """Return the times so far."""
+        return {
+            "seconds": self.before[0] + time.perf_counter() - self.began,
+            "cpu_seconds": self.before[1] + time.process_time() - self.cpu,
+        }
+
+
+def start_of_quench(quench: Quench, *, keeper: Keeper | None = None) -> Start:
+    """Prepare the start of a quench, or take up the preparation where the keeper has it."""
+    tools = _Tools(quench)
+    if keeper is not None and (kept := keeper.load_start()) is not None:
+        return to_start(kept, tools.grading)
+    rule = CutRule(quench.preparation_weight, bond_ceiling=quench.bond_ceiling, method=quench.cutting)
+    saved = None if keeper is None else keeper.load()
+    clock = _Clock(saved)
+    begun = None if saved is None else saved.get("attempt")
+    start = prepare_start(
+        quench.start_terms,
+        tools.meter,
+        sites=quench.chain.sites,
+        grading=tools.grading,
+        distance_target=quench.preparation_distance,
+        rule=rule,
+        after_layer=None
+        if keeper is None
+        else lambda attempt: keeper.after_layer(
+            {"stage": "start", "time": 0.0}, lambda: {"attempt": of_attempt(attempt, rule), **clock.spent()}
+        ),
+        resumed=None if begun is None else to_attempt(begun, tools.grading, rule),
+    )
+    if keeper is not None:
+        keeper.save_start(of_start(start))
+    return start
+
+
+def simulate(
+    quench: Quench,
+    *,
+    report: Callable[[Progress], None] | None = None,
+    keeper: Keeper | None = None,
+    start: Start | None = None,
+) -> QuantumRecord:
     """Prepare, evolve and measure one quench.
 
     report : called after each half layer with the progress made
-    Raises StateError if the state no longer holds finite numbers.
+    keeper : keeps the quench, which goes on from what is kept and may go on later to more samples
+    start : used instead of preparing one, for a run that would prepare the same
+    Raises StateError if the state no longer holds finite numbers, and what the keeper raises.
     """
-    began, cpu = time.perf_counter(), time.process_time()
-    chain = quench.chain
-    grading = derive_grading((*chain.bond_terms, *quench.start_terms), qubits_per_site=chain.qubits_per_site)
-    start = prepare(
-        quench.start_terms,
-        sites=chain.sites,
-        grading=grading,
-        distance_target=quench.preparation_distance,
-        rule=CutRule(quench.preparation_weight, bond_ceiling=quench.bond_ceiling, method=quench.cutting),
-    )
-    operators = chain.observables()
-    meter = LocalObservables(operators, sites=chain.sites, grading=grading)
-    start_error = _start_error(meter, start)
-    diary = _Diary(meter)
-    rule = CutRule(
-        quench.discarded_weight,
-        bond_ceiling=quench.bond_ceiling,
-        bond_floor=quench.bond_floor,
-        method=quench.cutting,
-    )
-    moment = None
+    tools = _Tools(quench)
+    saved = None if keeper is None else keeper.load()
+    clock, diary = _Clock(saved), Diary(tools.meter)
+    if saved is None or "evolution" not in saved:
+        start = start or start_of_quench(quench, keeper=keeper)
+        facts, reached = (
+            start.facts,
+            Reached(0.0, 0, 0, start.state.copy(), CutLedger.empty(quench.chain.sites)),
+        )
+        resumed = None
+    else:
+        facts = StartFacts(**saved["start"])
+        reached = resumed = to_evolution(saved["evolution"], tools.grading, tools.rule)
+        diary.resume(saved["diary"])
+
+    def content(reached: Reached) -> Content:
+        return {
+            "start": asdict(facts),
+            "evolution": of_evolution(reached, tools.rule),
+            "diary": diary.content(),
+            **clock.spent(),
+        }
+
+    last = reached
     for moment in evolve(
-        start.state,
-        chain.bond_terms,
+        reached.state,
+        quench.chain.bond_terms,
         every=quench.every,
         samples=quench.samples,
         time_step=quench.time_step,
         scheme=SCHEMES[quench.trotter_order],
-        rule=rule,
-        after_layer=_progress_reporter(report),
+        rule=tools.rule,
+        after_layer=_after_layer(report, keeper, content),
+        resumed=resumed,
     ):
         diary.write(moment)
-    assert moment is not None, "the start is a moment"
-    record = diary.record(
-        charges=tuple(chain.charges),
-        norms={name: largest_norm(members) for name, members in operators.items()},
-        start=start,
-        start_error=start_error,
-        events=(*_start_events(start, quench), *diary.events),
-        seconds=time.perf_counter() - began,
-        cpu_seconds=time.process_time() - cpu,
-    )
-    return replace(
-        record,
+        last = Reached(moment.time, len(diary.rows["time"]) - 1, 0, moment.state, moment.cuts)
+    record = _record(quench, tools, diary, facts, last, clock)
+    if keeper is not None and resumed is not last:
+        keeper.save({"stage": "evolution", "time": last.time}, content(last))
+    return record
+
+
+def _record(
+    quench: Quench, tools: _Tools, diary: Diary, facts: StartFacts, last: Reached, clock: _Clock
+) -> QuantumRecord:
+    """Return everything measured along a quench that has come to its end."""
+    table, chain = diary.table(), quench.chain
+    fields = {name: table[name] for name in tools.meter.shapes}
+    return QuantumRecord(
+        times=table["time"],
+        fields=fields,
+        bond_dimension=table["bond_dimension"],
+        operator_entanglement=table["operator_entanglement"],
+        discarded_weight=table["discarded_weight"],
+        angle=table["angle"],
+        norms={name: largest_norm(members) for name, members in tools.operators.items()},
+        start_distance=facts.distance,
+        start_error=facts.error,
+        start_steps=facts.steps,
+        log_partition_function=facts.log_partition_function,
+        totals=conserved_totals(fields, tuple(chain.charges)),
+        events=(*facts.events(), *diary.events),
+        **clock.spent(),
+        cuts=table["cuts"],
+        peak_state_bytes=diary.peak_bytes,
         weight_asked=quench.discarded_weight,
         time_step=quench.time_step,
         trail=trail_of(
-            moment.cuts,
+            last.cuts,
             chain,
-            operators,
+            tools.operators,
             every=quench.every,
             steps=quench.steps,
             scheme=SCHEMES[quench.trotter_order],
         ),
-        last_state=moment.state,
+        last_state=last.state,
     )
 
 
-def _start_events(start: Preparation, quench: Quench) -> list[dict[str, object]]:
-    """Return the event of a start that is not as near to the exact one as asked."""
-    if start.reached:
-        return []
-    detail = f"state within {start.distance:.1e} of the exact start, {quench.preparation_distance:.1e} asked"
-    return [{"kind": "preparation", "detail": detail}]
+def _after_layer(
+    report: Callable[[Progress], None] | None,
+    keeper: Keeper | None,
+    content: Callable[[Reached], Content],
+) -> Callable[[Reached], None]:
+    """Return an after-layer hook that times the layers, passes the progress on, and lets the keeper save."""
+    last = time.perf_counter()
 
+    def after_layer(reached: Reached) -> None:
+        nonlocal last
+        now = time.perf_counter()
+        if report is not None:
+            report(Progress(reached.time, reached.state.bond_dimensions, now - last))
+        if keeper is not None:
+            keeper.after_layer({"stage": "evolution", "time": reached.time}, lambda: content(reached))
+        last = time.perf_counter()
 
-def _start_error(meter: LocalObservables, start: Preparation) -> dict[str, float]:
-    """Estimate each observable's error in the start from the state one refinement earlier.
-
-    A current vanishes at t = 0 by symmetry but inherits the error of its density later, so both share the
-    larger one; what no current carries stands alone.
-    """
-    fine, _ = meter.measure(start.state)
-    coarse, _ = meter.measure(start.coarser)
-    change = {
-        name: START_SAFETY * start.error_share * float(np.abs(fine[name] - coarse[name]).max())
-        for name in fine
-    }
-    pairs = [pair for pair in CURRENTS.items() if change.keys() >= set(pair)]
-    return change | {name: max(change[each] for each in pair) for pair in pairs for name in pair}
+    return after_layer
 
 
 def conserved_totals(fields: Mapping[str, Reals], charges: Iterable[str]) -> dict[str, Reals]:
@@ -211,94 +322,3 @@ def conserved_totals(fields: Mapping[str, Reals], charges: Iterable[str]) -> dic
 def largest_norm(operators: Sequence[Operator]) -> float:
     """Return the largest operator norm of an observable's operators, 0 if none acts anywhere."""
     return max((operator_norm(operator) for operator in operators if operator), default=0.0)
-
-
-def _progress_reporter(
-    report: Callable[[Progress], None] | None,
-) -> Callable[[float, ChainState, CutLedger], None] | None:
-    """Return an after-layer hook that times the layers and passes the progress on."""
-    if report is None:
-        return None
-    last = time.perf_counter()
-
-    def after_layer(reached: float, state: ChainState, _ledger: CutLedger) -> None:
-        nonlocal last
-        now = time.perf_counter()
-        report(Progress(reached, state.bond_dimensions, now - last))
-        last = now
-
-    return after_layer
-
-
-class _Diary:
-    """Collects what is measured at each moment."""
-
-    def __init__(self, meter: LocalObservables) -> None:
-        self.meter = meter
-        self.rows: dict[str, list[Reals]] = {}
-        self.events: list[dict[str, object]] = []
-        self.peak_bytes = 0
-
-    def write(self, moment: Moment) -> None:
-        """Measure the state and note what happened to its cuts."""
-        values, entropies = self.meter.measure(moment.state)
-        cuts = moment.cuts
-        row = {
-            **values,
-            "time": np.array(moment.time),
-            "operator_entanglement": entropies,
-            "bond_dimension": moment.state.bond_dimensions.astype(np.float64),
-            "discarded_weight": cuts.discarded_weight.copy(),
-            "angle": np.array(cuts.angle.sum()),
-            "cuts": np.array(float(cuts.cuts)),
-        }
-        for name, value in row.items():
-            self.rows.setdefault(name, []).append(value)
-        self.peak_bytes = max(self.peak_bytes, moment.state.bytes)
-        self._note(
-            moment, "bond_ceiling", int(cuts.ceiling_cuts.sum()), "cuts lost more than the weight asked for"
-        )
-        self._note(
-            moment, "svd_fallback", cuts.fallbacks, "singular value decompositions needed the slower driver"
-        )
-
-    def _note(self, moment: Moment, kind: str, count: int, meaning: str) -> None:
-        """Enter an event when its count has grown since the last entry."""
-        before = sum(int(str(event["count"])) for event in self.events if event["kind"] == kind)
-        if count > before:
-            detail = f"{count - before} {meaning} up to t = {moment.time:g}"
-            self.events.append({"time": moment.time, "kind": kind, "count": count - before, "detail": detail})
-
-    def record(
-        self,
-        *,
-        charges: Sequence[str],
-        norms: dict[str, float],
-        start: Preparation,
-        start_error: dict[str, float],
-        events: tuple[dict[str, object], ...],
-        seconds: float,
-        cpu_seconds: float,
-    ) -> QuantumRecord:
-        """Return all rows as arrays; charges : names of the conserved densities beside the energy's."""
-        table = {name: np.array(rows) for name, rows in self.rows.items()}
-        fields = {name: table[name] for name in self.meter.shapes}
-        return QuantumRecord(
-            times=table["time"],
-            fields=fields,
-            bond_dimension=table["bond_dimension"],
-            operator_entanglement=table["operator_entanglement"],
-            discarded_weight=table["discarded_weight"],
-            angle=table["angle"],
-            norms=norms,
-            start_distance=start.distance,
-            start_error=start_error,
-            start_steps=start.steps,
-            log_partition_function=start.log_partition_function,
-            totals=conserved_totals(fields, charges),
-            events=events,
-            seconds=seconds,
-            cpu_seconds=cpu_seconds,
-            cuts=table["cuts"],
-            peak_state_bytes=self.peak_bytes,
-        )

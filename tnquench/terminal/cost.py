@@ -15,7 +15,7 @@ from tnquench.config.schema import Config
 from tnquench.conventions import CURRENTS, ERROR_SOURCES
 from tnquench.dataset.variables import COORDINATES, LEVELS, Variable, held_by, variables_of
 from tnquench.observables.quench import Quench
-from tnquench.run import planned_companions
+from tnquench.quantum_of import planned_companions
 from tnquench.terminal.units import duration, plain, size
 
 #: Times at which the bond dimension is shown.

@@ -17,7 +17,7 @@ from rich.table import Column
 from rich.text import Text
 
 from tnquench.observables.quench import Progress, Quench
-from tnquench.run import Watch
+from tnquench.quantum_of import Watch
 from tnquench.terminal.pace import Pace
 from tnquench.terminal.units import duration, plain
 

@@ -28,7 +28,10 @@ from tnquench.terminal.table import aligned
 
 def judge_command(
     candidate: Annotated[
-        Path, typer.Argument(metavar="CANDIDATE", help="CSV, HDF5 or netCDF file, or a second dataset.")
+        Path,
+        typer.Argument(
+            metavar="CANDIDATE", help="CSV, HDF5 or netCDF file, second dataset, or file.py:function."
+        ),
     ],
     against: Annotated[
         Path, typer.Option(metavar="DATASET", help="The dataset that judges, its folder or its run.h5.")
@@ -36,6 +39,9 @@ def judge_command(
     allow: Annotated[
         str | None, typer.Option(metavar="X", help="What is tolerated: a number, euler or diffusive.")
     ] = None,
+    run_code: Annotated[
+        bool, typer.Option("--run-code", help="Run the Python code of CANDIDATE, with all your rights.")
+    ] = False,
     as_json: Annotated[bool, typer.Option("--json", help="Print JSON.")] = False,
     html: Annotated[Path | None, typer.Option(metavar="FILE", help="Write a page with figures.")] = None,
     into: Annotated[
@@ -48,8 +54,11 @@ def judge_command(
     these names. Without --allow it must agree with the chain within its numerical error. A number is the
     largest root mean square deviation beyond that error, in each observable; euler means no farther from the
     chain than the dataset's own Euler prediction. Exit code 4 where it fails.
+
+    A function, path/to/file.py:name, takes times and positions (by "site" and "bond") and returns a mapping
+    from observables to arrays (time, place). Its code runs only with --run-code.
     """
-    judgement = judge(candidate, against, allow)
+    judgement = judge(candidate, against, allow, run_code=run_code)
     if html is not None:
         write_page(judgement, html)
     if into is not None:
@@ -73,7 +82,7 @@ def judgement_text(judgement: Judgement) -> str:
 def _about(judgement: Judgement) -> str:
     lines = [
         f"Candidate: {_printable(judgement.candidate.name)}",
-        f"Against: {judgement.against} ({_printable(judgement.title)})",
+        f"Against: {_printable(str(judgement.against))} ({_printable(judgement.title)})",
         f"Allowed: {allowed_in_words(judgement)}",
         *(f"Note: {_printable(remark)}" for remark in judgement.remarks),
     ]

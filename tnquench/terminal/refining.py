@@ -8,7 +8,9 @@ from typing import Annotated
 import typer
 
 from tnquench.refine import refine
+from tnquench.stopping import Limits
 from tnquench.terminal.display import watching
+from tnquench.terminal.running import stoppable
 from tnquench.terminal.summary import show_findings
 
 
@@ -24,9 +26,10 @@ def refine_command(
     """Add a tighter main run to a finished run, which becomes a companion of it.
 
     Only the new main run is simulated; the errors are judged by the runs that are there. run.h5 and the
-    report are replaced at the end; the folder's path is printed.
+    report are replaced at the end; the folder's path is printed. What was stopped goes on when the same
+    command is given again.
     """
-    with watching() as watch:
-        folder = refine(dataset, weight=weight, time_step=step, watch=watch)
+    with stoppable(Limits()) as stop, watching() as watch:
+        folder = refine(dataset, weight=weight, time_step=step, watch=watch, stop=stop)
     show_findings(folder)
     typer.echo(str(folder))

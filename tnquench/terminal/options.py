@@ -1,0 +1,26 @@
+"""Arguments and options that several commands take."""
+
+from __future__ import annotations
+
+import os
+from pathlib import Path
+from typing import Annotated
+
+import typer
+
+#: A main run and its four companions: more processes would idle.
+MOST_THREADS = 5
+
+ConfigFile = Annotated[Path, typer.Argument(metavar="CONFIG", help="TOML file with the settings.")]
+Into = Annotated[Path | None, typer.Option("--into", metavar="FOLDER", help="Where the dataset goes.")]
+Threads = Annotated[
+    int | None,
+    typer.Option(metavar="N", min=1, help=f"Processes at once; default: one a core, at most {MOST_THREADS}."),
+]
+AsJson = Annotated[bool, typer.Option("--json", help="Print JSON.")]
+
+
+def usable_cores() -> int:
+    """Return how many processes a run takes unless told otherwise."""
+    cores = len(os.sched_getaffinity(0)) if hasattr(os, "sched_getaffinity") else os.cpu_count() or 1
+    return min(MOST_THREADS, cores)

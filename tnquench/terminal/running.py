@@ -1,0 +1,96 @@
+"""The command `run`: limits and signals around a run that goes on from its checkpoints."""
+
+from __future__ import annotations
+
+from collections.abc import Callable, Iterator
+from contextlib import contextmanager
+from typing import Annotated, Any
+
+import typer
+
+from tnquench.config.cluster import parse_duration, parse_memory
+from tnquench.config.load import load_config
+from tnquench.errors import Stopped
+from tnquench.run import Continuation, run, run_one
+from tnquench.stopping import Limits, Stop, answering_signals
+from tnquench.terminal.display import watching
+from tnquench.terminal.options import ConfigFile, Into, Threads, usable_cores
+from tnquench.terminal.summary import show_findings
+
+
+def _limit(parse: Callable[[str], float]) -> Callable[[str], float]:
+    """Return a parser that complains about an option in its own words."""
+
+    def parsed(text: str) -> float:
+        try:
+            return parse(text)
+        except ValueError as refusal:
+            message = f'"{text}": {refusal}'
+            raise typer.BadParameter(message) from refusal
+
+    return parsed
+
+
+Walltime = Annotated[
+    Any,
+    typer.Option(
+        metavar="TIME",
+        help='Stop with checkpoints before it is over: "2h".',
+        parser=_limit(parse_duration),
+    ),
+]
+Memory = Annotated[
+    Any,
+    typer.Option(
+        metavar="SIZE", help='Stop with checkpoints below this memory: "8GB".', parser=_limit(parse_memory)
+    ),
+]
+
+
+def run_command(
+    config: ConfigFile,
+    into: Into = None,
+    threads: Threads = None,
+    walltime: Walltime = None,
+    memory: Memory = None,
+    fresh: Annotated[bool, typer.Option("--fresh", help="Forget the checkpoints that are there.")] = False,
+    only: Annotated[
+        str | None,
+        typer.Option(metavar="QUENCH", help="Carry out one quench alone: main, weight_10, step_2 ..."),
+    ] = None,
+    checkpoint_every: Annotated[
+        float | None, typer.Option(metavar="SECONDS", min=0.0, help="Least time between two checkpoints.")
+    ] = None,
+) -> None:
+    """Simulate a config with its companions, predict, judge; write dataset and report.
+
+    The folder, results/NAME-OF-CONFIG unless given, holds run.h5, report.html and figures; its path is
+    printed. Results do not depend on the number of threads. A run that was stopped (Ctrl-C, SIGTERM, SIGUSR1,
+    a limit: exit code 3) or killed goes on when the same command is given again; with a larger `until` a
+    finished one goes on too.
+    """
+    cluster = load_config(config).cluster
+    limits = Limits(
+        seconds=cluster.walltime_seconds if walltime is None else walltime,
+        memory=cluster.memory_bytes if memory is None else memory,
+    )
+    with stoppable(limits) as stop, watching() as watch:
+        how = Continuation(stop=stop, checkpoint_every=checkpoint_every, fresh=fresh)
+        if only is not None:
+            folder = run_one(config, only, into=into, watch=watch, continuation=how)
+        else:
+            folder = run(config, into=into, threads=threads or usable_cores(), watch=watch, continuation=how)
+    if only is None:
+        show_findings(folder)
+    typer.echo(str(folder))
+
+
+@contextmanager
+def stoppable(limits: Limits) -> Iterator[Stop]:
+    """Answer signals and limits within the block, and say how to go on where one has ended it."""
+    try:
+        with answering_signals(limits) as stop:
+            yield stop
+    except Stopped as stopped:
+        said = f"tnquench: stopped, {stopped.why}; the same command goes on from the checkpoints"
+        raise Stopped(said) from stopped
