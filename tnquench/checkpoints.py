@@ -5,12 +5,12 @@ from __future__ import annotations
 import hashlib
 import shutil
 import time
-import tomllib
 from collections.abc import Callable, Iterable, Mapping
 from dataclasses import dataclass
 from pathlib import Path
 from typing import Any
 
+from tnquench.config.changes import changes, forbidden
 from tnquench.config.document import effective_toml
 from tnquench.config.load import read_config
 from tnquench.config.schema import Config
@@ -27,10 +27,6 @@ LARGEST_SHARE, LEAST_INTERVAL = 0.03, 30.0
 
 #: A changed layout of the content makes old checkpoints another quench's.
 FORMAT = 1
-
-#: Settings that may change between a run and its continuation, by section or dotted name: none of them
-#: changes what a quench has done so far.
-MAY_CHANGE = frozenset({"title", "hydrodynamics", "budget", "stretch", "sweep", "cluster", "evolution.until"})
 
 
 @dataclass(frozen=True)
@@ -144,7 +140,7 @@ def open_store(folder: Path, config: Config, *, interval: float | None, fresh: b
     kept = store.folder / CONFIG_NAME
     if kept.exists() and any(store.folder.glob("*.h5")):
         earlier = read_config(kept.read_text(encoding="utf-8"), subject=str(kept))
-        if problems := _differences(earlier, config):
+        if problems := forbidden(changes(earlier, config)):
             advice = "name another folder with --into, or start afresh with --fresh"
             raise InputError(str(folder), [*problems, f"the folder holds a run of another config: {advice}"])
     store.belongs_to(config)
@@ -159,37 +155,6 @@ def require_reachable(store: Store, quenches: Mapping[str, Quench]) -> None:
             problem = f"[evolution] until = {until:g}: {name} has been at t = {header['time']:.4g} already"
             advice = "a run can grow, not shrink: name another folder, or start afresh with --fresh"
             raise InputError(str(store.folder.parent), [f"{problem}; {advice}"])
-
-
-def _differences(earlier: Config, now: Config) -> list[str]:
-    """Return one line per setting that differs and may not."""
-    had, has = (_flattened(tomllib.loads(effective_toml(config))) for config in (earlier, now))
-    return [
-        f"{key}: {_told(has.get(key))} now, {_told(had.get(key))} in the folder"
-        for key in sorted(had.keys() | has.keys())
-        if had.get(key) != has.get(key) and not _may_change(key)
-    ]
-
-
-def _may_change(key: str) -> bool:
-    return key in MAY_CHANGE or key.partition(".")[0] in MAY_CHANGE
-
-
-def _flattened(tables: Mapping[str, Any], prefix: str = "") -> dict[str, Any]:
-    """Return every setting by its dotted name."""
-    flat: dict[str, Any] = {}
-    for key, value in tables.items():
-        if isinstance(value, Mapping):
-            flat |= _flattened(value, f"{prefix}{key}.")
-        else:
-            flat[prefix + key] = value
-    return flat
-
-
-def _told(value: object) -> str:
-    """Return a value in few words."""
-    text = "not set" if value is None else repr(value)
-    return text if len(text) <= 60 else f"{text[:57]}..."
 
 
 def fingerprint(quench: Quench) -> str:

@@ -26,6 +26,7 @@ from tnquench.bethe.thermo import THERMO_MODELS, thermo
 from tnquench.bethe.transport import transport
 from tnquench.config.document import effective_toml, settings_page
 from tnquench.config.load import load_config
+from tnquench.config.points import load_sweep
 from tnquench.dataset.integrity import check_run
 from tnquench.errors import TnquenchError, VerdictNegative
 from tnquench.report.page import write_report
@@ -103,7 +104,10 @@ app.command("run", epilog=f"Example: {PROGRAM} run configs/demo.toml --into resu
 
 @app.command("forecast", epilog=f"Example: {PROGRAM} forecast configs/demo.toml --threads 2")
 def forecast_command(config: ConfigFile, threads: Threads = None, as_json: AsJson = False) -> None:
-    """Estimate bond dimension, time, memory and disk of a run from short pilot runs; nothing is written."""
+    """Estimate bond dimension, time, memory and disk of a run from short pilot runs; nothing is written.
+
+    Of a sweep the first point is meant.
+    """
     with watching() as watch:
         watch.stage("pilot runs", None)
         settings, quench, estimate = forecast(config)
@@ -181,8 +185,8 @@ def check_command(
 ) -> None:
     """Check a config, or the integrity of a dataset.
 
-    A good config is printed with all settings in effect. A damaged, altered or incomplete dataset gives exit
-    code 4.
+    A good config is printed with all settings in effect, of a sweep those of its first point. A damaged,
+    altered or incomplete dataset gives exit code 4.
     """
     if _is_dataset(path):
         if findings := check_run(path):
@@ -190,6 +194,8 @@ def check_command(
         typer.echo(f"{path}: sound and complete")
     else:
         config = load_config(path)
+        if config.sweep.points:
+            load_sweep(path)
         typer.echo(f"# {path}: no problems; all settings in effect:\n\n{effective_toml(config)}", nl=False)
         if reason := no_prediction(config):
             typer.echo(f"{path}: without a prediction: {reason}", err=True)

@@ -16,7 +16,7 @@ from tnquench.checkpoints import open_store
 from tnquench.config.load import load_config
 from tnquench.config.schema import Config
 from tnquench.config.sweep import refuse_sweep
-from tnquench.dataset.lock import folder_lock, lock_holder
+from tnquench.dataset.lock import LONE_LOCK, folder_lock, lock_holder
 from tnquench.dataset.writer import require_writable, write_run
 from tnquench.errors import InputError
 from tnquench.observables.quench import Quench
@@ -38,9 +38,6 @@ from tnquench.stretch_of import add_study, other_factors, stretched_config, stre
 
 #: Where results go unless told otherwise, below the working directory.
 DEFAULT_FOLDER = Path("results")
-
-#: Begin of the name of the lock of a quench that is carried out alone.
-LONE_LOCK = ".lock-"
 
 
 @dataclass(frozen=True)

@@ -8,7 +8,7 @@ import subprocess
 import sys
 import time
 from collections.abc import Iterator, Mapping, Sequence
-from contextlib import contextmanager
+from contextlib import contextmanager, suppress
 from pathlib import Path
 from types import FrameType
 
@@ -41,7 +41,7 @@ class Attempt:
         self.began = time.monotonic()
         with _refusing(task.log):
             self._log = task.log.open("ab", buffering=0)
-        self._log.write(begin_mark(task.name).encode())
+            self._log.write(begin_mark(task.name).encode())
         self._process = subprocess.Popen(
             [sys.executable, "-S", str(GUARD), str(os.getpid()), *task.command()],
             stdin=subprocess.DEVNULL,
@@ -59,7 +59,8 @@ class Attempt:
             return None
         seconds = time.monotonic() - self.began
         if not self._log.closed:
-            self._log.write(end_mark(code, seconds).encode())
+            with suppress(OSError):  # a full disk, a vanished folder: the exit code tells as well
+                self._log.write(end_mark(code, seconds).encode())
             self._log.close()
         return Ending(self.task.name, code, seconds)
 

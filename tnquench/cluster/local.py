@@ -9,7 +9,8 @@ from collections.abc import Callable, Sequence
 
 from tnquench.cluster.attempt import Attempt, answering
 from tnquench.cluster.log import said
-from tnquench.cluster.tasks import DONE, Ending, Task
+from tnquench.cluster.tasks import DONE, FAILED, Ending, Task
+from tnquench.errors import InputError
 
 #: Seconds between two looks at the processes.
 LOOK = 0.05
@@ -62,7 +63,11 @@ class _Pool:
                 return
             self.waiting.remove(task)
             self.tries[task.name] += 1
-            self.running[task.name] = Attempt(task)
+            try:
+                self.running[task.name] = Attempt(task)
+            except InputError as refusal:  # the others go on
+                self.tell(str(refusal))
+                self._settle(task, Ending(task.name, FAILED, 0.0))
 
     def stop(self, number: int, *, at_once: bool) -> None:
         """Pass a signal on to all processes, or kill them; begin no more."""

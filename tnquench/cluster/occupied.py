@@ -5,10 +5,7 @@ from __future__ import annotations
 from collections.abc import Iterator
 from pathlib import Path
 
-from tnquench.dataset.lock import Holder, lock_holder
-
-#: Lock of a whole run, and what the locks of single quenches begin with.
-WHOLE, LONE = ".lock", ".lock-"
+from tnquench.dataset.lock import LONE_LOCK, WHOLE_LOCK, Holder, lock_holder
 
 
 def occupant(folder: Path, quench: str | None = None) -> Holder | None:
@@ -23,12 +20,12 @@ def occupant(folder: Path, quench: str | None = None) -> Holder | None:
 
 
 def _locks(folder: Path, quench: str | None) -> Iterator[tuple[Path, str]]:
-    yield folder, WHOLE
+    yield folder, WHOLE_LOCK
     if quench is not None:
         place = folder / quench
-        yield place.parent, f"{LONE}{place.name}"
+        yield place.parent, f"{LONE_LOCK}{place.name}"
         return
     for place in (folder, *folder.glob("stretch_*")):
-        for file in place.glob(f"{LONE}*"):
-            if "." not in file.name[len(LONE) :]:  # a claim to a lock has its token behind a dot
+        for file in place.glob(f"{LONE_LOCK}*"):
+            if "." not in file.name[len(LONE_LOCK) :]:  # a claim to a lock has its token behind a dot
                 yield place, file.name

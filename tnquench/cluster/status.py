@@ -19,7 +19,7 @@ from tnquench.cluster.tasks import (
     log_name,
     quenches_of,
 )
-from tnquench.config.changes import changes, forbidden
+from tnquench.config.changes import changes, forbidden, shortened
 from tnquench.config.load import read_config
 from tnquench.config.points import Point
 from tnquench.config.schema import Config
@@ -135,7 +135,7 @@ def _dataset(config: Config, folder: Path) -> Run | str:
     except InputError as error:
         return f"{FILE_NAME}: {error.problems[0]}"
     changed = changes(stored, config)
-    if problems := forbidden(changed):
+    if problems := [*forbidden(changed), *shortened(changed)]:
         return f"{FILE_NAME} is of another config: {problems[0]}"
     if changed or (config.stretch.factors and not run.stretch.sizes):
         return ""

@@ -9,10 +9,10 @@ from collections.abc import Callable, Iterable, Iterator, Sequence
 from dataclasses import dataclass
 from pathlib import Path
 
-from tnquench.cluster.dask_engine import run_dask
+from tnquench.cluster.dask_engine import Workers, run_dask
 from tnquench.cluster.index import known_numbers, write_index
 from tnquench.cluster.local import run_local
-from tnquench.cluster.slurm import Submission, queued_points, submit
+from tnquench.cluster.slurm import FOLDER_NAME, Submission, queued_points, submit
 from tnquench.cluster.status import Standing, standing
 from tnquench.cluster.tasks import CONFIG_NAME, STOPPED, Limits, Task, quenches_of, tasks_of
 from tnquench.config.cluster import Cluster
@@ -71,11 +71,12 @@ class SweepRun:
         tasks = list(self._tasks(points, limits))
         self._prepare(points)
         cluster = self.cluster
-        tell(f"{len(points)} points, {len(tasks)} tasks, {cluster.engine}: {_said(jobs, limits, cluster)}")
+        tell(f"points: {len(points)}, tasks: {len(tasks)}, {cluster.engine}: {_said(jobs, limits, cluster)}")
         if cluster.engine == "slurm":
             submit(tasks, self.folder, Submission(cluster, self.setup), tell=tell)
         elif cluster.engine == "dask":
-            run_dask(tasks, cluster=cluster, limits=limits, jobs=jobs, setup=self.setup, tell=tell)
+            outputs = self.folder / FOLDER_NAME
+            run_dask(tasks, Workers(cluster, limits, jobs, outputs, self.setup), tell=tell)
         else:
             run_local(tasks, jobs=jobs, tell=tell)
 

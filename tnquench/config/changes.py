@@ -32,17 +32,19 @@ def changes(earlier: Config, now: Config) -> dict[str, tuple[Any, Any]]:
 
 def forbidden(changed: Mapping[str, tuple[Any, Any]]) -> list[str]:
     """Return one line per change with which a run cannot be continued."""
-    lines = [
+    return [
         f"{key}: {_told(has)} now, {_told(had)} in the folder"
         for key, (had, has) in changed.items()
         if not _is_among(key, CONTINUED)
     ]
+
+
+def shortened(changed: Mapping[str, tuple[Any, Any]]) -> list[str]:
+    """Return a line if less time is asked for now: a finished run grows, but does not shrink."""
     until = changed.get("evolution.until")
-    if until is not None and until[1] < until[0]:
-        lines.append(
-            f"evolution.until: {_told(until[1])} now, but the folder's run goes to {_told(until[0])}"
-        )
-    return lines
+    if until is None or until[1] >= until[0]:
+        return []
+    return [f"evolution.until: {_told(until[1])} now, but the folder's run goes to {_told(until[0])}"]
 
 
 def _leaves(tables: Mapping[str, Any], parents: str = "") -> Iterator[tuple[str, Any]]:

@@ -34,16 +34,19 @@ LARGEST_BYTES = 10**16
 DURATION_FORMS = 'such as "2h", "1h30m", "00:30:00" or "1-12:00:00" (days-hours)'
 MEMORY_FORMS = 'such as "8GB", "500MB" or "16GiB"'
 
-_CLOCK = re.compile(r"(?:(\d{1,4})-)?(\d{1,6}):(\d{1,2}):(\d{1,2})")
+_CLOCK = re.compile(r"(?:(\d{1,4})-)?(\d{1,6}):(\d{1,2}):(\d{1,2})", re.ASCII)
 _UNITS = re.compile(
     r"(?:(\d{1,9}(?:\.\d{1,6})?)d)?(?:(\d{1,9}(?:\.\d{1,6})?)h)?(?:(\d{1,9}(?:\.\d{1,6})?)m(?:in)?)?"
-    r"(?:(\d{1,9}(?:\.\d{1,6})?)s)?"
+    r"(?:(\d{1,9}(?:\.\d{1,6})?)s)?",
+    re.ASCII,
 )
 _SECONDS = (86_400, 3_600, 60, 1)
-_MEMORY = re.compile(r"(\d{1,12}(?:\.\d{1,6})?) ?([kmgt])(i?)b", re.IGNORECASE)
+_MEMORY = re.compile(r"(\d{1,12}(?:\.\d{1,6})?) ?([kmgt])(i?)b", re.IGNORECASE | re.ASCII)
 _WORD = re.compile(r"[A-Za-z0-9][A-Za-z0-9_.+-]{0,63}")
 _RESOURCE_VALUE = re.compile(r"[A-Za-z0-9][A-Za-z0-9_.,:+/&|*\[\]-]{0,199}")
-_ADDRESS = re.compile(r"(?:tcp|tls)://(?:[A-Za-z0-9][A-Za-z0-9.-]{0,252}|\[[0-9A-Fa-f:]{2,45}\]):\d{1,5}")
+_ADDRESS = re.compile(
+    r"(?:tcp|tls)://(?:[A-Za-z0-9][A-Za-z0-9.-]{0,252}|\[[0-9A-Fa-f:]{2,45}\]):\d{1,5}", re.ASCII
+)
 
 
 class Cluster(Section):

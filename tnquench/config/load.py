@@ -31,6 +31,9 @@ MOST_PARTS = 32
 _PART = r"""(?:[A-Za-z0-9_-]++|"[^"\n]*+"|'[^'\n]*+')[ \t]*+"""
 _LONG_NAME = re.compile(rf"(?<![A-Za-z0-9_-])(?:{_PART}\.[ \t]*+){{{MOST_PARTS}}}")
 
+#: Settings, and entries of all lists together, in one config: the longest chain and its tables have fewer.
+MOST_SETTINGS, MOST_ENTRIES = 10_000, 500_000
+
 _POSITION = re.compile(r" \(at line (\d+), column (\d+)\)$| \(at end of document\)$")
 
 
@@ -92,7 +95,10 @@ def parsed(text: str, *, subject: str) -> dict[str, Any]:
         line, limit = text.count("\n", 0, found.start()) + 1, f"more than {MOST_PARTS} parts"
         raise InputError(subject, [f"line {line}: a dotted name of {limit}; no setting has so many"])
     try:
-        return tomllib.loads(text)
+        tables = tomllib.loads(text)
+        if problem := _excess(tables):
+            raise InputError(subject, [problem])
+        return tables
     except tomllib.TOMLDecodeError as error:
         problem = _syntax_problem(str(error), text)
     except RecursionError:
@@ -100,6 +106,22 @@ def parsed(text: str, *, subject: str) -> dict[str, Any]:
     except ValueError:  # a number with thousands of digits, a date that does not exist
         problem = "not valid TOML: holds a number or a date that cannot be read"
     raise InputError(subject, [problem])
+
+
+def _excess(tables: dict[str, Any]) -> str:
+    """Return that a config holds more than any config needs, before each part of it is found wrong."""
+    settings, entries, left = 0, 0, list[Any]([tables])
+    while left:
+        part = left.pop()
+        if isinstance(part, dict):
+            settings += len(part)
+            left += [value for value in part.values() if isinstance(value, (dict, list))]
+        else:
+            entries += len(part)
+            left += [value for value in part if isinstance(value, (dict, list))]
+    if settings > MOST_SETTINGS:
+        return f"{settings} settings; must be at most {MOST_SETTINGS}"
+    return f"lists of {entries} entries; must be at most {MOST_ENTRIES}" if entries > MOST_ENTRIES else ""
 
 
 def _syntax_problem(message: str, text: str) -> str:

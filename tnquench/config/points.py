@@ -33,9 +33,10 @@ class LoadedSweep:
     cluster: Cluster
 
 
-def load_sweep(path: str | Path) -> LoadedSweep:
+def load_sweep(path: str | Path, *, allow_outside: bool = False) -> LoadedSweep:
     """Read the sweep in a TOML file.
 
+    allow_outside : as of `load_config`
     Raises InputError with one line per problem of the file, of [sweep], and of each point; a problem of all
     points is told once.
     """
@@ -43,7 +44,7 @@ def load_sweep(path: str | Path) -> LoadedSweep:
     tables = parsed(text, subject=str(path))
     sweep = tables.get("sweep")
     if sweep is None or not is_sound(sweep):
-        read_config(text, subject=str(path), folder=folder)  # tells every problem
+        read_config(text, subject=str(path), folder=folder, allow_outside=allow_outside)  # tells all
     plans = list(sweep_points(sweep)) if sweep is not None else []
     if not plans:
         advice = "name settings and values in [sweep.grid] or [sweep.together], or use: tnquench run"
@@ -52,7 +53,9 @@ def load_sweep(path: str | Path) -> LoadedSweep:
     points, problems = [], dict[str, tuple[str, ...]]()
     for plan in plans:
         try:
-            config = read_tables(at_point(base, plan.settings), subject=plan.name, folder=folder)
+            config = read_tables(
+                at_point(base, plan.settings), subject=plan.name, folder=folder, allow_outside=allow_outside
+            )
         except InputError as refusal:
             problems[plan.name] = refusal.problems
         else:

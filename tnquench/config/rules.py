@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+from collections import Counter
 from collections.abc import Iterator, Mapping
 from typing import Any
 
@@ -159,6 +160,7 @@ def _levels(settings: Settings) -> Iterator[str]:
     levels = settings["hydrodynamics.levels"]
     if not isinstance(levels, (list, tuple)):
         return
-    twice = sorted({level for level in levels if isinstance(level, str) and levels.count(level) > 1})
+    counts = Counter(level for level in levels if isinstance(level, str))
+    twice = sorted(level for level, count in counts.items() if count > 1)
     for level in twice:
         yield f"[hydrodynamics] levels holds {shown(level)} more than once; name each level once"

@@ -110,7 +110,9 @@ def first_point(tables: dict[str, Any]) -> dict[str, Any]:
 
 def is_sound(sweep: Any) -> bool:
     """Whether a [sweep] table makes points as far as it can be known by itself."""
-    return isinstance(sweep, Mapping) and set(sweep) <= {"grid", "together"} and not any(_problems(sweep))
+    if not isinstance(sweep, Mapping) or not set(sweep) <= {"grid", "together"}:
+        return False
+    return all(isinstance(table, Mapping) for table in sweep.values()) and not any(_problems(sweep))
 
 
 def at_point(tables: Mapping[str, Any], settings: Mapping[str, Any]) -> dict[str, Any]:
@@ -153,10 +155,10 @@ def _problems(tables: Mapping[str, Any]) -> Iterator[str]:
         for key, values in lists.items():
             for complaint in _about_list(key, values, is_grid=section == "grid"):
                 sound = False
-                yield f"[sweep.{section}] {shown_key(key)}: {complaint}"
+                yield f"[sweep.{section}] {_shown(key)}: {complaint}"
     for key, other in _overlaps(grid, together):
         sound = False
-        yield f"[sweep] {shown_key(key)} and {shown_key(other)}: set the same twice; keep one of them"
+        yield f"[sweep] {_shown(key)} and {_shown(other)}: set the same twice; keep one of them"
     if sound:
         yield from _about_all(grid, together)
 
@@ -170,6 +172,8 @@ def _about_list(key: str, values: Any, *, is_grid: bool) -> Iterator[str]:
     if not isinstance(values, (list, tuple)) or not values:
         found = "" if values in ([], ()) else f", not {shown(values)}"
         yield f"must be a list of one value at least{found}"
+    elif any(map(_is_unwritable, values)):
+        yield "holds a number of thousands of digits"
     elif is_grid and (twice := _repeated(values)) is not None:
         yield f"holds {shown(twice)} more than once; name each value once"
 
@@ -178,7 +182,7 @@ def _about_all(grid: Mapping[str, Any], together: Mapping[str, Any]) -> Iterator
     """Yield what is wrong with sound lists among each other."""
     lengths = {key: len(values) for key, values in together.items()}
     if len(set(lengths.values())) > 1:
-        found = ", ".join(f"{shown_key(key)} has {length}" for key, length in lengths.items())
+        found = ", ".join(f"{_shown(key)} has {length}" for key, length in lengths.items())
         yield f"[sweep.together]: lists must be of equal length; {found}"
         return
     rows = list(zip(*together.values(), strict=True))
@@ -201,6 +205,14 @@ def _overlaps(grid: Mapping[str, Any], together: Mapping[str, Any]) -> Iterator[
         for length in range(1, len(parts)):
             if (parent := ".".join(parts[:length])) in names:
                 yield parent, key
+
+
+def _is_unwritable(value: Any) -> bool:
+    try:
+        written(value)
+    except ValueError:  # Python refuses to write out so many digits
+        return True
+    return False
 
 
 def _repeated(values: Any) -> Any:
@@ -240,6 +252,10 @@ def _value_label(value: Any) -> str:
     text = value if isinstance(value, str) else written(value)
     plain = re.sub(r"[^a-z0-9.+-]+", "-", text.lower()).strip("-.")[:_LONGEST_LABEL]
     return plain if plain == text else f"{plain}-{_digest(text)}".lstrip("-")
+
+
+def _shown(dotted: str) -> str:
+    return ".".join(shown_key(key) for key in dotted.split("."))
 
 
 def _digest(text: str) -> str:

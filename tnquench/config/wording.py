@@ -13,6 +13,7 @@ from tnquench.config.notation import quantity, written
 from tnquench.config.setting import note
 
 _POSITIVE = "positive"
+_TEXT = "text in quotes"
 _SECTION = "a profile, in a section of its own"
 
 
@@ -31,7 +32,8 @@ class Allowed:
             either = alternatives(written(choice) for choice in self.choices)
             return f"a list, empty or of {either}" if self.listed else either
         if self.listed:
-            return f"a list of {self.noun.removeprefix('a ')}s{', each ' if self.bounds else ''}{self.bounds}"
+            nouns = "texts in quotes" if self.noun == _TEXT else f"{self.noun.removeprefix('a ')}s"
+            return f"a list of {nouns}{', each ' if self.bounds else ''}{self.bounds}"
         if self.bounds.startswith(_POSITIVE):
             return f"a {_POSITIVE} {self.noun.removeprefix('a ')}{self.bounds.removeprefix(_POSITIVE)}"
         return f"{self.noun} {self.bounds}".rstrip()
@@ -71,7 +73,7 @@ def _allowed(annotation: Any, metadata: Sequence[Any]) -> Allowed:
         return Allowed(noun="lists of values by name, in a section of their own")
     if origin is Literal:
         return Allowed(choices=arguments)
-    nouns = {int: "a whole number", float: "a number", str: "text in quotes", bool: "true or false"}
+    nouns = {int: "a whole number", float: "a number", str: _TEXT, bool: "true or false"}
     return Allowed(noun=nouns.get(annotation, _SECTION), bounds=_bounds(metadata))
 
 

@@ -2,8 +2,8 @@
 
 The dataset `contents` is JSON text of everything but the arrays, the group `arrays` holds their entries, one
 long dataset for each type of number. Behind the HDF5 file proper, where HDF5 does not look, stand the header
-as a line of text and a last line with the SHA-256 of the header and of all bytes before the last line. No byte
-reaches the HDF5 library before the digest is found right: the library does not survive every damaged file.
+as a line of text and a last line with the SHA-256 of the header and of all bytes before the last line. No
+byte reaches the HDF5 library before the digest is found right: the library does not survive every damage.
 """
 
 from __future__ import annotations
@@ -12,7 +12,7 @@ import hashlib
 import io
 import math
 import re
-from collections.abc import Callable
+from collections.abc import Callable, Mapping
 from typing import IO, Any
 
 import h5py
@@ -44,14 +44,16 @@ class UnsoundFile(Exception):  # noqa: N818 - the file is at fault; always turne
 
 def write_file(stream: IO[bytes], packed: Packed, header: str) -> None:
     """Write a whole checkpoint file; raises OSError as it came, and leaves no open HDF5 file behind."""
-    _write_hdf5(stream, packed)
-    _seal(stream, header.encode())
+    places = _lay_out(stream, packed)
+    digest = _write_entries(stream, packed, places)
+    _seal(stream, header.encode(), digest)
 
 
 def read_file(stream: IO[bytes]) -> dict[str, Any]:
     """Return the content of a checkpoint file after its digest was found right; raises UnsoundFile."""
     body, header, expected = _read_end(stream)
-    digest = _digest(stream, body)
+    digest = hashlib.sha256()
+    _sum_up(digest, stream, 0, body)
     digest.update(header)
     if digest.hexdigest() != expected:
         message = "damaged: its bytes differ from their digest"
@@ -119,22 +121,32 @@ class _Sink(io.RawIOBase):
         return len(found)
 
 
-def _write_hdf5(stream: IO[bytes], packed: Packed) -> None:
-    """Let HDF5 lay the file out, then write the entries where they belong, straight from the arrays."""
+def _lay_out(stream: IO[bytes], packed: Packed) -> dict[str, int]:
+    """Let HDF5 write the file but for the arrays' entries; return where those of each type belong."""
     sink = _Sink(stream)
-    places = {}
     with h5py.File(sink, "w", libver=LIBRARY_VERSION) as file:
         file.attrs["layout"] = LAYOUT
         file["contents"] = np.frombuffer(packed.text.encode(), dtype=np.uint8)
         arrays = file.create_group("arrays")
-        for name, size in packed.sizes.items():
-            places[name] = _make_room(arrays, name, size)
+        places = {name: _make_room(arrays, name, size) for name, size in packed.sizes.items() if size}
     if sink.error is not None:
         raise sink.error
-    for name, column in packed.columns.items():
-        stream.seek(places[name])
-        for array in column:
-            stream.write(array.reshape(-1).view(np.uint8).data)
+    return places
+
+
+def _write_entries(stream: IO[bytes], packed: Packed, places: Mapping[str, int]) -> Any:
+    """Write the entries where they belong, straight from the arrays; return the SHA-256 of the whole file."""
+    digest, reached = hashlib.sha256(), 0
+    for name, place in sorted(places.items(), key=lambda item: item[1]):
+        _sum_up(digest, stream, reached, place)
+        stream.seek(place)
+        for array in packed.columns[name]:
+            data = array.reshape(-1).view(np.uint8).data
+            stream.write(data)
+            digest.update(data)
+        reached = place + packed.sizes[name] * np.dtype(name).itemsize
+    _sum_up(digest, stream, reached, stream.seek(0, io.SEEK_END))
+    return digest
 
 
 def _make_room(arrays: h5py.Group, name: str, size: int) -> int:
@@ -143,17 +155,16 @@ def _make_room(arrays: h5py.Group, name: str, size: int) -> int:
     layout.set_alloc_time(h5py.h5d.ALLOC_TIME_EARLY)
     layout.set_fill_time(h5py.h5d.FILL_TIME_NEVER)
     kind, space = h5py.h5t.py_create(np.dtype(name), logical=True), h5py.h5s.create_simple((size,))
-    return h5py.h5d.create(arrays.id, name.encode(), kind, space, layout).get_offset() or 0
+    place = h5py.h5d.create(arrays.id, name.encode(), kind, space, layout).get_offset()
+    assert place is not None, "room is made at once"
+    return int(place)
 
 
-def _seal(stream: IO[bytes], header: bytes) -> None:
-    """Add the header and the last line."""
-    stream.flush()
+def _seal(stream: IO[bytes], header: bytes, digest: Any) -> None:
+    """Add the header and the last line; digest : running SHA-256 of what is there."""
     size = stream.seek(0, io.SEEK_END)
-    digest = _digest(stream, size)
     digest.update(header)
     last = LAST_LINE.format(LAYOUT, size, len(header), _sha256(header), digest.hexdigest())
-    stream.seek(0, io.SEEK_END)
     stream.write(header + last.encode())
 
 
@@ -161,19 +172,17 @@ def _sha256(data: bytes) -> str:
     return hashlib.sha256(data).hexdigest()
 
 
-def _digest(stream: IO[bytes], size: int) -> Any:
-    """Return the running SHA-256 of the first `size` bytes."""
-    digest = hashlib.sha256()
-    room = memoryview(bytearray(STRIDE))
-    stream.seek(0)
-    while size > 0:
-        count = stream.readinto(room[: min(STRIDE, size)])  # type: ignore[attr-defined]
+def _sum_up(digest: Any, stream: IO[bytes], first: int, last: int) -> None:
+    """Add the bytes from `first` until `last` to a running SHA-256."""
+    room = memoryview(bytearray(min(STRIDE, last - first)))
+    stream.seek(first)
+    while first < last:
+        count = stream.readinto(room[: last - first])  # type: ignore[attr-defined]
         if not count:
             message = "shorter than it says"
             raise UnsoundFile(message)
         digest.update(room[:count])
-        size -= count
-    return digest
+        first += count
 
 
 def _read_end(stream: IO[bytes]) -> tuple[int, bytes, str]:
@@ -204,9 +213,11 @@ def _read_end(stream: IO[bytes]) -> tuple[int, bytes, str]:
 
 def _fetching(stream: IO[bytes], arrays: h5py.Group) -> Callable[[str, int, list[int]], NDArray[Any]]:
     """Return the function that reads entries of a type from a place on."""
-    places = {name: (entries.id.get_offset() or 0, entries.size) for name, entries in arrays.items()}
+    places = {name: (entries.id.get_offset(), entries.size) for name, entries in arrays.items()}
 
     def fetch(name: str, first: int, shape: list[int]) -> NDArray[Any]:
+        if math.prod(shape) == 0:
+            return np.empty(shape, dtype=np.dtype(name))
         place, there = places[name]
         if not 0 <= first <= first + math.prod(shape) <= there:
             message = "an array ends beyond what is there"

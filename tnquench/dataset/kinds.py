@@ -9,11 +9,13 @@ from math import isfinite
 from tnquench.dataset.contents import Attribute
 from tnquench.dataset.variables import JSON_ATTRIBUTES
 
-#: Attributes that are finite numbers, and one that is nan where no sample is resolved.
-NUMBERS: frozenset[str] = frozenset(
-    {"light_cone_left", "light_cone_right", "light_cone_reach", "resolve_at", "reach"}
-    | {"discarded_weight", "time_step", "sites", "seconds", "wall_seconds", "cpu_seconds"}
+#: Attributes that are finite numbers, those of them that cannot be negative, and one that is nan where no
+#: sample is resolved.
+SIZES: frozenset[str] = frozenset(
+    {"light_cone_reach", "resolve_at", "reach", "discarded_weight", "time_step", "sites"}
+    | {"seconds", "wall_seconds", "cpu_seconds"}
 )
+NUMBERS: frozenset[str] = SIZES | {"light_cone_left", "light_cone_right"}
 GAPPED_NUMBERS: frozenset[str] = frozenset({"first_resolved_time"})
 #: Attributes that are one text each; so are all whose name begins with `kind_`.
 TEXTS: frozenset[str] = frozenset(
@@ -29,6 +31,9 @@ MAIN_RUN: tuple[str, ...] = ("discarded_weight", "time_step", "seconds")
 
 def kind_complaints(owner: str, attributes: Mapping[str, Attribute]) -> Iterator[str]:
     """Yield one line for each attribute of `owner` that is of another kind than its name demands."""
+    left, right = attributes.get("light_cone_left"), attributes.get("light_cone_right")
+    if isinstance(left, int | float) and isinstance(right, int | float) and left > right:
+        yield f"attribute light_cone_left of {owner} is larger than light_cone_right"
     for name, value in attributes.items():
         if expected := _expected(name, value):
             yield f"attribute {name} of {owner or 'the root'} is not {expected}"
@@ -52,6 +57,8 @@ def _expected(name: str, value: Attribute) -> str:
     """Return what an attribute should be and is not, or nothing."""
     if name in NUMBERS and not _is_finite(value):
         return "a finite number"
+    if name in SIZES and isinstance(value, int | float) and value < 0:
+        return "zero or more"
     if name in GAPPED_NUMBERS and not _is_number(value):
         return "a number"
     if (name in TEXTS or name.startswith("kind_")) and not isinstance(value, str):

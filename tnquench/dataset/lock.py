@@ -28,6 +28,9 @@ FULL = frozenset({ENOSPC, EDQUOT})
 #: Errors of file systems that know no second names.
 NO_LINKS = frozenset({EPERM, ENOSYS, EOPNOTSUPP, EMLINK})
 
+#: Name of the lock on a whole run's folder, and what those on single quenches of it begin with.
+WHOLE_LOCK, LONE_LOCK = ".lock", ".lock-"
+
 #: Seconds between two touches by the holder, and after how many a lock untouched is dead for other machines.
 HEARTBEAT, DEAD_AFTER = 30.0, 600.0
 
@@ -98,7 +101,7 @@ class _Found:
 
 
 @contextlib.contextmanager
-def folder_lock(folder: Path, name: str = ".lock") -> Iterator[None]:
+def folder_lock(folder: Path, name: str = WHOLE_LOCK) -> Iterator[None]:
     """Hold the lock on a folder, which is made if missing; a dead lock is taken over.
 
     Raises InputError naming the holder if it lives, or if the folder cannot be written; OSError if the disk
@@ -122,7 +125,7 @@ def folder_lock(folder: Path, name: str = ".lock") -> Iterator[None]:
                     path.unlink()
 
 
-def lock_holder(folder: Path, name: str = ".lock") -> Holder | None:
+def lock_holder(folder: Path, name: str = WHOLE_LOCK) -> Holder | None:
     """Return who holds the lock on a folder; None if nobody does, or only a dead lock is there."""
     found = _chain(folder / name)
     return found[-1].holder if found and found[-1].lives(now=time.time()) else None

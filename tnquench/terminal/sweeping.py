@@ -13,7 +13,9 @@ from tnquench.cluster.status import STATES, Standing
 from tnquench.cluster.sweep import SweepRun, exit_code, summary
 from tnquench.config.cluster import (
     ENGINES,
+    SLURM_WORKERS,
     TASKS,
+    Cluster,
     parse_address,
     parse_duration,
     parse_memory,
@@ -56,7 +58,7 @@ def _option(meaning: str, metavar: str, check: Callable[[str], str]) -> Any:
 
 
 def sweep_command(
-    config: Annotated[Path, typer.Argument(metavar="CONFIG", help="TOML file with a section [sweep].")],
+    config: Annotated[Path, typer.Argument(metavar="CONFIG", help="TOML file with a section sweep.")],
     into: Annotated[Path | None, typer.Option(metavar="FOLDER", help="Where all points go.")] = None,
     engine: Annotated[
         str | None, _option(f"What runs the tasks: {', '.join(ENGINES)}.", "NAME", _one_of(ENGINES))
@@ -90,8 +92,8 @@ def sweep_command(
     """Run every point of a sweep that is not done yet, each a run of its own in FOLDER/POINT.
 
     FOLDER is results/NAME-OF-CONFIG unless given; its path is printed, and FOLDER/index.csv lists all points.
-    The same command goes on after any interruption. Options come before the section [cluster]. Exit code 1 if
-    points failed, 3 if some were stopped and can go on.
+    The same command goes on after any interruption. Options come before the config's section cluster. Exit
+    code 1 if points failed, 3 if some were stopped and can go on.
     """
     loaded = load_sweep(config)
     options = {
@@ -99,7 +101,7 @@ def sweep_command(
         "memory": memory, "scheduler": scheduler, "partition": partition, "account": account,
     }  # fmt: skip
     cluster = with_options(loaded.cluster, options, subject=str(config))
-    sweep = SweepRun(loaded.points, into or DEFAULT_FOLDER / config.stem, cluster, _existing(setup))
+    sweep = SweepRun(loaded.points, into or DEFAULT_FOLDER / config.stem, cluster, _usable(setup, cluster))
     standings = sweep.standings()
     if not status and (missing := sweep.missing(standings, retry=retry)):
         sweep.carry_out(missing, tell=lambda line: typer.echo(line, err=True))
@@ -109,10 +111,13 @@ def sweep_command(
         raise typer.Exit(code)
 
 
-def _existing(setup: Path | None) -> Path | None:
-    """Return the absolute path of a setup file; raises InputError if there is none."""
+def _usable(setup: Path | None, cluster: Cluster) -> Path | None:
+    """Return the absolute path of a setup file; raises InputError if there is none or nothing reads it."""
     if setup is None:
         return None
+    if cluster.engine != "slurm" and cluster.scheduler != SLURM_WORKERS:
+        problem = f"--setup: read by the jobs of Slurm alone, not by engine {cluster.engine}"
+        raise InputError(str(setup), [problem])
     if not setup.is_file():
         raise InputError(str(setup), ["--setup: no such file"])
     return setup.resolve()
@@ -132,7 +137,8 @@ def _show(standings: Sequence[Standing], folder: Path, *, as_json: bool, table: 
     counts = summary(standings)
     told = ", ".join(f"{counts[state]} {state}" for state in STATES if state in counts)
     advice = "; --retry runs failed points again" if "failed" in counts else ""
-    typer.echo(f"{len(standings)} points: {told}{advice}", err=True)
+    points = f"{len(standings)} point{'s' * (len(standings) > 1)}"
+    typer.echo(f"{points}: {told}{advice}", err=True)
     if not as_json and not table:
         typer.echo(str(folder))
 
