@@ -34,7 +34,7 @@ from tnquench.run import forecast, forecast_stretched, hydro
 from tnquench.terminal.cost import cost_numbers, cost_rows, with_study
 from tnquench.terminal.display import watching
 from tnquench.terminal.judging import judge_command
-from tnquench.terminal.options import AsJson, ConfigFile, Into, Threads, usable_cores
+from tnquench.terminal.options import AllowOutside, AsJson, ConfigFile, Into, Threads, usable_cores
 from tnquench.terminal.refining import refine_command
 from tnquench.terminal.running import run_command
 from tnquench.terminal.sweeping import sweep_command
@@ -103,14 +103,16 @@ app.command("run", epilog=f"Example: {PROGRAM} run configs/demo.toml --into resu
 
 
 @app.command("forecast", epilog=f"Example: {PROGRAM} forecast configs/demo.toml --threads 2")
-def forecast_command(config: ConfigFile, threads: Threads = None, as_json: AsJson = False) -> None:
+def forecast_command(
+    config: ConfigFile, threads: Threads = None, as_json: AsJson = False, allow_outside: AllowOutside = False
+) -> None:
     """Estimate bond dimension, time, memory and disk of a run from short pilot runs; nothing is written.
 
     Of a sweep the first point is meant.
     """
     with watching() as watch:
         watch.stage("pilot runs", None)
-        settings, quench, estimate = forecast(config)
+        settings, quench, estimate = forecast(config, allow_outside=allow_outside)
         stretched = forecast_stretched(settings)
     cores = threads or usable_cores()
     numbers = with_study(
@@ -121,14 +123,14 @@ def forecast_command(config: ConfigFile, threads: Threads = None, as_json: AsJso
 
 
 @app.command("hydro", epilog=f"Example: {PROGRAM} hydro configs/demo.toml --into results/demo-hydro")
-def hydro_command(config: ConfigFile, into: Into = None) -> None:
+def hydro_command(config: ConfigFile, into: Into = None, allow_outside: AllowOutside = False) -> None:
     """Write the hydrodynamic prediction of a config alone as a dataset.
 
     The folder, results/NAME-OF-CONFIG-hydro unless given, holds run.h5; its path is printed.
     """
     with watching() as watch:
         watch.stage("prediction", None)
-        folder = hydro(config, into=into)
+        folder = hydro(config, into=into, allow_outside=allow_outside)
     typer.echo(str(folder))
 
 
@@ -182,6 +184,7 @@ def thermo_command(
 @app.command("check", epilog=f"Example: {PROGRAM} check configs/demo.toml")
 def check_command(
     path: Annotated[Path, typer.Argument(metavar="PATH", help="A config, or a dataset or its folder.")],
+    allow_outside: AllowOutside = False,
 ) -> None:
     """Check a config, or the integrity of a dataset.
 
@@ -193,9 +196,9 @@ def check_command(
             raise VerdictNegative(str(path), findings)
         typer.echo(f"{path}: sound and complete")
     else:
-        config = load_config(path)
+        config = load_config(path, allow_outside=allow_outside)
         if config.sweep.points:
-            load_sweep(path)
+            load_sweep(path, allow_outside=allow_outside)
         typer.echo(f"# {path}: no problems; all settings in effect:\n\n{effective_toml(config)}", nl=False)
         if reason := no_prediction(config):
             typer.echo(f"{path}: without a prediction: {reason}", err=True)

@@ -22,6 +22,7 @@ class InputError(TnquenchError):
     def __init__(
         self, subject: str, problems: Sequence[str], *, consequence: str = "nothing was run"
     ) -> None:
+        subject = "".join(letter if letter.isprintable() else repr(letter)[1:-1] for letter in subject)
         self.subject = subject
         self.problems = tuple(problems)
         count = f"{len(self.problems)} problem{'s' if len(self.problems) != 1 else ''}"

@@ -60,17 +60,18 @@ def run(
     threads: int = 1,
     watch: Watch = SILENT,
     continuation: Continuation | None = None,
+    allow_outside: bool = False,
 ) -> Path:
     """Simulate a config with its companions, predict, judge, and write dataset and report; return the folder.
 
     into : folder of the results, results/<name of the config> if not given; threads : processes used at most.
     Results do not depend on it: each simulation runs on one core. With a stretch study the stretched runs
     follow, each a dataset of its own in FOLDER/stretch_<factor>, and the study joins the dataset of the run.
-    What the folder's checkpoints hold is not computed again.
+    What the folder's checkpoints hold is not computed again. allow_outside : as of `load_config`.
     Raises InputError for a config or folder that cannot be used, Stopped where the continuation ends the run.
     """
     how = continuation or Continuation()
-    config = load_config(config_file)
+    config = load_config(config_file, allow_outside=allow_outside)
     refuse_sweep(config.sweep, str(config_file))
     folder = into or DEFAULT_FOLDER / config_file.stem
     factors = other_factors(config)
@@ -101,6 +102,7 @@ def run_one(
     into: Path | None = None,
     watch: Watch = SILENT,
     continuation: Continuation | None = None,
+    allow_outside: bool = False,
 ) -> Path:
     """Carry out one quench of a run alone and keep it for the run that puts all together; return the folder.
 
@@ -108,7 +110,7 @@ def run_one(
     Raises InputError for a name that the run does not have, and for a config that leaves its weight open.
     """
     how = continuation or Continuation()
-    config = load_config(config_file)
+    config = load_config(config_file, allow_outside=allow_outside)
     refuse_sweep(config.sweep, str(config_file))
     top = into or DEFAULT_FOLDER / config_file.stem
     if config.evolution.accuracy is not None:
@@ -187,14 +189,14 @@ def _telling(watch: Watch, said: str) -> Watch:
     return Watch(stage=lambda name, quench: watch.stage(f"{said}, {name}", quench), progress=watch.progress)
 
 
-def hydro(config_file: Path, *, into: Path | None = None) -> Path:
+def hydro(config_file: Path, *, into: Path | None = None, allow_outside: bool = False) -> Path:
     """Write the prediction of a config alone as a dataset; return the folder, results/<name>-hydro if not
     given.
 
     Raises InputError if the config cannot be used or has no prediction.
     """
     began, cpu = time.perf_counter(), time.process_time()
-    config = load_config(config_file)
+    config = load_config(config_file, allow_outside=allow_outside)
     folder = into or DEFAULT_FOLDER / f"{config_file.stem}-hydro"
     with threadpool_limits(1):
         prediction, absence = build_prediction(config)
@@ -209,12 +211,12 @@ def hydro(config_file: Path, *, into: Path | None = None) -> Path:
     return folder
 
 
-def forecast(config_file: Path) -> tuple[Config, Quench, Forecast]:
+def forecast(config_file: Path, *, allow_outside: bool = False) -> tuple[Config, Quench, Forecast]:
     """Estimate what a config will cost from short pilot runs, its stretch study left out; nothing is written.
 
     With an accuracy in place of a weight the pilots that choose the weight are run too.
     """
-    return _forecast(load_config(config_file))
+    return _forecast(load_config(config_file, allow_outside=allow_outside))
 
 
 def forecast_stretched(config: Config) -> dict[float, tuple[Config, Quench, Forecast]]:

@@ -2,10 +2,15 @@
 
 from __future__ import annotations
 
+import os
+import stat
 from pathlib import Path
 
 #: Largest config or table that is read, in bytes.
 LARGEST_FILE = 10_000_000
+
+#: Flag with which opening a pipe does not wait for whoever writes into it; Windows has none.
+NEVER_WAIT = getattr(os, "O_NONBLOCK", 0)
 
 
 class UnreadableFileError(ValueError):
@@ -21,10 +26,11 @@ def read_text(path: Path) -> str:
         if path.is_dir():
             reason = "is a folder, not a file"
             raise UnreadableFileError(reason)
-        if path.exists() and not path.is_file():  # a pipe or a device might never end
-            reason = "is not a regular file"
-            raise UnreadableFileError(reason)
-        with path.open("rb") as stream:
+        # a pipe or a device might never end, and opening a pipe might already
+        with open(path, "rb", opener=_never_waiting) as stream:
+            if not stat.S_ISREG(os.fstat(stream.fileno()).st_mode):
+                reason = "is not a regular file"
+                raise UnreadableFileError(reason)
             content = stream.read(LARGEST_FILE + 1)
     except FileNotFoundError as error:
         reason = "no such file"
@@ -36,6 +42,10 @@ def read_text(path: Path) -> str:
         reason = f"is larger than {LARGEST_FILE // 1_000_000} MB, the most that is read"
         raise UnreadableFileError(reason)
     return _decoded(content)
+
+
+def _never_waiting(name: str, flags: int) -> int:
+    return os.open(name, flags | NEVER_WAIT)
 
 
 def _decoded(content: bytes) -> str:

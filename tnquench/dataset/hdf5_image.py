@@ -53,7 +53,7 @@ class DamagedFile(Exception):  # noqa: N818 - the file is at fault; always turne
 def trial_complaint(image: bytes) -> str:
     """Return why the bytes of an HDF5 file must not be read by this process, or nothing.
 
-    Unless they are cut off, a process of its own reads them first, with `SPARE` memory and `PATIENCE` seconds.
+    Unless they are cut off, a process of its own reads them first, within `SPARE` memory and `PATIENCE`.
     """
     if len(image) < stated_size(image):
         return UNREADABLE

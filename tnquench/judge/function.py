@@ -191,8 +191,8 @@ def _told(subject: str, file: Path | None) -> Iterator[None]:
     except InputError:
         raise
     except (Exception, SystemExit) as error:
-        said = " ".join(str(error).split())[:200] or "no message"
-        problem = f"{_place(error, file)}: {type(error).__name__}: {said}"
+        said = "".join(letter if letter.isprintable() else " " for letter in str(error)[:200]).strip()
+        problem = f"{_place(error, file)}: {type(error).__name__}: {said or 'no message'}"
         raise _refusal(subject, problem) from error
 
 

@@ -112,9 +112,13 @@ class Comparison:
 
     @property
     def judged(self) -> Verdicts:
-        """Points the verdict is about: inside the light cone and after the start, (time, place)."""
+        """Points the verdict is about: inside the light cone and after the start, (time, place).
+
+        A cone without any point says nothing; all points count then.
+        """
         later = self.times > 0
-        return self.window & later[:, None] if later.any() else self.window
+        chosen = self.window & later[:, None] if later.any() else self.window
+        return chosen if chosen.any() else np.ones_like(chosen)
 
     def norm(self, values: Reals) -> Reals:
         """Return the root mean square over the light-cone window, (time,), of an array (time, place)."""

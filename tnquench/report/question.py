@@ -16,15 +16,49 @@ Table = Mapping[str, Any]
 #: Profiles of the start beside the inverse temperature, as the products that they are.
 PROFILES = {"beta_mu": "chemical potential βμ", "beta_field": "field βh"}
 
+#: Settings that are sections of their own, lists of numbers, and text; others are numbers or truth values.
+SECTIONS = frozenset({"beta", *PROFILES})
+LISTS = frozenset({"values", "factors"})
+TEXTS = frozenset({"model", "joint", "shape", "kind", "cut", "companions", "levels"})
+#: No setting is larger, in any unit.
+LARGEST_SETTING = 1e60
+
 ORDERS = {2: "second", 4: "fourth"}
 
 
 def settings_of(run: Run) -> dict[str, Any]:
-    """Return the effective config stored in the run as nested tables; empty if it cannot be read."""
+    """Return the effective config stored in the run as nested tables; empty if it cannot be read.
+
+    What is of another kind than the setting demands is left out: a dataset may say anything.
+    """
     try:
-        return tomllib.loads(str(run.provenance.get("config_toml", "")))
-    except tomllib.TOMLDecodeError:
+        tables = tomllib.loads(str(run.provenance.get("config_toml", "")))
+    except (ValueError, RecursionError):  # no TOML, an endless number, brackets nested too deeply
         return {}
+    return {name: _sound(table) for name, table in tables.items() if isinstance(table, Mapping)}
+
+
+def _sound(table: Table) -> dict[str, Any]:
+    """Return a table without settings of another kind than their name demands."""
+    sound: dict[str, Any] = {}
+    for name, value in table.items():
+        if name == "extra":
+            sound[name] = [_sound(entry) for entry in _entries(value) if isinstance(entry, Mapping)]
+        elif name in SECTIONS:
+            sound |= {name: _sound(value)} if isinstance(value, Mapping) else {}
+        elif name in LISTS:
+            sound |= {name: value} if all(_is_finite(entry) for entry in _entries(value)) else {}
+        elif isinstance(value, str) if name in TEXTS else _is_finite(value):
+            sound[name] = value
+    return sound
+
+
+def _entries(value: object) -> list[Any]:
+    return value if isinstance(value, list) else [value]
+
+
+def _is_finite(value: object) -> bool:
+    return isinstance(value, int | float) and abs(value) < LARGEST_SETTING
 
 
 def is_step(settings: Table) -> bool:

@@ -17,6 +17,10 @@ Threads = Annotated[
     int | None,
     typer.Option(metavar="N", min=1, help=f"Processes at once; default: one a core, at most {MOST_THREADS}."),
 ]
+AllowOutside = Annotated[
+    bool,
+    typer.Option("--allow-outside", help="Let the config name table files outside of its own folder."),
+]
 AsJson = Annotated[bool, typer.Option("--json", help="Print JSON.")]
 
 

@@ -14,7 +14,7 @@ from tnquench.errors import Stopped
 from tnquench.run import Continuation, run, run_one
 from tnquench.stopping import Limits, Stop, answering_signals
 from tnquench.terminal.display import watching
-from tnquench.terminal.options import ConfigFile, Into, Threads, usable_cores
+from tnquench.terminal.options import AllowOutside, ConfigFile, Into, Threads, usable_cores
 from tnquench.terminal.summary import show_findings
 
 
@@ -61,6 +61,7 @@ def run_command(
     checkpoint_every: Annotated[
         float | None, typer.Option(metavar="SECONDS", min=0.0, help="Least time between two checkpoints.")
     ] = None,
+    allow_outside: AllowOutside = False,
 ) -> None:
     """Simulate a config with its companions, predict, judge; write dataset and report.
 
@@ -69,7 +70,7 @@ def run_command(
     a limit: exit code 3) or killed goes on when the same command is given again; with a larger `until` a
     finished one goes on too.
     """
-    cluster = load_config(config).cluster
+    cluster = load_config(config, allow_outside=allow_outside).cluster
     limits = Limits(
         seconds=cluster.walltime_seconds if walltime is None else walltime,
         memory=cluster.memory_bytes if memory is None else memory,
@@ -77,9 +78,18 @@ def run_command(
     with stoppable(limits) as stop, watching() as watch:
         how = Continuation(stop=stop, checkpoint_every=checkpoint_every, fresh=fresh)
         if only is not None:
-            folder = run_one(config, only, into=into, watch=watch, continuation=how)
+            folder = run_one(
+                config, only, into=into, watch=watch, continuation=how, allow_outside=allow_outside
+            )
         else:
-            folder = run(config, into=into, threads=threads or usable_cores(), watch=watch, continuation=how)
+            folder = run(
+                config,
+                into=into,
+                threads=threads or usable_cores(),
+                watch=watch,
+                continuation=how,
+                allow_outside=allow_outside,
+            )
     if only is None:
         show_findings(folder)
     typer.echo(str(folder))

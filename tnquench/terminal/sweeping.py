@@ -24,6 +24,7 @@ from tnquench.config.cluster import (
 )
 from tnquench.config.points import load_sweep
 from tnquench.errors import InputError
+from tnquench.terminal.options import AllowOutside
 from tnquench.terminal.table import aligned
 from tnquench.terminal.units import plain
 
@@ -88,6 +89,7 @@ def sweep_command(
     status: Annotated[bool, typer.Option("--status", help="Show how the points stand; run nothing.")] = False,
     retry: Annotated[bool, typer.Option("--retry", help="Run failed points again.")] = False,
     as_json: Annotated[bool, typer.Option("--json", help="Print the points as JSON.")] = False,
+    allow_outside: AllowOutside = False,
 ) -> None:
     """Run every point of a sweep that is not done yet, each a run of its own in FOLDER/POINT.
 
@@ -95,7 +97,7 @@ def sweep_command(
     The same command goes on after any interruption. Options come before the config's section cluster. Exit
     code 1 if points failed, 3 if some were stopped and can go on.
     """
-    loaded = load_sweep(config)
+    loaded = load_sweep(config, allow_outside=allow_outside)
     options = {
         "engine": engine, "jobs": jobs, "threads": threads, "tasks": tasks, "walltime": walltime,
         "memory": memory, "scheduler": scheduler, "partition": partition, "account": account,
