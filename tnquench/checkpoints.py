@@ -136,7 +136,11 @@ def open_store(folder: Path, config: Config, *, interval: float | None, fresh: b
     store = Store(folder / CHECKPOINTS, LEAST_INTERVAL if interval is None else interval)
     if fresh and store.folder.exists():
         shutil.rmtree(store.folder)
-    store.folder.mkdir(parents=True, exist_ok=True)
+    try:
+        store.folder.mkdir(parents=True, exist_ok=True)
+    except (FileExistsError, NotADirectoryError) as error:
+        problem = "is a file, not a folder; move it away or name another place with --into"
+        raise InputError(str(store.folder), [problem]) from error
     kept = store.folder / CONFIG_NAME
     if kept.exists() and any(store.folder.glob("*.h5")):
         earlier = read_config(kept.read_text(encoding="utf-8"), subject=str(kept))

@@ -11,7 +11,7 @@ import sys
 import traceback
 from collections.abc import Sequence
 from concurrent.futures.process import BrokenProcessPool
-from errno import EDQUOT, ENOSPC
+from errno import EACCES, EDQUOT, EEXIST, EFBIG, EIO, EISDIR, ENOENT, ENOSPC, ENOTDIR, EPERM, EROFS, ESTALE
 from importlib.metadata import PackageNotFoundError, version
 from multiprocessing import active_children
 from pathlib import Path
@@ -45,6 +45,11 @@ PROGRAM = "tnquench"
 
 #: Exit codes that no exception of ours carries.
 DONE, DEFECT, BAD_INPUT, INTERRUPTED = 0, 1, 2, 130
+
+#: Errors of a file system that is full, read-only, gone, or failing: no defect of the program.
+DISK_ERRORS = frozenset(
+    {ENOSPC, EDQUOT, EFBIG, EROFS, ENOENT, ENOTDIR, EISDIR, EEXIST, EACCES, EPERM, EIO, ESTALE}
+)
 
 INTERRUPTION = f"{PROGRAM}: interrupted; no file is left half-written"
 
@@ -284,8 +289,10 @@ def answer(error: BaseException) -> tuple[int, str]:
         return BAD_INPUT, _usage_message(error)
     if isinstance(error, KeyboardInterrupt | typer.Abort):
         return INTERRUPTED, INTERRUPTION
-    if isinstance(error, OSError) and error.errno in (ENOSPC, EDQUOT):
-        return DEFECT, f"{PROGRAM}: {error.strerror}"
+    if isinstance(error, OSError) and error.errno in DISK_ERRORS:
+        place = error.filename2 or error.filename
+        where = f": {place}" if place else ""
+        return DEFECT, f"{PROGRAM}: {error.strerror}{where}; what was written before is whole"
     if isinstance(error, MemoryError):
         return DEFECT, f"{PROGRAM}: out of memory; {PROGRAM} forecast CONFIG estimates what a run needs"
     if isinstance(error, BrokenProcessPool):

@@ -17,7 +17,7 @@ from tnquench.config.load import load_config
 from tnquench.config.schema import Config
 from tnquench.config.sweep import refuse_sweep
 from tnquench.dataset.lock import LONE_LOCK, folder_lock, lock_holder
-from tnquench.dataset.writer import require_writable, write_run
+from tnquench.dataset.writer import clear_leftovers, require_writable, write_run
 from tnquench.errors import InputError
 from tnquench.observables.quench import Quench
 from tnquench.outcome import Pieces, prediction_pieces, run_pieces
@@ -79,6 +79,8 @@ def run(
         require_writable(place)
     with folder_lock(folder), threadpool_limits(1):
         require_no_lone_quench(folder)
+        for place in (folder, *(folder / stretched_folder(factor) for factor in factors)):
+            clear_leftovers(place)
         pieces = judged_run(config, config_file, folder, threads=threads, watch=watch, how=how)
         write_run(folder, **pieces.as_arguments())
         if factors:

@@ -76,6 +76,12 @@ def require_writable(folder: Path | str) -> None:
         probe.unlink()
 
 
+def clear_leftovers(folder: Path | str) -> None:
+    """Remove datasets that killed runs left half-written; the caller holds the lock on `folder`."""
+    for partial in Path(folder).glob(f".{FILE_NAME}.*.partial"):
+        partial.unlink(missing_ok=True)
+
+
 def assemble_contents(
     *,
     coordinates: Mapping[str, ArrayLike],
