@@ -6,6 +6,7 @@ import time
 
 import numpy as np
 import pytest
+from numpy.typing import NDArray
 
 from tests.oracles.exact_chain import energy_currents, local_hamiltonian, magnetisations, spin_currents
 from tests.oracles.high_temperature import series
@@ -27,11 +28,19 @@ from tnquench.bethe.gapped_states import (
     gapped_drude,
     gapped_velocity,
 )
-from tnquench.bethe.gapped_tail import extend, infinite_temperature_log_eta, infinite_temperature_log_x
+from tnquench.bethe.gapped_tail import (
+    extend,
+    field_ratio,
+    infinite_temperature_log_eta,
+    infinite_temperature_log_x,
+    tail_correction,
+)
 from tnquench.bethe.gapped_thermal import gapped_thermal, log_partition
 from tnquench.bethe.thermodynamics import KEYS
 from tnquench.conventions import Reals
 from tnquench.errors import ConvergenceError
+
+Complexes = NDArray[np.complex128]
 
 SITES = 7
 
@@ -147,6 +156,43 @@ def test_the_tail_continues_the_constant_solution(a: float) -> None:
     constants = infinite_temperature_log_eta(strings, a)
     logs = np.logaddexp(0.0, constants)
     np.testing.assert_allclose(constants[1:-1], 0.5 * (logs[:-2] + logs[2:]), rtol=1e-13)
+
+
+@pytest.mark.parametrize("mode", [1, 2])
+@pytest.mark.parametrize("a", [0.05, 0.6])
+def test_the_tail_continues_exact_solutions_with_structure(a: float, mode: int) -> None:
+    """Deviations of string N to those of N + 1 in an exact solution of all equations that varies in rapidity.
+
+    T_n(x) = e^(n a) A(x + i n eta/2) B(x - i n eta/2) - e^(-n a), A and B = 1 + c e^(+-2 i k x), solves
+    Hirota's equation, and 1 + eta_n = T_(n+1)^+ T_(n+1)^- / (T_(n+1)^+ T_(n+1)^- - T_(n+2) T_n) with f^+- =
+    f(x +- i eta/2) solves eta_n^+ eta_n^- = (1 + eta_(n-1)) (1 + eta_(n+1)), as is checked first. Source: A.
+    Kluemper and P. A. Pearce, Physica A 183, 304 (1992), from memory.
+    """
+    eta, small, strings = 0.5, 1e-6, 3
+    grid = gapped_grid(eta, 48)
+    x = (eta * grid.rapidities).astype(np.complex128)
+
+    def t(n: int, at: Complexes, c: float) -> Complexes:
+        waves = [1.0 + c * np.exp(sign * 2j * mode * at - n * mode * eta) for sign in (1.0, -1.0)]
+        return np.asarray(np.exp(n * a) * waves[0] * waves[1] - np.exp(-n * a))
+
+    def log_one_plus_eta(n: int, at: Complexes, c: float) -> Complexes:
+        both = t(n + 1, at + 0.5j * eta, c) * t(n + 1, at - 0.5j * eta, c)
+        return np.asarray(np.log(both / (both - t(n + 2, at, c) * t(n, at, c))))
+
+    def eta_of(n: int, at: Complexes) -> Complexes:
+        return np.asarray(np.expm1(log_one_plus_eta(n, at, 0.01)))
+
+    shifted = eta_of(2, x + 0.5j * eta) * eta_of(2, x - 0.5j * eta)
+    np.testing.assert_allclose(shifted, (1.0 + eta_of(1, x)) * (1.0 + eta_of(3, x)), rtol=1e-12)
+    last, beyond = (
+        0.5 * (log_one_plus_eta(n, x, small) - log_one_plus_eta(n, x, 0.0)).real / small
+        for n in (strings, strings + 1)
+    )
+    ratio = field_ratio(strings + 1, a) / field_ratio(strings, a)
+    correction = tail_correction(grid.poisson[0], strings, a) @ last
+    np.testing.assert_allclose(ratio * last + correction, beyond, rtol=0.0, atol=1e-5 * np.abs(beyond).max())
+    assert np.abs(correction).max() > 0.1 * np.abs(beyond).max(), "structure matters"
 
 
 @pytest.mark.parametrize("eta", [0.0, 0.3, 1.3])
@@ -302,6 +348,20 @@ def test_thermal_states_are_fast_and_reach_what_is_asked(beta: float) -> None:
 def test_bad_input_is_refused(settings: dict[str, float], message: str) -> None:
     with pytest.raises(ValueError, match=message):
         gapped_equilibrium(**settings)
+
+
+@pytest.mark.parametrize("anisotropy", [1.0, 2.0, -1.5])
+@pytest.mark.parametrize("beta", [0.001, 20.0])
+def test_strongest_fields_polarise(anisotropy: float, beta: float) -> None:
+    """At beta h = 600 all spins are up, and nothing overflows on the way."""
+    found = gapped_equilibrium(anisotropy=anisotropy, beta=beta, field=600.0 / beta)
+    assert found.energy == pytest.approx(0.25 * anisotropy, abs=1e-10)
+    assert found.magnetisation == pytest.approx(0.5, abs=1e-10)
+    assert abs(found.susceptibility) <= found.susceptibility_error
+    model = model_at(anisotropy, strings=8, nodes=48)
+    state = gapped_state(model, beta=1.0, beta_field=600.0)
+    assert np.isfinite(gapped_covariance(model, state)).all()
+    assert np.isfinite(gapped_drude(model, state)).all()
 
 
 def test_what_cannot_be_reached_is_refused_with_the_best_values(monkeypatch: pytest.MonkeyPatch) -> None:

@@ -13,7 +13,13 @@ from tnquench.bethe.equilibrium import equilibrium
 from tnquench.conventions import Reals, bond_positions, site_positions
 from tnquench.errors import InputError
 from tnquench.hydro import between as between_module
-from tnquench.hydro.between import Between, between, small_anisotropies
+from tnquench.hydro.between import (
+    Between,
+    between,
+    between_angles,
+    between_gapless,
+    small_anisotropies,
+)
 from tnquench.hydro.joined import join_halves
 from tnquench.hydro.mesh import OBSERVABLES, rapidity_mesh
 from tnquench.hydro.prediction import Prediction, predict_step
@@ -163,7 +169,22 @@ def test_small_tables_are_solved_themselves() -> None:
     assert len(between(rational(29, 70)).anisotropies) == between_module.NEIGHBOURS
 
 
+def test_what_anisotropies_are_combined_from() -> None:
+    """From both sides of |D| = 1 just below it; at |D| >= 1 from none but itself."""
+    for value in (0.97, 0.99, 0.9999999, -0.98, -0.999):
+        for nodes in (between(value).anisotropies, between(-value).anisotropies):
+            assert max(np.abs(nodes)) > 1.0 > min(np.abs(nodes))
+        assert max(np.abs(between_angles(value).anisotropies)) < 1.0
+    for value in (1.0, -1.0, 1.5):
+        assert between(value).anisotropies == (value,)
+
+
 @pytest.mark.parametrize("anisotropy", [0.99, -0.98, 1.0, float("nan")])
-def test_ranges_are_refused(anisotropy: float) -> None:
-    with pytest.raises(InputError, match=r"anisotropy = .*: this prediction reaches \|D\| = 0\.97"):
-        between(anisotropy)
+def test_ranges_of_smooth_profiles_are_refused(anisotropy: float) -> None:
+    with pytest.raises(InputError, match=r"anisotropy = .*: smooth profiles .* up to \|D\| = 0\.97"):
+        between_gapless(anisotropy)
+
+
+def test_no_anisotropy_is_refused() -> None:
+    with pytest.raises(InputError, match="must be a finite number"):
+        between(float("nan"))

@@ -11,11 +11,12 @@ from tnquench.bethe.gapped_model import GappedModel, gapped_model, gapped_state
 from tnquench.bethe.gapped_states import dressed_slopes, gapped_averages
 from tnquench.conventions import OBSERVABLE_PLACES, Reals, bond_positions, site_positions
 from tnquench.errors import InputError
-from tnquench.hydro.gapped import State, predict_step_gapped
+from tnquench.hydro.gapped import solve_gapped
 from tnquench.hydro.gapped_joined import Halves, halves_of, join_gapped_halves, states_on_rays
 from tnquench.hydro.gapped_sides import side_weights, sides_of
 from tnquench.hydro.mesh import OBSERVABLES
 from tnquench.hydro.prediction import Prediction, predict_step
+from tnquench.hydro.step import State, Step
 
 SITES = 24
 TIMES = np.array([0.0, 2.0, 5.0])
@@ -322,8 +323,6 @@ def test_light_at_the_ends_is_refused_with_its_time() -> None:
 
 
 def test_weaker_anisotropies_are_refused() -> None:
+    step = Step(coupling=1.0, left=(1.0, 0.0), right=(2.0, 0.0), middle=(1.5, 0.0))
     with pytest.raises(ValueError, match="between -1 and 1"):
-        predict_step_gapped(
-            anisotropy=0.5, coupling=1.0, left=(1.0, 0.0), right=(2.0, 0.0), middle=(1.5, 0.0),
-            times=TIMES, sites=site_positions(SITES), bonds=bond_positions(SITES),
-        )  # fmt: skip
+        solve_gapped(step, 0.5, np.array([0.1]))

@@ -40,6 +40,14 @@ def test_free_energy_between_angles(anisotropy: float, beta: float, field: float
 
 
 @pytest.mark.literature
+def test_cold_chain_next_to_the_isotropic_ferromagnet() -> None:
+    """The same at beta = 20, where the susceptibility has begun to diverge."""
+    found = equilibrium(anisotropy=-0.99, beta=20.0)
+    exact = free_energy(anisotropy=-0.99, beta=20.0, field=0.0)
+    assert abs(found.free_energy - exact) <= found.free_energy_error < 1e-6
+
+
+@pytest.mark.literature
 @pytest.mark.parametrize("anisotropy", [0.3, rational(3, 8), rational(2, 7, -1), rational(29, 70)])
 def test_derivatives_at_any_angle(anisotropy: float) -> None:
     """m, energy, c and chi as derivatives of the free energy of the transfer matrix.

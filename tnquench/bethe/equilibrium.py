@@ -16,6 +16,7 @@ from tnquench.bethe.model import BetheModel, xxz_model
 from tnquench.bethe.states import ThermalState, dress, thermal_filling
 from tnquench.bethe.thermodynamics import KEYS, Equilibrium
 from tnquench.conventions import Reals
+from tnquench.errors import ConvergenceError
 
 __all__ = ["KEYS", "Equilibrium", "equilibrium", "string_thermodynamics"]
 
@@ -38,9 +39,9 @@ def equilibrium(*, anisotropy: float, beta: float, field: float = 0.0, coupling:
 
     anisotropy, coupling : D and J > 0; beta : inverse temperature > 0; field : h, of either sign
     At D = plus or minus cos(pi p/q) of moderate string tables the strings are exact; elsewhere in |D| < 1 it
-    is interpolated between such anisotropies, and the errors contain what that costs. |D| >= 1 has equations
-    of its own. Raises ValueError unless beta > 0 and all are finite, ConvergenceError if the Bethe ansatz
-    cannot be solved.
+    is interpolated between such anisotropies, near |D| = 1 also from beyond it, and the errors contain what
+    that costs. |D| >= 1 has equations of its own. Raises ValueError unless beta > 0 and all are finite,
+    ConvergenceError if the Bethe ansatz cannot be solved.
     """
     if not (beta > 0.0 and coupling > 0.0 and np.isfinite([beta, field, coupling]).all()):
         given = f"beta = {beta}, field = {field}, coupling = {coupling}"
@@ -76,7 +77,9 @@ def _gapless(
         )
         return dict(found.values), dict(found.errors)
 
-    def at_rational(value: float, target: float = NODE_TARGET) -> tuple[dict[str, float], dict[str, float]]:
+    def solved(value: float, target: float = NODE_TARGET) -> tuple[dict[str, float], dict[str, float]]:
+        if abs(value) >= 1.0:
+            return _gapped(value, beta=beta, field=field, coupling=coupling)
         if value == 0.0:
             return refined(solve_free, MOMENTUM_LADDER, ERROR_TARGET)
         solve = _string_solver(anisotropy=value, beta=beta, field=field, coupling=coupling)
@@ -84,14 +87,30 @@ def _gapless(
 
     if is_rational(anisotropy):
         exact = anisotropy_of(rational_turn(anisotropy), negative=anisotropy < 0.0)
-        values, errors = at_rational(exact, ERROR_TARGET)
+        values, errors = solved(exact, ERROR_TARGET)
         offset = OFFSET_COST * abs(anisotropy - exact)
         return values, {key: errors[key] + offset * scales.get(key, abs(values[key])) for key in KEYS}
     targets = dict.fromkeys(KEYS, INTERPOLATION_TARGET) | {
         key: INTERPOLATION_TARGET * scale for key, scale in scales.items()
     }
-    found = interpolate_in_anisotropy(at_rational, anisotropy, targets=targets)
+    found = interpolate_in_anisotropy(solved, anisotropy, targets=targets)
     return found.values, found.errors
+
+
+def _gapped(
+    anisotropy: float, *, beta: float, field: float, coupling: float
+) -> tuple[dict[str, float], dict[str, float]]:
+    """Return values and errors by name at |D| >= 1; a large error is no failure of a single node."""
+    try:
+        found = gapped_equilibrium(
+            anisotropy=anisotropy, beta=beta, field=field, coupling=coupling, accuracy=NODE_TARGET
+        )
+    except ConvergenceError as failure:
+        if not isinstance(failure.best, Equilibrium):
+            raise
+        found = failure.best
+    numbers = found.as_dict()
+    return {key: numbers[key] for key in KEYS}, {key: numbers[f"{key}_error"] for key in KEYS}
 
 
 def string_thermodynamics(

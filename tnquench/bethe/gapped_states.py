@@ -84,7 +84,7 @@ def _hole_response(
     product = ratio * (cosh + ratio)
     product_shift = (cosh + 2.0 * ratio) * ratio_shift
     product_shift[1] += 0.5 * ratio * np.sinh(state.half_field)
-    factor_shift = shift[:, -1] / product + state.filling[-1] / product**2 * product_shift
+    factor_shift = shift[:, -1] / product + state.filling[-1] / product * (product_shift / product)
     moved = shift * slope
     tail = state.tail_factor * moved[:, -1] + moved[:, -1] @ tail_operator(model, state.half_field).T
     neighbours = np.zeros_like(moved)

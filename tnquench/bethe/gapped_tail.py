@@ -57,14 +57,15 @@ def extend(excess: Reals, strings: int, a: float) -> Tail:
     ratio = np.sqrt(sinh**2 + small)  # C_N
     ratio_start = np.hypot(sinh, np.exp(-start))
     change = np.exp(-2.0 * start) * np.expm1(-2.0 * excess) / (ratio + ratio_start)
-    product = ratio * (cosh + ratio)
+    product = ratio * (cosh + ratio)  # below e^(2 a): third powers of C_N would overflow first
+    by_field = small / ratio / ratio
     return Tail(
         value=excess + np.log1p(change / (cosh + ratio_start)),
         by_log=1.0 - small / product,
         by_a=sinh / ratio,
-        by_log_log=small * (2.0 - small * (cosh + 2.0 * ratio) / (ratio * product)) / product,
-        by_log_a=sinh * small / ratio**3,
-        by_aa=cosh * small / ratio**3,
+        by_log_log=small * (2.0 - small / product * ((cosh + 2.0 * ratio) / ratio)) / product,
+        by_log_a=sinh / ratio * by_field,
+        by_aa=cosh / ratio * by_field,
     )
 
 

@@ -2,35 +2,36 @@
 
 from __future__ import annotations
 
-from collections.abc import Callable
-from dataclasses import replace
+from collections.abc import Callable, Sequence
+from dataclasses import dataclass, replace
 
 import numpy as np
 from scipy.ndimage import maximum_filter1d
 
 from tnquench.conventions import OBSERVABLE_PLACES, Reals
-from tnquench.errors import InputError
-from tnquench.hydro.between import Between, between
-from tnquench.hydro.gapped import predict_step_gapped
-from tnquench.hydro.joined import join_halves, light_cone_of_halves
-from tnquench.hydro.mesh import OBSERVABLES, RapidityMesh, rapidity_mesh, uniform_averages
+from tnquench.errors import ConvergenceError, InputError
+from tnquench.hydro.alignment import Marks, carried, zone_marks
+from tnquench.hydro.between import Between, between, between_angles, between_gapless
+from tnquench.hydro.gapless import REFERENCES as GAPLESS_REFERENCES
+from tnquench.hydro.gapless import STEP_TARGET, light_cone_gapless, sign_ray_gapless, solve_gapless
+from tnquench.hydro.gapped import REFERENCES as GAPPED_REFERENCES
+from tnquench.hydro.gapped import light_cone_gapped, sign_ray_gapped, solve_gapped
+from tnquench.hydro.mesh import OBSERVABLES
 from tnquench.hydro.predicted import Prediction as Prediction
 from tnquench.hydro.predicted import rays_to, refuse_reflection, wall_of
-from tnquench.hydro.refinement import Refined, refine
+from tnquench.hydro.refinement import refine
 from tnquench.hydro.smooth import COMBINED_LEVELS, SmoothStart, initial_light_cone, smooth_averages
 from tnquench.hydro.smooth import LEVELS as SMOOTH_LEVELS
-from tnquench.hydro.thermal_states import State, thermal_on_mesh
+from tnquench.hydro.step import Solved, Step
+from tnquench.hydro.thermal_states import State
 
-#: Smooth nodes a string and mesh spacing, in crossing angles, of successive refinements of joined halves.
-STEP_LEVELS: tuple[tuple[int, float], ...] = ((32, 0.11), (48, 0.085), (64, 0.07), (96, 0.055))
-
-#: Change at which refinement stops, and error that it cannot see: the cut rapidity mesh and iterations, for
-#: smooth profiles also the expansion of thermal states.
-STEP_TARGET, STEP_FLOOR = 5e-9, 1e-10
+#: Changes at which the refinement of smooth profiles stops, and error that it cannot see: the cut rapidity
+#: mesh, iterations, and the expansion of thermal states.
 SMOOTH_TARGET, SMOOTH_FLOOR = 1e-6, 1e-8
 
-#: Targets of joined halves and of smooth profiles at the anisotropies between which others are combined.
-COMBINED_TARGET, COMBINED_SMOOTH_TARGET = 1e-6, 3e-6
+#: Targets of joined halves, of walls of the magnetisation and of smooth profiles at the anisotropies between
+#: which others are combined.
+COMBINED_TARGET, COMBINED_WALL_TARGET, COMBINED_SMOOTH_TARGET = 1e-6, 3e-5, 3e-6
 
 #: Kinks, as at ends where a profile is not flat, converge too slowly for more levels to be worth their cost.
 SMOOTH_GAIN = 1.5
@@ -41,8 +42,37 @@ NARROWEST_SCALE = 0.3
 #: Places over which the error of combining anisotropies, a difference of few polynomials, is the largest.
 STRINGS_NEIGHBOURS = 9
 
-STEP_REFERENCES = ("castro_alvaredo_2016", "bertini_2016", "takahashi_1972", "takahashi_1999")
-SMOOTH_REFERENCES = ("doyon_2018", *STEP_REFERENCES)
+#: How many times more is claimed for spin where one half alone has no field: the zone of its wall ends in a
+#: kink there, and differences of orders were found 2.8 times too small.
+KINK_SAFETY = 4.0
+
+SMOOTH_REFERENCES = ("doyon_2018", *GAPLESS_REFERENCES)
+
+
+@dataclass(frozen=True, eq=False)
+class Combination:
+    """Solutions at several anisotropies, (time, place, observable), and how they are combined.
+
+    safety : how many times the cost of combining is claimed
+    """
+
+    way: Between
+    solved: Sequence[Solved]
+    safety: float = 1.0
+
+    def field(self, part: slice, index: int, *, spin: bool) -> tuple[Reals, Reals, Reals]:
+        """Return one observable on some of the places, its error from grids and from strings.
+
+        A difference may vanish by chance at a place: an error is the largest among its neighbours.
+        """
+        chosen = (slice(None), part, index)
+        value, cost = self.way.combine([each.values[chosen] for each in self.solved], spin=spin)
+        grid, strings = (
+            maximum_filter1d(self.way.bound([error[chosen] for error in errors], spin=spin), size=3, axis=1)
+            for errors in ([each.grid for each in self.solved], [each.strings for each in self.solved])
+        )
+        cost = self.safety * maximum_filter1d(cost, size=STRINGS_NEIGHBOURS, axis=1)
+        return value, grid, strings + cost
 
 
 def predict_step(
@@ -56,59 +86,89 @@ def predict_step(
     sites: Reals,
     bonds: Reals,
 ) -> Prediction:
-    """Predict two joined halves, each uniform and in equilibrium.
+    """Predict two joined halves, each uniform and in equilibrium, at any D.
 
     left, right, middle : (beta, beta_field) for x < 0, for x > 0, and at x = 0 when t = 0
     times : (time,) in 1/J, not negative; sites, bonds : (site,), (bond,) positions, symmetric about 0
     At t = 0 values are those of the local thermal state. The light cone's left edge is the least velocity of
     the left state, its right edge the greatest of the right state: beyond them nothing changes.
-    At |D| < 1 that is not cos(pi p/q) of a small string table the result is combined from such anisotropies
-    nearby. Raises ConvergenceError, and InputError where |D| < 1 is too near to 1, and where light reaches
+    At |D| < 1 that is not cos(pi p/q) of a small string table the result is combined from anisotropies
+    nearby, on rays that correspond to each other. Raises ConvergenceError, and InputError where light reaches
     the ends, because the solution is that of an infinite chain.
     """
-    if abs(anisotropy) >= 1.0:
-        return predict_step_gapped(
-            anisotropy=anisotropy, coupling=coupling, left=left, right=right, middle=middle,
-            times=times, sites=sites, bonds=bonds,
-        )  # fmt: skip
-    way = between(anisotropy)
-    edges = _combined_edges(way, lambda value: _edges_of_halves(value, coupling, left, right))
-    uniform = left == right
-    if not uniform:
+    step, way = Step(coupling, left, right, middle), between(anisotropy)
+    try:
+        return _combined_step(step, anisotropy, way, times, sites, bonds)
+    except ConvergenceError:
+        # at |D| >= 1 strings of every length decide next to a half without field, and may not settle
+        if abs(anisotropy) >= 1.0 or max(np.abs(way.anisotropies)) < 1.0:
+            raise
+    return _combined_step(step, anisotropy, between_angles(anisotropy), times, sites, bonds)
+
+
+def _combined_step(
+    step: Step, anisotropy: float, way: Between, times: Reals, sites: Reals, bonds: Reals
+) -> Prediction:
+    """Predict two joined halves at D by a combination, in which a wall of the magnetisation has its own."""
+    cones = [_light_cone(step, value) for value in way.anisotropies]
+    edges = _combined_edges(way, cones)
+    if not step.is_uniform:
         refuse_reflection(edges, times, sites)
-    rays = rays_to(np.concatenate([sites, bonds]), times, uniform=uniform)
+    rays = rays_to(np.concatenate([sites, bonds]), times, uniform=step.is_uniform)
     distinct, index = np.unique(rays, return_inverse=True)
-    target = STEP_TARGET if len(way.anisotropies) == 1 else COMBINED_TARGET
+    alone = len(way.anisotropies) == 1
 
-    def refined(value: float) -> Refined:
-        def solve(level: int, some: Reals) -> Reals:
-            return _on_rays(_step_mesh(value, coupling, level), left, right, middle, some)
+    def combination(way: Between, here: Marks, there: Sequence[Marks], target: float) -> Combination:
+        solved = []
+        for value, marks in zip(way.anisotropies, there, strict=True):
+            moved = distinct if alone else carried(distinct, here=here, there=marks)
+            found = _solve(step, value, moved, target)
+            solved.append(found.spread(index.reshape(rays.shape).astype(np.int64)))
+        return Combination(way, solved)
 
-        found = refine(solve, distinct, levels=len(STEP_LEVELS), target=target, floor=STEP_FLOOR)
-        return Refined(*(each[index.reshape(rays.shape)] for each in (found.values, found.errors)))
-
-    method = "uniform" if uniform else "joined halves (self-similar)"
-    return _prediction(way, refined, sites.size, edges, method, STEP_REFERENCES)
-
-
-def _step_mesh(anisotropy: float, coupling: float, level: int) -> RapidityMesh:
-    nodes, spacing = STEP_LEVELS[level]
-    return rapidity_mesh(anisotropy=anisotropy, coupling=coupling, nodes=nodes, spacing=spacing)
-
-
-def _edges_of_halves(anisotropy: float, coupling: float, left: State, right: State) -> tuple[float, float]:
-    mesh = _step_mesh(anisotropy, coupling, -2)
-    return light_cone_of_halves(mesh, thermal_on_mesh(mesh, left), thermal_on_mesh(mesh, right))
+    energy = spin = combination(way, edges, cones, STEP_TARGET if alone else COMBINED_TARGET)
+    if step.is_wall and not alone:
+        narrow = between_angles(anisotropy)
+        left_field, right_field = step.left[1], step.right[1]
+        here, *there = _wall_marks(step, anisotropy, way, cones, narrow)
+        spin = combination(narrow, here, there, COMBINED_WALL_TARGET)
+        spin = replace(spin, safety=KINK_SAFETY if 0.0 in {left_field, right_field} else 1.0)
+    method = "uniform" if step.is_uniform else "joined halves (self-similar)"
+    references = GAPPED_REFERENCES if abs(anisotropy) >= 1.0 else GAPLESS_REFERENCES
+    return _prediction(energy, spin, sites.size, edges, method, references)
 
 
-def _on_rays(mesh: RapidityMesh, left: State, right: State, middle: State, rays: Reals) -> Reals:
-    """Return averages (ray, observable); at rays that are not numbers those of the state `middle`."""
-    result = np.empty((rays.size, len(OBSERVABLES)))
-    at_joint = np.isnan(rays)
-    result[at_joint] = uniform_averages(mesh, thermal_on_mesh(mesh, middle))
-    halves = thermal_on_mesh(mesh, left), thermal_on_mesh(mesh, right)
-    result[~at_joint] = join_halves(mesh, *halves, rays=rays[~at_joint])
-    return result
+def _light_cone(step: Step, anisotropy: float) -> tuple[float, float]:
+    return (light_cone_gapped if abs(anisotropy) >= 1.0 else light_cone_gapless)(step, anisotropy)
+
+
+def _solve(step: Step, anisotropy: float, rays: Reals, target: float) -> Solved:
+    if abs(anisotropy) >= 1.0:
+        return solve_gapped(step, anisotropy, rays)
+    return solve_gapless(step, anisotropy, rays, target=target)
+
+
+def _wall_marks(
+    step: Step, anisotropy: float, way: Between, cones: Sequence[tuple[float, float]], narrow: Between
+) -> list[Marks]:
+    """Return what moves with a wall of the magnetisation, at D itself and at the anisotropies of `narrow`.
+
+    cones : at the anisotropies of `way`, from which those at D follow, as the middle of the zone does
+    """
+    centres = {value: _sign_ray(step, value) for value in {*way.anisotropies, *narrow.anisotropies}}
+    known = dict(zip(way.anisotropies, cones, strict=True))
+    others = [known.get(value) or _light_cone(step, value) for value in narrow.anisotropies]
+    middle = way.combine([np.array(centres[value]) for value in way.anisotropies], spin=False)[0]
+    return zone_marks(
+        np.array([anisotropy, *narrow.anisotropies]),
+        [_combined_edges(way, cones), *others],
+        [float(middle), *(centres[value] for value in narrow.anisotropies)],
+        step.coupling,
+    )
+
+
+def _sign_ray(step: Step, anisotropy: float) -> float:
+    return (sign_ray_gapped if abs(anisotropy) >= 1.0 else sign_ray_gapless)(step, anisotropy)
 
 
 def predict_smooth(
@@ -126,7 +186,7 @@ def predict_smooth(
     beta, beta_field : functions of position (any shape) in the chain
     times : (time,) in 1/J, not negative, ascending; sites, bonds : (site,), (bond,) positions, symmetric
     The light cone holds the extreme velocities of the initial profile.
-    Raises ConvergenceError, and InputError where |D| is not below 1 or too near to it, and for a profile that
+    Raises ConvergenceError, and InputError where |D| > 0.97, and for a profile that
     changes within less than NARROWEST_SCALE.
     """
     start = SmoothStart(anisotropy, coupling, beta, beta_field, wall=wall_of(sites))
@@ -144,13 +204,13 @@ def predict_smooth(
         subject = "prediction"
         raise InputError(subject, [problem])
     places = np.concatenate([sites, bonds])
-    way = between(anisotropy)
+    way = between_gapless(anisotropy)
     combined = len(way.anisotropies) > 1
     levels = COMBINED_LEVELS if combined else SMOOTH_LEVELS
 
-    def refined(value: float) -> Refined:
+    def solved(value: float) -> Solved:
         here = replace(start, anisotropy=value)
-        return refine(
+        found = refine(
             lambda level, some: smooth_averages(here, levels[level], some, places),
             times,
             levels=len(levels),
@@ -158,40 +218,35 @@ def predict_smooth(
             floor=SMOOTH_FLOOR,
             least_gain=SMOOTH_GAIN,
         )
+        return Solved(found.values, found.errors, np.zeros_like(found.errors))
 
-    edges = _combined_edges(way, lambda value: initial_light_cone(replace(start, anisotropy=value)))
-    return _prediction(way, refined, sites.size, edges, "characteristics", SMOOTH_REFERENCES)
+    edges = _combined_edges(
+        way, [initial_light_cone(replace(start, anisotropy=value)) for value in way.anisotropies]
+    )
+    both = Combination(way, [solved(value) for value in way.anisotropies])
+    return _prediction(both, both, sites.size, edges, "characteristics", SMOOTH_REFERENCES)
 
 
-def _combined_edges(way: Between, edges: Callable[[float], tuple[float, float]]) -> tuple[float, float]:
-    values = [np.array(edges(value)) for value in way.anisotropies]
-    first, last = way.combine(values, spin=False)[0].tolist()
+def _combined_edges(way: Between, cones: Sequence[tuple[float, float]]) -> tuple[float, float]:
+    first, last = way.combine([np.array(cone) for cone in cones], spin=False)[0].tolist()
     return first, last
 
 
 def _prediction(
-    way: Between,
-    refined: Callable[[float], Refined],
+    energy: Combination,
+    spin: Combination,
     sites: int,
     light_cone: tuple[float, float],
     method: str,
     references: tuple[str, ...],
 ) -> Prediction:
-    """Combine anisotropies; sort values (time, site or bond, observable) into the observables' places.
-
-    A difference may vanish by chance at a place: an error is the largest among its neighbours.
-    """
-    solved = [refined(value) for value in way.anisotropies]
-    fields: dict[str, Reals] = {}
-    grid: dict[str, Reals] = {}
-    strings: dict[str, Reals] = {}
+    """Combine anisotropies and sort values (time, site or bond, observable) into the observables' places."""
+    fields, grid, strings = ({}, {}, {})
     for index, name in enumerate(OBSERVABLES):
         part = slice(None, sites) if OBSERVABLE_PLACES[name] == "site" else slice(sites, None)
-        spin = name.startswith("charge")
-        fields[name], cost = way.combine([each.values[:, part, index] for each in solved], spin=spin)
-        bound = way.bound([each.errors[:, part, index] for each in solved], spin=spin)
-        strings[name] = maximum_filter1d(cost, size=STRINGS_NEIGHBOURS, axis=1)
-        grid[name] = maximum_filter1d(bound, size=3, axis=1)
+        is_spin = name.startswith("charge")
+        found = (spin if is_spin else energy).field(part, index, spin=is_spin)
+        fields[name], grid[name], strings[name] = found
     for each in (fields, grid, strings):
         each["energy_current"][:, [0, -1]] = 0.0  # no bond beyond the end sites to carry energy
     return Prediction(fields, grid, strings, light_cone, method, references)
