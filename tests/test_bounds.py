@@ -93,7 +93,7 @@ def test_true_error_is_below_every_bound_at_every_point(case: str) -> None:
 def test_bound_holds_against_free_fermions_and_is_a_multiple_tighter() -> None:
     """Twenty-four sites: the exact solution contains no cut; start and step are finer than the bound."""
     sites = 24
-    quench = replace(free_quench(sites), discarded_weight=1e-7, samples=3, bond_floor=8)
+    quench = replace(free_quench(sites), discarded_weight=1e-7, samples=3, bond_floor=4)
     record = simulate(quench)
     exact = free_evolution(
         sites=sites,

@@ -2,8 +2,7 @@
 
 from __future__ import annotations
 
-from collections.abc import Mapping, Sequence
-from copy import deepcopy
+from collections.abc import Mapping
 from typing import Any
 
 import numpy as np
@@ -13,31 +12,10 @@ from tests.oracles import free_models
 from tnquench.budget.assess import RunSettings, assess
 from tnquench.budget.companions import coarser_steps, companion_quenches
 from tnquench.conventions import ERROR_SOURCES, Reals, bond_positions, site_positions
-from tnquench.evolution.preparation import Preparation, prepare
 from tnquench.model.catalogue import build_chain
 from tnquench.model.chain import start_terms
-from tnquench.model.pauli import Operator
 from tnquench.model.profiles import step
-from tnquench.observables import quench as quench_module
-from tnquench.observables.quench import PREPARATION_SHARE, QuantumRecord, Quench, simulate
-
-
-@pytest.fixture(autouse=True)
-def _prepared_once(monkeypatch: pytest.MonkeyPatch) -> None:
-    """Main run and companions have the same start: prepare it once, for each run its own copy.
-
-    They differ in the bond ceiling, which is out of reach here.
-    """
-    known: dict[str, Preparation] = {}
-
-    def remembered(terms: Sequence[Operator], **settings: Any) -> Preparation:
-        assert settings["rule"].bond_ceiling > 1000
-        key = repr((terms, settings["distance_target"], settings["rule"].weight_target))
-        if key not in known:
-            known[key] = prepare(terms, **settings)
-        return deepcopy(known[key])
-
-    monkeypatch.setattr(quench_module, "prepare", remembered)
+from tnquench.observables.quench import PREPARATION_SHARE, QuantumRecord, Quench, simulate, start_of_quench
 
 
 def main_run(
@@ -70,8 +48,10 @@ def main_run(
 
 def judged(main: Quench) -> tuple[QuantumRecord, dict[str, Reals]]:
     """A run and its claimed errors without the influence of the ends, which the oracle's chain shares."""
-    records = {name: simulate(quench) for name, quench in companion_quenches(main, shorter=None).items()}
-    record = simulate(main)
+    start = start_of_quench(main)
+    runs = companion_quenches(main, shorter=None)
+    records = {name: simulate(quench, start=start) for name, quench in runs.items()}
+    record = simulate(main, start=start)
     sites = main.chain.sites
     budgets = assess(
         record,

@@ -42,14 +42,11 @@ TWO_QUBITS: dict[str, tuple[tuple[Operator, ...], int]] = {
 def random_state(grading: Grading, *, sites: int, largest: int, seed: int, centre: int) -> ChainState:
     """A unit vector of random tensors, in canonical form about one end.
 
-    largest : most indices of one charge on a bond; some charges get none, so that sectors differ in size
+    largest : most indices of one charge on a bond
     """
     generator = np.random.default_rng(seed)
     end = np.eye(1, grading.sectors, dtype=np.int64)[0]
-    inner = [generator.integers(0, largest + 1, grading.sectors) for _ in range(sites - 1)]
-    for sizes in inner:
-        sizes[generator.integers(grading.sectors)] = largest
-        sizes[0] = max(1, sizes[0])
+    inner = [np.full(grading.sectors, generator.integers(1, largest + 1)) for _ in range(sites - 1)]
     bonds = [end, *inner, end]
     tensors = [
         generator.normal(size=(grading.multiplicity, int(left.sum()), int(right.sum())))

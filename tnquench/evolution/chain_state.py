@@ -28,7 +28,8 @@ class ChainState:
     grading : charges of the local operators
     tensors : one array (multiplicity, left, right) a site
     bonds   : L + 1 arrays (sectors,): number of indices of each charge, ordered by charge, on the bond left
-              of each site and on the one right of the last; both ends hold a single neutral index
+              of each site and on the one right of the last: equally many of each charge, but both ends hold a
+              single neutral index
     centre  : the site that carries the norm; tensors left (right) of it are left (right) isometries
     """
 
@@ -52,6 +53,10 @@ class ChainState:
         """Memory of all tensors in bytes."""
         return sum(tensor.nbytes for tensor in self.tensors)
 
+    def set_size(self, bond: int, size: int) -> None:
+        """Note that an inner bond holds `size` indices of each charge."""
+        self.bonds[bond] = np.full(self.grading.sectors, size, dtype=np.int64)
+
     def copy(self) -> ChainState:
         """Return an independent copy."""
         return ChainState(
@@ -68,14 +73,41 @@ class ChainState:
 
 
 def infinite_temperature(sites: int, grading: Grading) -> ChainState:
-    """Return the identity operator with unit norm, the state at beta = 0."""
-    end = np.zeros(grading.sectors, dtype=np.int64)
-    end[0] = 1
-    identity = np.zeros((grading.multiplicity, 1, 1))
-    identity[int(np.flatnonzero(grading.members[0] == 0)[0])] = 1.0
-    return ChainState(
-        grading, [identity.copy() for _ in range(sites)], [end.copy() for _ in range(sites + 1)]
-    )
+    """Return the identity operator with unit norm, the state at beta = 0; its charges but 0 hold zeros."""
+    sectors = grading.sectors
+    end = (np.arange(sectors) == 0).astype(np.int64)
+    inner = np.ones(sectors, dtype=np.int64)
+    identity = np.zeros((grading.multiplicity, sectors, sectors))
+    identity[int(np.flatnonzero(grading.members[0] == 0)[0]), 0, 0] = 1.0
+    tensors = [identity.copy() for _ in range(sites)]
+    tensors[0] = tensors[0][:, :1].copy()
+    tensors[-1] = tensors[-1][:, :, :1].copy()
+    return ChainState(grading, tensors, [end, *(inner.copy() for _ in range(sites - 1)), end.copy()])
+
+
+def by_right_charge(tensor: Reals, sectors: int) -> Reals:
+    """Return a site tensor as one matrix a charge of its right bond, (charge, multiplicity x left, right)."""
+    return tensor.reshape(tensor.shape[0] * tensor.shape[1], sectors, -1).swapaxes(0, 1)
+
+
+def by_left_charge(tensor: Reals, sectors: int) -> Reals:
+    """Return a site tensor as one matrix a charge of its left bond, (charge, left, multiplicity x right)."""
+    copies, left, right = tensor.shape
+    parts = tensor.reshape(copies, sectors, left // sectors, right)
+    return parts.transpose(1, 2, 0, 3).reshape(sectors, left // sectors, copies * right)
+
+
+def from_right_charge(parts: Reals, copies: int) -> Reals:
+    """Return the site tensor whose `by_right_charge` is given."""
+    sectors, rows, size = parts.shape
+    return parts.swapaxes(0, 1).reshape(copies, rows // copies, sectors * size)
+
+
+def from_left_charge(parts: Reals, copies: int) -> Reals:
+    """Return the site tensor whose `by_left_charge` is given."""
+    sectors, size, columns = parts.shape
+    split = parts.reshape(sectors, size, copies, columns // copies)
+    return split.transpose(2, 0, 1, 3).reshape(copies, sectors * size, columns // copies)
 
 
 def move_centre(state: ChainState, site: int) -> None:
@@ -87,41 +119,23 @@ def move_centre(state: ChainState, site: int) -> None:
 
 
 def _step_right(state: ChainState) -> None:
-    """Make the centre a left isometry and hand its triangular factor to the next site."""
-    here = state.centre
-    tensor, following = state.tensors[here], state.tensors[here + 1]
-    multiplicity, left, _ = tensor.shape
-    columns = state.sector_slices(here + 1)
-    isometries, factors = [], []
-    for block in columns:
-        q, r = orthonormal_and_factor(tensor[:, :, block].reshape(multiplicity * left, -1))
-        isometries.append(q.reshape(multiplicity, left, -1))
-        factors.append(r)
-    state.tensors[here] = np.concatenate(isometries, axis=2)
-    state.tensors[here + 1] = np.concatenate(
-        [r @ following[:, block, :] for r, block in zip(factors, columns, strict=True)], axis=1
-    )
-    state.bonds[here + 1] = np.array([r.shape[0] for r in factors], dtype=np.int64)
+    """Make the centre a left isometry and hand its triangular factors to the next site."""
+    here, sectors, copies = state.centre, state.grading.sectors, state.grading.multiplicity
+    q, r = orthonormal_and_factor(by_right_charge(state.tensors[here], sectors))
+    state.tensors[here] = from_right_charge(q, copies)
+    state.tensors[here + 1] = from_left_charge(r @ by_left_charge(state.tensors[here + 1], sectors), copies)
+    state.set_size(here + 1, r.shape[1])
     state.centre = here + 1
 
 
 def _step_left(state: ChainState) -> None:
-    """Make the centre a right isometry and hand its triangular factor to the site before."""
-    here = state.centre
-    tensor, previous = state.tensors[here], state.tensors[here - 1]
-    multiplicity, _, right = tensor.shape
-    rows = state.sector_slices(here)
-    isometries, factors = [], []
-    for block in rows:
-        flat = tensor[:, block, :].transpose(0, 2, 1).reshape(multiplicity * right, -1)
-        q, r = orthonormal_and_factor(flat)
-        isometries.append(q.reshape(multiplicity, right, -1).transpose(0, 2, 1))
-        factors.append(r.T)
-    state.tensors[here] = np.concatenate(isometries, axis=1)
-    state.tensors[here - 1] = np.concatenate(
-        [previous[:, :, block] @ r for r, block in zip(factors, rows, strict=True)], axis=2
-    )
-    state.bonds[here] = np.array([r.shape[1] for r in factors], dtype=np.int64)
+    """Make the centre a right isometry and hand its triangular factors to the site before."""
+    here, sectors, copies = state.centre, state.grading.sectors, state.grading.multiplicity
+    q, r = orthonormal_and_factor(by_left_charge(state.tensors[here], sectors).swapaxes(1, 2))
+    state.tensors[here] = from_left_charge(q.swapaxes(1, 2), copies)
+    handed = by_right_charge(state.tensors[here - 1], sectors) @ r.swapaxes(1, 2)
+    state.tensors[here - 1] = from_right_charge(handed, copies)
+    state.set_size(here, r.shape[1])
     state.centre = here - 1
 
 

@@ -1,5 +1,9 @@
 """Cutting a bond: the largest singular values of a two-site tensor, and the weight that is truly lost.
 
+A two-site tensor is one matrix a charge of its middle bond. Equally many singular values of each charge are
+kept, so that all matrices have one shape and every operation treats all charges at once; the spectra of the
+charges are so alike that this keeps hardly more than the best choice.
+
 Three methods stand behind `cut`: `svd` (reference), `gram` (eigenvectors of the smaller Gram matrix) and
 `subspace` (warm-started subspace iteration that measures what it discards from norms). The last two resolve
 relative weights of about 1e-13 at best; for smaller targets the reference is used.
@@ -28,36 +32,37 @@ GRAM_FLOOR = 1e-12
 #: would not see them.
 BOND_FLOOR = 32
 
-#: Relative weight of a singular value that is rounding and never kept.
+#: Relative weight of a singular value that is rounding and never kept for its own sake.
 NEGLIGIBLE = 1e-26
 
 #: Share of the weight target that the subspace may leave outside itself; the rest goes to its smallest
 #: directions.
 OUTSIDE_SHARE = 0.3
 
-#: A charge that misses less than this share of what is allowed outside needs no more directions.
-IDLE_SHARE = 0.05
-
 #: Largest overlap of new directions with a basis that counts as orthogonal.
 ORTHOGONALITY = 1e-13
 
-#: Random directions added to a basis that misses too much: at least this many, and this fraction of its size.
-EXTRA_DIRECTIONS, EXTRA_FRACTION = 4, 0.1
+#: Random directions added to the warm start of each charge: at least this many, and this fraction of its
+#: size. Few of them make a second portion likely, which costs more than they do.
+EXTRA_DIRECTIONS, EXTRA_FRACTION = 2, 0.3
+
+#: A subspace of more than this fraction of all directions is no cheaper than the whole.
+LARGEST_FRACTION = 0.6
 
 
 @dataclass
 class Cut:
     """A two-site tensor cut in two, charge by charge: block = left @ right.
 
-    left : (rows, kept) isometries; right : (kept, columns), of unit norm together
+    left : isometries (charge, rows, kept); right : (charge, kept, columns), of unit norm together
     discarded_weight : lost squared norm as a fraction of the whole
     norm : norm of the uncut tensor
     uncertainty : rounding of the discarded weight where it comes from norms or Gram matrices
     fallbacks : number of singular value decompositions that needed the slower driver
     """
 
-    left: list[Reals]
-    right: list[Reals]
+    left: Reals
+    right: Reals
     discarded_weight: float
     norm: float
     fallbacks: int = 0
@@ -69,7 +74,8 @@ class CutRule:
     """How bonds are cut.
 
     weight_target : squared norm that one cut may lose, relative
-    bond_ceiling  : most singular values kept; when it binds the lost weight exceeds the target
+    bond_ceiling  : most singular values kept, but at least one a charge; when it binds the lost weight
+                    exceeds the target
     bond_floor    : fewest singular values kept (as long as they are not rounding), whatever the target: small
                     bonds cost little, and cutting them leaves errors that no longer shrink smoothly with the
                     weight
@@ -91,165 +97,130 @@ class CutRule:
 
 @dataclass
 class _Spectrum:
-    """Singular directions of one block in descending order of weight: block = frame @ image up to what is
+    """Singular directions of all blocks in descending order of weight: block = frame @ image up to what is
     outside.
 
-    frame : orthonormal columns; image : frame.T @ block; weights : squared singular values
-    rotation : orthogonal matrix that turns the frame into singular directions; None if it holds them already
+    frame : orthonormal columns (charge, rows, size), None for all directions; image : frame.T @ block
+    weights : squared singular values (charge, size)
+    rotation : orthogonal matrices that turn the frame into singular directions; None if it holds them already
     """
 
-    frame: Reals
+    frame: Reals | None
     image: Reals
     weights: Reals
     rotation: Reals | None = None
 
     def largest(self, kept: int) -> tuple[Reals, Reals]:
-        """Return the `kept` leading left directions and the block seen in them."""
+        """Return the `kept` leading left directions of each charge and the blocks seen in them."""
         if self.rotation is None:
-            return np.ascontiguousarray(self.frame[:, :kept]), np.ascontiguousarray(self.image[:kept])
-        rotation = self.rotation[:, :kept]
-        return self.frame @ rotation, rotation.T @ self.image
+            assert self.frame is not None, "singular directions are known by their frame"
+            return self.frame[:, :, :kept], self.image[:, :kept]
+        rotation = self.rotation[:, :, :kept]
+        left = rotation if self.frame is None else self.frame @ rotation
+        return left, rotation.swapaxes(1, 2) @ self.image
 
 
-def cut(blocks: list[Reals], rule: CutRule, *, guess: list[Reals] | None = None) -> Cut:
+def cut(blocks: Reals, rule: CutRule, *, guess: Reals | None = None) -> Cut:
     """Cut a two-site tensor, given by one matrix a charge, keeping its largest singular values.
 
-    blocks : matrices (rows, columns), one a charge of the middle bond; empty ones allowed
-    guess  : rows that span the kept space nearly, (any number, columns) each; used by `subspace` alone
+    blocks : shape (charge, rows, columns)
+    guess  : rows that span the kept space nearly, (charge, any number, columns); used by `subspace` alone
     Returns a Cut; its discarded_weight is the true lost fraction of the squared norm.
     Raises numpy.linalg.LinAlgError only if both SVD drivers fail, which means the tensor holds no numbers.
     """
     method = rule.method if rule.weight_target >= GRAM_FLOOR else "svd"
-    total = sum(float(np.vdot(block, block)) for block in blocks)
+    total = float(np.vdot(blocks, blocks))
     fallbacks, outside = 0, 0.0
     if method == "svd":
-        spectra, fallbacks = _by_svd(blocks)
+        spectrum, fallbacks = _by_svd(blocks)
     elif method == "gram" or guess is None:
-        spectra = [_by_gram(block) for block in blocks]
+        spectrum = _by_gram(blocks)
     else:
-        spectra, outside = _by_subspace(blocks, guess, rule, total)
-    result = _keep_largest(spectra, rule, total=total, outside=outside, fallbacks=fallbacks)
-    if method != "svd":
-        result.uncertainty = float(np.finfo(np.float64).eps) * len(blocks)
-    return result
+        spectrum, outside = _by_subspace(blocks, guess, rule, total)
+    left, right, lost = _keep_largest(spectrum, rule, total=total, outside=outside)
+    right /= np.sqrt(np.vdot(right, right))
+    uncertainty = 0.0 if method == "svd" else float(np.finfo(np.float64).eps) * len(blocks)
+    return Cut(left, right, lost, float(np.sqrt(total)), fallbacks, uncertainty)
 
 
 def _keep_largest(
-    spectra: list[_Spectrum], rule: CutRule, *, total: float, outside: float, fallbacks: int
-) -> Cut:
-    """Discard the smallest singular values of all charges together while the lost weight stays under the
-    target."""
-    charges = np.concatenate([np.full(len(s.weights), charge) for charge, s in enumerate(spectra)])
-    weights = np.concatenate([s.weights for s in spectra])
-    order = np.argsort(weights, kind="stable")
-    lost = outside + np.cumsum(weights[order])
-    discard = int(np.searchsorted(lost, rule.weight_target * total, side="right"))
-    discard = min(discard, len(weights) - rule.bond_floor)
-    negligible = int(np.searchsorted(weights[order], NEGLIGIBLE * total, side="right"))
-    discard = min(max(discard, negligible, len(weights) - rule.bond_ceiling), len(weights) - 1)
-    kept = np.bincount(charges[order[discard:]].astype(np.int64), minlength=len(spectra))
-    halves = [spectrum.largest(int(n)) for spectrum, n in zip(spectra, kept, strict=True)]
-    left, right = [half[0] for half in halves], [half[1] for half in halves]
-    held = sum(float(np.vdot(part, part)) for part in right)
-    for part in right:
-        part /= np.sqrt(held)
-    measured = float(lost[discard - 1]) if discard else outside
-    return Cut(left, right, max(measured, 0.0) / total, float(np.sqrt(total)), fallbacks)
+    spectrum: _Spectrum, rule: CutRule, *, total: float, outside: float
+) -> tuple[Reals, Reals, float]:
+    """Keep as few directions of each charge as the lost weight may be under the target with; return them, the
+    blocks seen in them, and the lost fraction."""
+    sectors, size = spectrum.weights.shape
+    together = spectrum.weights.sum(axis=0)
+    tail = outside + np.cumsum(together[::-1])[::-1]  # lost if this direction and all after it are discarded
+    kept = int(np.count_nonzero(tail > rule.weight_target * total))
+    floor = min(-(-rule.bond_floor // sectors), int(np.count_nonzero(together > NEGLIGIBLE * total)))
+    kept = min(max(kept, floor, 1), max(rule.bond_ceiling // sectors, 1), size)
+    lost = float(tail[kept]) if kept < size else outside
+    return *spectrum.largest(kept), max(lost, 0.0) / total
 
 
-def _by_svd(blocks: list[Reals]) -> tuple[list[_Spectrum], int]:
+def _by_svd(blocks: Reals) -> tuple[_Spectrum, int]:
     """Return all left singular vectors; count the blocks for which the divide-and-conquer driver failed."""
-    spectra, fallbacks = [], 0
+    parts, fallbacks = [], 0
     for block in blocks:
-        if 0 in block.shape:
-            spectra.append(
-                _Spectrum(np.zeros((block.shape[0], 0)), np.zeros((0, block.shape[1])), np.zeros(0))
-            )
-            continue
         try:
-            u, s, v = svd(block, full_matrices=False, lapack_driver="gesdd")
+            parts.append(svd(block, full_matrices=False, lapack_driver="gesdd"))
         except LinAlgError:
             fallbacks += 1
-            u, s, v = svd(block, full_matrices=False, lapack_driver="gesvd")
-        spectra.append(_Spectrum(u, s[:, None] * v, s**2))
-    return spectra, fallbacks
+            parts.append(svd(block, full_matrices=False, lapack_driver="gesvd"))
+    u, s, v = (np.array(each) for each in zip(*parts, strict=True))
+    return _Spectrum(u, s[:, :, None] * v, s**2), fallbacks
 
 
-def _by_gram(block: Reals) -> _Spectrum:
-    """Return left singular vectors from the eigenvectors of the smaller Gram matrix."""
-    rows, columns = block.shape
+def _by_gram(blocks: Reals) -> _Spectrum:
+    """Return left singular vectors from the eigenvectors of the smaller Gram matrices."""
+    _, rows, columns = blocks.shape
     if rows <= columns:
-        weights, vectors = np.linalg.eigh(block @ block.T)
-        return _Spectrum(vectors[:, ::-1], vectors[:, ::-1].T @ block, np.maximum(weights[::-1], 0.0))
-    _, vectors = np.linalg.eigh(block.T @ block)
+        return _rotated(None, blocks)
+    _, vectors = np.linalg.eigh(blocks.swapaxes(1, 2) @ blocks)
     # an eigenvector of a tiny eigenvalue is mapped to a short, inaccurate vector: QR makes the set
     # orthonormal again
-    mapped = orthonormal(block @ vectors[:, ::-1])
-    image = mapped.T @ block
-    return _Spectrum(mapped, image, np.square(image).sum(axis=1))
+    mapped = orthonormal(blocks @ vectors[:, :, ::-1])
+    return _rotated(mapped, mapped.swapaxes(1, 2) @ blocks)
 
 
-def _by_subspace(
-    blocks: list[Reals], guess: list[Reals], rule: CutRule, total: float
-) -> tuple[list[_Spectrum], float]:
-    """Find a subspace that holds each block up to a small share of the target; return its singular
-    directions.
+def _rotated(frame: Reals | None, image: Reals) -> _Spectrum:
+    """Return the spectrum of the blocks seen in a frame."""
+    weights, rotation = np.linalg.eigh(image @ image.swapaxes(1, 2))
+    return _Spectrum(frame, image, np.maximum(weights[:, ::-1], 0.0), rotation[:, :, ::-1])
 
-    The warm start is mapped once through the block; what the block has outside, measured as a difference of
-    norms, is then caught by random directions of the residual, in growing portions and only where something
-    is missing.
+
+def _by_subspace(blocks: Reals, guess: Reals, rule: CutRule, total: float) -> tuple[_Spectrum, float]:
+    """Find a subspace that holds the blocks up to a small share of the target; return its singular
+    directions and what they have outside.
+
+    The warm start and some random directions are mapped once through the blocks; what these have outside,
+    measured as a difference of norms, is then caught by more random directions, in growing portions.
     """
+    sectors, rows, columns = blocks.shape
+    most, held = min(rows, columns), guess.shape[1]
+    extra = max(EXTRA_DIRECTIONS, int(EXTRA_FRACTION * held), -(-rule.bond_floor // sectors) - held)
+    if held + extra > LARGEST_FRACTION * most:
+        return _by_gram(blocks), 0.0
+    probes = np.concatenate([guess, rule.random.standard_normal((sectors, extra, columns))], axis=1)
+    basis = orthonormal(blocks @ probes.swapaxes(1, 2))
+    image = basis.swapaxes(1, 2) @ blocks
     allowed = OUTSIDE_SHARE * rule.weight_target * total
-    frames = [_frame(block, rows) for block, rows in zip(blocks, guess, strict=True)]
-    norms = [float(np.vdot(block, block)) for block in blocks]
-    extra = EXTRA_FRACTION
-    if sum(len(image) for _, image in frames) < rule.bond_floor + EXTRA_DIRECTIONS * len(blocks):
-        portion = rule.bond_floor // len(blocks) + EXTRA_DIRECTIONS  # the floor is filled whatever is missing
-        frames = [
-            _grown(block, *frame, max(0, portion - len(frame[1])), rule.random)
-            for block, frame in zip(blocks, frames, strict=True)
-        ]
-    while True:
-        held = [float(np.vdot(image, image)) for _, image in frames]
-        missing = [norm - inside for norm, inside in zip(norms, held, strict=True)]
-        open_ends = [
-            charge
-            for charge, (block, (_, image)) in enumerate(zip(blocks, frames, strict=True))
-            if len(image) < min(block.shape) and missing[charge] > IDLE_SHARE * allowed
-        ]
-        if sum(missing) <= allowed or not open_ends:
-            break
-        for charge in open_ends:
-            portion = max(EXTRA_DIRECTIONS, int(extra * len(frames[charge][1])))
-            frames[charge] = _grown(blocks[charge], *frames[charge], portion, rule.random)
-        extra *= 2.0
-    spectra = []
-    for basis, image in frames:
-        weights, rotation = np.linalg.eigh(image @ image.T)
-        spectra.append(_Spectrum(basis, image, np.maximum(weights[::-1], 0.0), rotation[:, ::-1]))
-    return spectra, max(sum(missing), 0.0)
+    while (missing := total - float(np.vdot(image, image))) > allowed:
+        if image.shape[1] + extra > LARGEST_FRACTION * most:
+            return _by_gram(blocks), 0.0
+        new = _outside(blocks, basis, image, rule.random.standard_normal((sectors, columns, extra)))
+        basis = np.concatenate([basis, new], axis=2)
+        image = np.concatenate([image, new.swapaxes(1, 2) @ blocks], axis=1)
+        extra *= 2
+    return _rotated(basis, image), max(missing, 0.0)
 
 
-def _frame(block: Reals, rows: Reals) -> tuple[Reals, Reals]:
-    """Return an orthonormal basis of the block's image of `rows`, and the block seen in it."""
-    image = block @ rows[: min(block.shape)].T
-    lengths = np.linalg.norm(image, axis=0)
-    basis = orthonormal(image / np.where(lengths > 0.0, lengths, 1.0))
-    return basis, basis.T @ block
-
-
-def _grown(
-    block: Reals, basis: Reals, image: Reals, portion: int, random: np.random.Generator
-) -> tuple[Reals, Reals]:
-    """Add so many directions of the residual block - basis @ image to a basis, up to the block's rank."""
-    fresh = min(min(block.shape) - len(image), portion)
-    if fresh == 0:
-        return basis, image
-    probe = random.standard_normal((block.shape[1], fresh))
-    sample = block @ probe - basis @ (image @ probe)
-    new = orthonormal(sample / np.maximum(np.linalg.norm(sample, axis=0), np.finfo(np.float64).tiny))
-    new = orthonormal(new - basis @ (basis.T @ new))  # rounding left a trace of the old basis
-    if len(image) and np.abs(basis.T @ new).max() > ORTHOGONALITY:
-        # nothing but rounding is left of the block: any directions serve, as long as they are orthogonal
-        new = orthonormal(np.hstack([basis, new]))[:, len(image) :]
-    return np.hstack([basis, new]), np.vstack([image, new.T @ block])
+def _outside(blocks: Reals, basis: Reals, image: Reals, probes: Reals) -> Reals:
+    """Return orthonormal directions of what the blocks have outside a basis, where the probes find it."""
+    sample = blocks @ probes - basis @ (image @ probes)
+    new = orthonormal(sample)
+    new = orthonormal(new - basis @ (basis.swapaxes(1, 2) @ new))  # rounding left a trace of the basis
+    if np.abs(basis.swapaxes(1, 2) @ new).max() > ORTHOGONALITY:
+        # nothing but rounding is left of the blocks: any directions serve, as long as they are orthogonal
+        new = orthonormal(np.concatenate([basis, new], axis=2))[:, :, basis.shape[2] :]
+    return new

@@ -24,11 +24,13 @@ from tnquench.model.pauli import PHASE, Operator, PauliString
 class Gate:
     """A charge-conserving linear map of two sites' operators.
 
-    blocks : for each total charge of the two sites the matrix on their operators, flattened as (charge of the
-             left site's operator, copy of the left, copy of the right), or None where the map is the identity
+    charges : total charges of the two sites where the map is not the identity, (active,)
+    blocks : for each of them the matrix on the sites' operators, flattened as (charge of the left site's
+             operator, copy of the left, copy of the right), shape (active, size, size)
     """
 
-    blocks: tuple[Reals | None, ...]
+    charges: Integers
+    blocks: Reals
 
 
 @dataclass(frozen=True)
@@ -71,31 +73,44 @@ def swap_gate(grading: Grading) -> Gate:
     return _gate(blocks)
 
 
-def composed(first: Gate, second: Gate) -> Gate:
+def composed(first: Gate, second: Gate, *, sectors: int) -> Gate:
     """Return the gate that applies `first`, then `second`."""
-    return Gate(
-        tuple(
-            before if after is None else after if before is None else after @ before
-            for before, after in zip(first.blocks, second.blocks, strict=True)
-        )
-    )
+    size = first.blocks.shape[1]
+    both = []
+    for gate in (first, second):
+        whole = np.broadcast_to(np.eye(size), (sectors, size, size)).copy()
+        whole[gate.charges] = gate.blocks
+        both.append(whole)
+    return _gate(both[1] @ both[0])
 
 
-def apply_gate(gate: Gate, pair: Reals, *, left_slices: list[slice], right_slices: list[slice]) -> None:
+def apply_gate(gate: Gate, pair: Reals) -> None:
     """Apply a gate to a two-site tensor in place.
 
-    pair : shape (middle charge, multiplicity, multiplicity, left, right)
-    left_slices, right_slices : index range of each charge on the outer bonds
+    pair : contiguous, shape (middle charge, multiplicity, left, multiplicity, right), where an outer bond
+    holds equally many indices of each charge or, at an end of the chain, a single neutral one
     """
-    flips = _flips(len(pair))
-    split = pair.reshape(*(2,) * (len(flips[0]) - 1), -1, *pair.shape[3:])
-    for left, rows in enumerate(left_slices):
-        height = rows.stop - rows.start
-        for right, columns in enumerate(right_slices):
-            block, size = gate.blocks[left ^ right], height * (columns.stop - columns.start)
-            if block is not None and size:
-                part = split[(*flips[left], rows, columns)]
-                part[...] = (block @ part.reshape(len(block), size)).reshape(part.shape)
+    sectors, copies, left, _, right = pair.shape
+    outer = [(1, 1) if size == 1 else (sectors, size // sectors) for size in (left, right)]
+    active = _reachable(gate.charges, outer)
+    if not active.any():
+        return
+    split = pair.reshape(sectors, copies, *outer[0], copies, *outer[1])
+    middle, lefts, rights = (
+        each[gate.charges[active]] for each in _places(sectors, outer[0][0], outer[1][0])
+    )
+    part = split[middle, :, lefts, :, :, rights, :]  # (active, operator, outer charges, copy, l, copy, r)
+    shape = part.shape
+    flat = part.transpose(0, 1, 3, 5, 2, 4, 6)
+    mapped = gate.blocks[active] @ flat.reshape(len(part), gate.blocks.shape[2], -1)
+    split[middle, :, lefts, :, :, rights, :] = mapped.reshape(
+        *shape[:2], copies, copies, shape[2], shape[4], shape[6]
+    ).transpose(0, 1, 4, 2, 5, 3, 6)
+
+
+def _reachable(charges: Integers, outer: list[tuple[int, int]]) -> Integers:
+    """Return which total charges a pair of sites can have: both ends of a chain leave the neutral one."""
+    return charges == 0 if outer[0][0] == outer[1][0] == 1 else np.ones(len(charges), dtype=np.bool_)
 
 
 def _generators(term: Operator, part: Callable[[complex], float], *, first: int, grading: Grading) -> Reals:
@@ -141,9 +156,12 @@ def _exponential(generators: Reals) -> Gate:
 
 
 def _gate(blocks: Reals) -> Gate:
-    """Keep one matrix a charge, None where it is the identity."""
+    """Keep the matrices that are not the identity."""
     identity = np.eye(blocks.shape[1])
-    return Gate(tuple(None if np.array_equal(block, identity) else block for block in blocks))
+    charges = np.array(
+        [c for c, block in enumerate(blocks) if not np.array_equal(block, identity)], dtype=np.int64
+    )
+    return Gate(charges, np.ascontiguousarray(blocks[charges]))
 
 
 @cache
@@ -156,14 +174,23 @@ def _phases(qubits: int) -> NDArray[np.complex128]:
 
 
 @cache
-def _flips(sectors: int) -> list[tuple[slice, ...]]:
-    """Return for each left charge the slices that turn the axis of middle charges, one axis a bit, and the
-    copies after it, into those of the left site's operator, whose charge is middle XOR left."""
-    bits = range(sectors.bit_length() - 2, -1, -1)
-    return [
-        (*(slice(None, None, -1 if left >> bit & 1 else 1) for bit in bits), slice(None))
-        for left in range(sectors)
-    ]
+def _places(sectors: int, left: int, right: int) -> tuple[Integers, Integers, Integers]:
+    """Return middle, left and right charge of every block of a two-site tensor, each of shape (total charge
+    of the two sites, charge of the left site's operator, pair of outer charges).
+
+    left, right : numbers of charges on the outer bonds, all or the neutral one alone
+    The outer charges differ by the total charge; the left site's operator carries left XOR middle.
+    """
+    totals, operators = np.arange(sectors)[:, None, None], np.arange(sectors)[None, :, None]
+    if left == 1:
+        lefts, rights = np.zeros_like(totals), totals if right > 1 else np.zeros_like(totals)
+    elif right == 1:
+        lefts, rights = totals, np.zeros_like(totals)
+    else:
+        lefts = np.arange(sectors)[None, None, :]
+        rights = lefts ^ totals
+    middle, lefts, rights = np.broadcast_arrays(lefts ^ operators, lefts, rights)
+    return middle, lefts, rights
 
 
 def _layout(grading: Grading) -> _Layout:

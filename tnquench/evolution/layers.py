@@ -15,7 +15,14 @@ import numpy as np
 
 from tnquench.conventions import Reals
 from tnquench.errors import StateError
-from tnquench.evolution.chain_state import ChainState, move_centre
+from tnquench.evolution.chain_state import (
+    ChainState,
+    by_left_charge,
+    by_right_charge,
+    from_left_charge,
+    from_right_charge,
+    move_centre,
+)
 from tnquench.evolution.cutting import GRAM_FLOOR, Cut, CutRule, cut
 from tnquench.evolution.gates import Gate, apply_gate
 
@@ -91,20 +98,15 @@ def apply_layer(state: ChainState, gates: Mapping[int, Gate], rule: CutRule, led
         move_centre(state, 0)
 
 
-def joined_pair(state: ChainState, bond: int) -> Reals:
-    """Return the two-site tensor of sites `bond`, `bond + 1`: (middle charge, multiplicity, multiplicity,
-    left, right)."""
-    a, b = state.tensors[bond], state.tensors[bond + 1]
-    pair = np.empty((state.grading.sectors, a.shape[0], b.shape[0], a.shape[1], b.shape[2]))
-    for charge, block in enumerate(state.sector_slices(bond + 1)):
-        np.matmul(a[:, None, :, block], b[None, :, block, :], out=pair[charge])
-    return pair
-
-
 def _gated_pair(state: ChainState, bond: int, gate: Gate) -> Reals:
-    """Join two sites, apply the gate, and make sure that the result is made of numbers."""
-    pair = joined_pair(state, bond)
-    apply_gate(gate, pair, left_slices=state.sector_slices(bond), right_slices=state.sector_slices(bond + 2))
+    """Join two sites, apply the gate, and make sure that the result is made of numbers.
+
+    Returns one matrix a charge of the middle bond, (charge, multiplicity x left, multiplicity x right).
+    """
+    sectors, copies = state.grading.sectors, state.grading.multiplicity
+    left, right = state.tensors[bond], state.tensors[bond + 1]
+    pair = by_right_charge(left, sectors) @ by_left_charge(right, sectors)
+    apply_gate(gate, pair.reshape(sectors, copies, left.shape[1], copies, right.shape[2]))
     if not np.isfinite(float(np.vdot(pair, pair))):
         message = f"the state holds values that are not finite numbers at bond {bond}"
         raise StateError(message)
@@ -113,49 +115,23 @@ def _gated_pair(state: ChainState, bond: int, gate: Gate) -> Reals:
 
 def _cut_rightwards(state: ChainState, bond: int, gate: Gate, rule: CutRule, ledger: CutLedger) -> None:
     """Gate and cut a bond whose left site is the centre; the centre moves to its right site."""
+    sectors, copies = state.grading.sectors, state.grading.multiplicity
     pair = _gated_pair(state, bond, gate)
-    sectors, copies_left, copies_right, left, right = pair.shape
-    blocks = [
-        pair[charge].transpose(0, 2, 1, 3).reshape(copies_left * left, copies_right * right)
-        for charge in range(sectors)
-    ]
-    old = state.tensors[bond + 1]
-    guess = [
-        old[:, block, :].transpose(1, 0, 2).reshape(-1, copies_right * right)
-        for block in state.sector_slices(bond + 1)
-    ]
-    result = cut(blocks, rule, guess=guess)
+    result = cut(pair, rule, guess=by_left_charge(state.tensors[bond + 1], sectors))
     ledger.enter(bond, result, rule)
-    state.tensors[bond] = np.concatenate(
-        [part.reshape(copies_left, left, -1) for part in result.left], axis=2
-    )
-    state.tensors[bond + 1] = np.concatenate(
-        [part.reshape(-1, copies_right, right).transpose(1, 0, 2) for part in result.right], axis=1
-    )
-    state.bonds[bond + 1] = np.array([len(part) for part in result.right], dtype=np.int64)
+    state.tensors[bond] = from_right_charge(result.left, copies)
+    state.tensors[bond + 1] = from_left_charge(result.right, copies)
+    state.set_size(bond + 1, result.right.shape[1])
     state.centre = bond + 1
 
 
 def _cut_leftwards(state: ChainState, bond: int, gate: Gate, rule: CutRule, ledger: CutLedger) -> None:
     """Gate and cut a bond whose right site is the centre; the centre moves to its left site."""
-    pair = _gated_pair(state, bond, gate)
-    sectors, copies_left, copies_right, left, right = pair.shape
-    blocks = [
-        pair[charge].transpose(1, 3, 0, 2).reshape(copies_right * right, copies_left * left)
-        for charge in range(sectors)
-    ]
-    old = state.tensors[bond]
-    guess = [
-        old[:, :, block].transpose(2, 0, 1).reshape(-1, copies_left * left)
-        for block in state.sector_slices(bond + 1)
-    ]
-    result = cut(blocks, rule, guess=guess)
+    sectors, copies = state.grading.sectors, state.grading.multiplicity
+    mirrored = np.ascontiguousarray(_gated_pair(state, bond, gate).swapaxes(1, 2))
+    result = cut(mirrored, rule, guess=by_right_charge(state.tensors[bond], sectors).swapaxes(1, 2))
     ledger.enter(bond, result, rule)
-    state.tensors[bond + 1] = np.concatenate(
-        [part.reshape(copies_right, right, -1).transpose(0, 2, 1) for part in result.left], axis=1
-    )
-    state.tensors[bond] = np.concatenate(
-        [part.reshape(-1, copies_left, left).transpose(1, 2, 0) for part in result.right], axis=2
-    )
-    state.bonds[bond + 1] = np.array([len(part) for part in result.right], dtype=np.int64)
+    state.tensors[bond + 1] = from_left_charge(result.left.swapaxes(1, 2), copies)
+    state.tensors[bond] = from_right_charge(result.right.swapaxes(1, 2), copies)
+    state.set_size(bond + 1, result.right.shape[1])
     state.centre = bond

@@ -1,4 +1,8 @@
-"""QR decompositions called straight from LAPACK: they dominate small bonds, where every wrapper costs."""
+"""QR decompositions of all charges at once.
+
+Small matrices go through numpy in one call, larger ones one by one straight to LAPACK, which spares numpy's
+copies of them.
+"""
 
 from __future__ import annotations
 
@@ -7,30 +11,36 @@ from scipy.linalg.lapack import dgeqrf, dorgqr
 
 from tnquench.conventions import Reals
 
-#: Columns that LAPACK treats together; sets the size of its workspace.
-BLOCK = 32
+#: Columns from which LAPACK is called directly, and columns that it treats together: sets its workspace.
+DIRECT_FROM, TOGETHER = 24, 32
 
 
-def orthonormal(matrix: Reals) -> Reals:
-    """Return an orthonormal basis (rows, min(rows, columns)) whose leading columns span those of the matrix.
+def orthonormal(matrices: Reals) -> Reals:
+    """Return orthonormal bases (charge, rows, min(rows, columns)) whose leading columns span those of the
+    matrices (charge, rows, columns).
 
     Columns that depend on those before them are completed by arbitrary orthogonal directions.
     """
-    return _decompose(matrix)[0]
+    return _decomposed(matrices)[0]
 
 
-def orthonormal_and_factor(matrix: Reals) -> tuple[Reals, Reals]:
-    """Return the orthonormal basis q (rows, kept) and the triangle r (kept, columns) of matrix = q r."""
-    basis, packed = _decompose(matrix)
-    return basis, np.triu(packed[: basis.shape[1]])
+def orthonormal_and_factor(matrices: Reals) -> tuple[Reals, Reals]:
+    """Return orthonormal bases q (charge, rows, kept) and triangles r (charge, kept, columns) with q r the
+    matrices."""
+    return _decomposed(matrices)
 
 
-def _decompose(matrix: Reals) -> tuple[Reals, Reals]:
-    """Return the basis and LAPACK's packed reflectors, whose upper triangle is the factor."""
-    rows, columns = matrix.shape
+def _decomposed(matrices: Reals) -> tuple[Reals, Reals]:
+    """Return bases and triangles."""
+    charges, rows, columns = matrices.shape
+    if columns < DIRECT_FROM:
+        basis, factor = np.linalg.qr(matrices)
+        return basis, factor
     kept = min(rows, columns)
-    if kept == 0:
-        return np.zeros((rows, 0)), np.zeros((0, columns))
-    packed, reflectors, _, _ = dgeqrf(matrix, lwork=BLOCK * columns)
-    basis, _, _ = dorgqr(packed[:, :kept], reflectors, lwork=BLOCK * kept)
-    return basis, packed
+    bases, factors = np.empty((charges, kept, rows)), np.empty((charges, kept, columns))
+    for charge, matrix in enumerate(matrices):
+        packed, reflectors, _, _ = dgeqrf(matrix, lwork=TOGETHER * columns)
+        factors[charge] = np.triu(packed[:kept])
+        basis, _, _ = dorgqr(packed[:, :kept], reflectors, lwork=TOGETHER * kept, overwrite_a=True)
+        bases[charge] = basis.T
+    return bases.swapaxes(1, 2), factors

@@ -107,6 +107,7 @@ class LayerGates:
         self.groups = groups
         self.qubits_per_site = grading.qubits_per_site
         self.exponential = exponential
+        self.sectors = grading.sectors
         self.swap = swap_gate(grading)
         self.layers: dict[Layer, dict[int, Gate]] = {}
         self.gates: dict[tuple[frozenset[tuple[PauliString, complex]], float], Gate] = {}
@@ -122,7 +123,7 @@ class LayerGates:
             for action in key:
                 for bond in _bonds(self.groups, action):
                     gate = self._gate(action, bond)
-                    gates[bond] = composed(gates[bond], gate) if bond in gates else gate
+                    gates[bond] = composed(gates[bond], gate, sectors=self.sectors) if bond in gates else gate
             self.layers[key] = gates
         return self.layers[key]
 
