@@ -65,7 +65,7 @@ def simulate_with_cuts(
     """
     lost: list[list[float]] = [[]]
 
-    def listening(blocks: list[Reals], rule: CutRule, *, guess: list[Reals] | None = None) -> Cut:
+    def listening(blocks: Reals, rule: CutRule, *, guess: Reals | None = None) -> Cut:
         result = cut(blocks, rule, guess=guess)
         if rule.weight_target == quench.discarded_weight:  # the start is cut by a rule of its own
             assert 0.0 <= result.uncertainty < 1e-14

@@ -14,7 +14,7 @@ from tnquench.hydro.mesh import OBSERVABLES
 from tnquench.hydro.prediction import Prediction, predict_step
 from tnquench.hydro.step import State, Step
 
-SITES, TIME = 6, 2.3
+SITES, TIME = 8, 3.0
 TEMPERATURES: tuple[State, State] = ((0.5, 0.0), (2.0, 0.0))
 WALL: tuple[State, State] = ((0.0, 60.0), (0.0, -60.0))
 
@@ -67,8 +67,8 @@ def test_domain_wall_near_the_isotropic_ferromagnet() -> None:
     """
     anisotropy = -0.98
     edge = np.sqrt(1.0 - anisotropy**2)
-    found = halves(anisotropy, *WALL, time=3.3)
-    sites, bonds = site_positions(SITES) / 3.3, bond_positions(SITES) / 3.3
+    found = halves(anisotropy, *WALL, time=3.9)
+    sites, bonds = site_positions(SITES) / 3.9, bond_positions(SITES) / 3.9
     current = np.where(np.abs(bonds) < edge, 0.25 * edge * (1.0 - (bonds / edge) ** 2), 0.0)
     exact = {"charge_density": np.clip(-0.5 * sites / edge, -0.5, 0.5), "charge_current": current}
     for name, profile in exact.items():
