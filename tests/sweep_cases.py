@@ -55,6 +55,7 @@ if "signal" in step:
     time.sleep(10.0)
 if step.get("code", 0) == 0 and only is None:
     shutil.copy(home / "datasets" / folder.name / "run.h5", folder / "run.h5")
+    (folder / "report.html").touch()
 sys.exit(step.get("code", 0))
 """
 

@@ -93,6 +93,7 @@ def test_the_index_can_be_read_and_spares_reading_datasets(tmp_path, monkeypatch
 def test_the_index_has_the_numbers_of_the_dataset(tmp_path):
     (point, *_) = load_sweep(four_points(tmp_path)).points
     write_dataset(tmp_path / "p", point, whole=True)
+    (tmp_path / "p" / "report.html").touch()
     numbers = standing(point, tmp_path / "p", known=None, queued=False).numbers
     budget = open_run(tmp_path / "p").budget
     assert numbers["largest_numerical_error"] == max(float(each.numerical.max()) for each in budget.values())

@@ -308,3 +308,12 @@ def test_processes_stop_with_checkpoints_and_go_on(tmp_path: Path) -> None:
         record = side.companions[name]
         assert isinstance(record, QuantumRecord)
         assert_same(replace(simulate(quench), last_state=None), record)
+
+
+def test_a_start_is_shared_only_where_no_ceiling_would_have_bound_on_the_way() -> None:
+    """Attempts that are thrown away may need more than the one that is kept."""
+    start = start_of_quench(replace(free_quench(8), samples=1))
+    on_the_way = replace(start, facts=replace(start.facts, largest_bond=99))
+    assert on_the_way.serves(99)
+    assert not on_the_way.serves(98)
+    assert not replace(start, facts=replace(start.facts, bound=True)).serves(10**6)

@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import hashlib
+import os
 import shutil
 import time
 from collections.abc import Callable, Iterable, Mapping
@@ -26,7 +27,7 @@ CHECKPOINTS, CONFIG_NAME = "checkpoints", "config.toml"
 LARGEST_SHARE, LEAST_INTERVAL = 0.03, 30.0
 
 #: A changed layout of the content makes old checkpoints another quench's.
-FORMAT = 1
+FORMAT = 2
 
 
 @dataclass(frozen=True)
@@ -43,9 +44,9 @@ class Store:
         """Return the file of a quench of this name."""
         return self.folder / f"{name}-{fingerprint(quench)}.h5"
 
-    def start_path(self, quench: Quench) -> Path:
-        """Return the file of the finished start of a quench."""
-        return self.folder / f"start-{start_fingerprint(quench)}.h5"
+    def start_path(self, name: str, quench: Quench) -> Path:
+        """Return the file of the finished start of a quench: one a name, so that none has two writers."""
+        return self.folder / f"start-{start_fingerprint(quench)}-{name}.h5"
 
     def header(self, name: str, quench: Quench) -> dict[str, Any] | None:
         """Return what is known of a quench that is kept, None if it is not."""
@@ -63,10 +64,13 @@ class Store:
         return f"goes on from t = {header['time']:.4g}"
 
     def belongs_to(self, config: Config) -> None:
-        """Note the config that the checkpoints belong to."""
-        partial = self.folder / f".{CONFIG_NAME}.partial"
-        partial.write_text(effective_toml(config), encoding="utf-8")
-        partial.replace(self.folder / CONFIG_NAME)
+        """Note the config that the checkpoints belong to; several processes may do so at once."""
+        kept, text = self.folder / CONFIG_NAME, effective_toml(config)
+        if kept.exists() and kept.read_text(encoding="utf-8") == text:
+            return
+        partial = kept.with_name(f".{CONFIG_NAME}.{os.getpid()}.partial")
+        partial.write_text(text, encoding="utf-8")
+        partial.replace(kept)
 
     def tidy(self, quenches: Mapping[str, Quench]) -> None:
         """Remove all but the newest checkpoints of these finished quenches."""
@@ -82,7 +86,7 @@ class QuenchKeeper:
     def __init__(self, store: Store, name: str, quench: Quench, stop: Stop) -> None:
         self.stop = stop
         self.interval = store.interval
-        self.path, self.start_path = store.path(name, quench), store.start_path(quench)
+        self.path, self.start_path = store.path(name, quench), store.start_path(name, quench)
         self.header = {
             "quench": name,
             "fingerprint": fingerprint(quench),
@@ -111,18 +115,18 @@ class QuenchKeeper:
         self.layer_seconds = max(self.layer_seconds, now - self.last_layer)
         why = self.stop.reason(layer_seconds=self.layer_seconds, checkpoint_seconds=self.save_seconds)
         if why or now - self.saved >= max(self.interval, self.save_seconds / LARGEST_SHARE):
-            self._save(header, content(), finished=False)
+            self._save(header, content, finished=False)
         self.last_layer = time.monotonic()
         if why:
             raise Stopped(why)
 
     def save(self, header: Mapping[str, Any], content: Content) -> None:
         """Save the content of the finished quench."""
-        self._save(header, content, finished=True)
+        self._save(header, lambda: content, finished=True)
 
-    def _save(self, header: Mapping[str, Any], content: Content, *, finished: bool) -> None:
+    def _save(self, header: Mapping[str, Any], content: Callable[[], Content], *, finished: bool) -> None:
         began = time.monotonic()
-        save_checkpoint(self.path, {**content, "header": {**self.header, **header, "finished": finished}})
+        save_checkpoint(self.path, {**content(), "header": {**self.header, **header, "finished": finished}})
         self.saved = time.monotonic()
         self.save_seconds = max(self.save_seconds, self.saved - began)
 

@@ -165,7 +165,7 @@ def simulate_all(
 
 def _start_wanted(store: Store | None, quench: Quench) -> bool:
     """Whether a run may still need its main quench's start, and can have it without spoiling what is kept."""
-    if store is None or store.start_path(quench).exists():
+    if store is None or store.start_path(MAIN, quench).exists():
         return True
     header = store.header(MAIN, quench)
     return header is None or header["stage"] == "start"

@@ -12,7 +12,7 @@ from threadpoolctl import threadpool_limits
 from tnquench.assemble import build_prediction, build_quench
 from tnquench.budget.companions import SHORT, WITHOUT
 from tnquench.budget.pilot import Forecast, forecast_quench
-from tnquench.checkpoints import open_store
+from tnquench.checkpoints import open_store, require_reachable
 from tnquench.config.load import load_config
 from tnquench.config.schema import Config
 from tnquench.config.sweep import refuse_sweep
@@ -78,8 +78,8 @@ def run(
     for place in (folder, *(folder / stretched_folder(factor) for factor in factors)):
         require_writable(place)
     with folder_lock(folder), threadpool_limits(1):
-        require_no_lone_quench(folder)
         for place in (folder, *(folder / stretched_folder(factor) for factor in factors)):
+            require_no_lone_quench(place)
             clear_leftovers(place)
         pieces = judged_run(config, config_file, folder, threads=threads, watch=watch, how=how)
         write_run(folder, **pieces.as_arguments())
@@ -115,6 +115,9 @@ def run_one(
     config = load_config(config_file, allow_outside=allow_outside)
     refuse_sweep(config.sweep, str(config_file))
     top = into or DEFAULT_FOLDER / config_file.stem
+    if how.fresh:
+        problem = "--fresh is for whole runs: delete the checkpoints of this quench in place of it"
+        raise InputError(str(config_file), [problem])
     if config.evolution.accuracy is not None:
         problem = "--only needs [evolution] discarded_weight: with accuracy the whole run chooses it"
         raise InputError(str(config_file), [problem])
@@ -132,18 +135,17 @@ def run_one(
             str(config_file), [f'--only "{name}": no such quench; there are {", ".join(quenches)}']
         )
     own, quench, config, folder = quenches[name]
-    if (holder := lock_holder(top)) is not None:
-        problem = (
-            f"a whole run is under way here (process {holder.pid} on {holder.host}, since {holder.since})"
-        )
-        raise InputError(str(top), [problem])
     require_writable(folder)
     with folder_lock(folder, name=f"{LONE_LOCK}{own}"), threadpool_limits(1):
+        if (holder := lock_holder(top)) is not None:  # looked at under our own lock, which a run looks at
+            problem = f"a whole run is under way here: process {holder.pid} on {holder.host}"
+            raise InputError(str(top), [problem])
         store = open_store(folder, config, interval=how.checkpoint_every, fresh=False)
+        require_reachable(store, {own: quench})
         watch.stage(stage_name(store, own, name, quench), quench)
         task = Task(own, quench, store=store)
         main = Task(MAIN, all_quenches(config)[MAIN], store=store)
-        if own not in (MAIN, SHORT) and store.start_path(main.quench).exists():
+        if own not in (MAIN, SHORT) and store.start_path(MAIN, main.quench).exists():
             task = task.with_start(start_of_task(main, how.stop))
         carry_out(task, how.stop, watch.progress)
     return folder
@@ -181,7 +183,7 @@ def judged_run(
         "cpu_seconds": time.process_time() - cpu + quantum.cpu_elsewhere,
     }
     pieces.provenance.update(spent)
-    if not quantum.failures:
+    if not quantum.failures and config.evolution.accuracy is None:  # else earlier repeats are met again
         store.tidy({MAIN: quantum.quench, **quantum.companion_quenches})
     return pieces
 

@@ -135,6 +135,8 @@ def fetched(task: Task, running: Background, stop: Stop) -> QuantumRecord:
     try:
         return _awaited(running.pending[task.name], stop)
     except BrokenProcessPool:
+        if running.pool is not None:
+            running.pool.shutdown(wait=True)  # what is left of it may still work on this very task
         with background(stop, workers=1) as again:
             again.begin(task)
             return _awaited(again.pending[task.name], stop)

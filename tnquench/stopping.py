@@ -1,7 +1,7 @@
 """When a run must end before its time: a time or memory limit, a signal of the batch system, Ctrl-C.
 
 A quench that is kept ends between two layers of gates, with a checkpoint. Whatever else a run does is short
-and done again, so it ends at once. A second request kills the process and its children.
+and done again, so it ends at once. A second Ctrl-C kills the process and its children.
 """
 
 from __future__ import annotations

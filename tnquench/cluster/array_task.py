@@ -13,11 +13,11 @@ from pathlib import Path
 
 from tnquench.cluster.attempt import answering, attempt
 from tnquench.cluster.slurm import read_task, requeue
-from tnquench.cluster.status import times_reached
+from tnquench.cluster.status import checkpoint_marks
 from tnquench.cluster.tasks import DONE, FAILED, STOPPED, Ending, Task
 
 #: A task that took this share of its own limit was stopped by it.
-NEARLY_ALL = 0.8
+NEARLY_ALL = 0.5
 
 
 def main() -> None:
@@ -26,7 +26,7 @@ def main() -> None:
     task, goes_back = read_task(Path(sys.argv[1]), index)
     if task is None:  # a point without this quench
         sys.exit(DONE)
-    before, signals = times_reached(task.folder), list[int]()
+    before, signals = checkpoint_marks(task.folder), list[int]()
     with answering(signals):
         ending = attempt(task, signals)
     if ending.code == STOPPED and goes_back:
@@ -36,15 +36,14 @@ def main() -> None:
     sys.exit(ending.code if ending.code >= DONE else FAILED)
 
 
-def _why_not(task: Task, ending: Ending, signals: list[int], *, before: Mapping[str, float]) -> str:
+def _why_not(task: Task, ending: Ending, signals: list[int], *, before: Mapping[str, tuple[int, int]]) -> str:
     """Return why a stopped task does not go back into the queue; nothing if it does."""
     if {signal.SIGTERM, signal.SIGINT} & set(signals):
         return "cancelled, or put back by Slurm itself"
     limit = task.limits.walltime
     if signal.SIGUSR1 not in signals and (limit is None or ending.seconds < NEARLY_ALL * limit):
         return "and not by its time limit; see its log"
-    now = times_reached(task.folder)
-    if any(now.values()) and now == before:
+    if checkpoint_marks(task.folder) == before:
         return "without having come on at all; give it more time"
     return ""
 

@@ -14,7 +14,7 @@ from types import FrameType
 
 from tnquench.cluster.log import begin_mark, end_mark
 from tnquench.cluster.occupied import occupant
-from tnquench.cluster.tasks import Ending, Task
+from tnquench.cluster.tasks import INTERRUPTED, Ending, Task
 from tnquench.errors import InputError
 
 GUARD = Path(__file__).with_name("guard.py")
@@ -38,7 +38,7 @@ class Attempt:
 
     def __init__(self, task: Task) -> None:
         self.task = task
-        self.began = time.monotonic()
+        self.began, self.killed = time.monotonic(), False
         with _refusing(task.log):
             self._log = task.log.open("ab", buffering=0)
             self._log.write(begin_mark(task.name).encode())
@@ -58,6 +58,7 @@ class Attempt:
         except subprocess.TimeoutExpired:
             return None
         seconds = time.monotonic() - self.began
+        code = INTERRUPTED if self.killed else code
         if not self._log.closed:
             with suppress(OSError):  # a full disk, a vanished folder: the exit code tells as well
                 self._log.write(end_mark(code, seconds).encode())
@@ -70,7 +71,8 @@ class Attempt:
             self._process.send_signal(number)
 
     def kill(self) -> None:
-        """End the process and its companions at once."""
+        """End the process and its companions at once, as the user wishes: no failure."""
+        self.killed = True
         if self._process.poll() is None:
             os.killpg(self._process.pid, signal.SIGKILL)
 

@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 from collections.abc import Iterable, Mapping
+from contextlib import suppress
 from dataclasses import dataclass, field
 from pathlib import Path
 from signal import SIGINT, SIGTERM, SIGUSR1
@@ -27,6 +28,7 @@ from tnquench.dataset.checkpoint import read_header
 from tnquench.dataset.reader import Run, open_run
 from tnquench.dataset.variables import FILE_NAME
 from tnquench.errors import InputError
+from tnquench.report.page import REPORT_NAME
 
 CHECKPOINTS = "checkpoints"
 
@@ -71,6 +73,8 @@ def standing(point: Point, folder: Path, *, known: Mapping[str, Any] | None, que
     if known is not None:
         return Standing(point.name, folder, "done", until, until, numbers=known)
     found = _dataset(point.config, folder)
+    if isinstance(found, Run) and not (folder / REPORT_NAME).exists():
+        found = ""  # stopped between dataset and report
     if isinstance(found, Run):
         return Standing(point.name, folder, "done", until, until, numbers=headline(found))
     times = times_reached(folder)
@@ -121,6 +125,16 @@ def times_reached(folder: Path) -> dict[str, float]:
             name = str(header["quench"])
             newest[name] = max(newest.get(name, (0.0, 0.0)), (written, float(header["time"])))
     return {name: time for name, (_, time) in newest.items()}
+
+
+def checkpoint_marks(folder: Path) -> dict[str, tuple[int, int]]:
+    """Return size and date of every checkpoint of a run and its stretched runs: they tell if it comes on."""
+    marks = {}
+    for file in folder.glob(f"**/{CHECKPOINTS}/*.h5"):
+        with suppress(OSError):  # replaced at this very moment
+            found = file.stat()
+            marks[str(file.relative_to(folder))] = (found.st_size, found.st_mtime_ns)
+    return marks
 
 
 def _dataset(config: Config, folder: Path) -> Run | str:

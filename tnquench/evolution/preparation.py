@@ -63,6 +63,7 @@ class Preparation:
     steps : imaginary-time steps taken; cuts : ledger of the final preparation
     log_partition_function : logarithm of Tr exp(-K)
     reached : whether the distance is under the one asked for
+    largest_bond, bound : largest bond dimension on the way, and whether the bond ceiling has bound any cut
     """
 
     state: ChainState
@@ -73,6 +74,8 @@ class Preparation:
     cuts: CutLedger
     log_partition_function: float
     reached: bool
+    largest_bond: int
+    bound: bool
 
 
 @dataclass
@@ -83,6 +86,8 @@ class Attempt:
     state, ledger : the chain so far, and what its cuts have cost in this attempt
     coarser : the state of the attempt before, None in the first; previous : distance of the two before
     (infinite until there are two); in_vain : refinements in a row that have not halved the distance
+    largest_bond, bound : largest bond dimension after any layer of all attempts so far, and whether the bond
+    ceiling has bound any cut
     """
 
     steps: int
@@ -93,6 +98,8 @@ class Attempt:
     coarser: ChainState | None = None
     previous: float = float("inf")
     in_vain: int = 0
+    largest_bond: int = 1
+    bound: bool = False
 
 
 def prepare(
@@ -143,7 +150,14 @@ def _refined(attempt: Attempt, rule: CutRule, distance_target: float) -> Attempt
     expected = 0.0 if attempt.previous == float("inf") else LIMIT_SHARE**2 * attempt.previous
     tighter = _tightened(rule, attempt.state, attempt.ledger, goal=max(distance_target, expected))
     begun = _begun(2 * attempt.steps, tighter.weight_target, attempt.state.sites, attempt.state.grading)
-    return replace(begun, coarser=attempt.state, previous=attempt.previous, in_vain=attempt.in_vain)
+    return replace(
+        begun,
+        coarser=attempt.state,
+        previous=attempt.previous,
+        in_vain=attempt.in_vain,
+        largest_bond=attempt.largest_bond,
+        bound=attempt.bound,
+    )
 
 
 def _hopeless(attempt: Attempt, step_error: float, cut_error: float, *, most_steps: int) -> bool:
@@ -167,6 +181,8 @@ def _prepared(attempt: Attempt, apart: float, error: float, distance_target: flo
         cuts=ledger,
         log_partition_function=2.0 * ledger.log_norm + state.sites * state.grading.qubits_per_site * log(2.0),
         reached=error <= distance_target,
+        largest_bond=attempt.largest_bond,
+        bound=attempt.bound,
     )
 
 
@@ -225,5 +241,7 @@ def _finish(
     for layer in plan(groups, SCHEME, attempt.steps)[attempt.layers :]:
         apply_layer(attempt.state, gates.of(layer), rule, attempt.ledger)
         attempt.layers += 1
+        attempt.largest_bond = max(attempt.largest_bond, int(attempt.state.bond_dimensions.max(initial=1)))
+        attempt.bound = attempt.bound or bool(attempt.ledger.ceiling_cuts.any())
         if after_layer is not None:
             after_layer(attempt)

@@ -34,6 +34,8 @@ def of_attempt(attempt: Attempt, rule: CutRule) -> Content:
         "coarser": None if attempt.coarser is None else _of_state(attempt.coarser),
         "previous": attempt.previous,
         "in_vain": attempt.in_vain,
+        "largest_bond": attempt.largest_bond,
+        "bound": attempt.bound,
         "random": _of_random(rule),
     }
 
@@ -50,6 +52,8 @@ def to_attempt(content: Content, grading: Grading, rule: CutRule) -> Attempt:
         coarser=None if content["coarser"] is None else _to_state(content["coarser"], grading),
         previous=content["previous"],
         in_vain=content["in_vain"],
+        largest_bond=content["largest_bond"],
+        bound=content["bound"],
     )
 
 

@@ -26,7 +26,7 @@ class StartFacts:
 
     distance : estimated norm of its error, asked : the one allowed; error : of each observable
     steps : imaginary-time steps; log_partition_function : logarithm of Tr exp(-K)
-    free_of_ceiling : no cut was bound by the bond ceiling
+    largest_bond : largest bond dimension on the way to it; bound : the bond ceiling has bound some cut there
     """
 
     distance: float
@@ -34,7 +34,8 @@ class StartFacts:
     error: dict[str, float]
     steps: int
     log_partition_function: float
-    free_of_ceiling: bool
+    largest_bond: int
+    bound: bool
 
     def events(self) -> list[dict[str, object]]:
         """Return the event of a start that is not as near to the exact one as asked."""
@@ -53,8 +54,7 @@ class Start:
 
     def serves(self, bond_ceiling: int) -> bool:
         """Whether a run with this ceiling would prepare the same state, all else being equal."""
-        largest = int(self.state.bond_dimensions.max(initial=1))
-        return self.facts.free_of_ceiling and largest <= bond_ceiling
+        return not self.facts.bound and self.facts.largest_bond <= bond_ceiling
 
 
 def prepare_start(
@@ -89,7 +89,8 @@ def prepare_start(
             error=_start_error(meter, found),
             steps=found.steps,
             log_partition_function=found.log_partition_function,
-            free_of_ceiling=not found.cuts.ceiling_cuts.any(),
+            largest_bond=found.largest_bond,
+            bound=found.bound,
         ),
     )
 

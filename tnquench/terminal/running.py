@@ -4,18 +4,23 @@ from __future__ import annotations
 
 from collections.abc import Callable, Iterator
 from contextlib import contextmanager
+from pathlib import Path
 from typing import Annotated, Any
 
+import psutil
 import typer
 
 from tnquench.config.cluster import parse_duration, parse_memory
 from tnquench.config.load import load_config
-from tnquench.errors import Stopped
+from tnquench.errors import InputError, Stopped
 from tnquench.run import Continuation, run, run_one
-from tnquench.stopping import Limits, Stop, answering_signals
+from tnquench.stopping import Limits, Stop, answering_signals, resident_bytes
 from tnquench.terminal.display import watching
 from tnquench.terminal.options import AllowOutside, ConfigFile, Into, Threads, usable_cores
 from tnquench.terminal.summary import show_findings
+
+#: What a run of the smallest chain takes beyond the program itself, in bytes.
+LEAST_MEMORY = 50_000_000
 
 
 def _limit(parse: Callable[[str], float]) -> Callable[[str], float]:
@@ -75,6 +80,7 @@ def run_command(
         seconds=cluster.walltime_seconds if walltime is None else walltime,
         memory=cluster.memory_bytes if memory is None else memory,
     )
+    require_room(limits, config)
     with stoppable(limits) as stop, watching() as watch:
         how = Continuation(stop=stop, checkpoint_every=checkpoint_every, fresh=fresh)
         if only is not None:
@@ -93,6 +99,15 @@ def run_command(
     if only is None:
         show_findings(folder)
     typer.echo(str(folder))
+
+
+def require_room(limits: Limits, config: Path) -> None:
+    """Raise InputError for a memory limit that the program alone exceeds, so that no run could ever end."""
+    taken = resident_bytes(psutil.Process())
+    if limits.memory is not None and limits.memory < taken + LEAST_MEMORY:
+        needed = (taken + LEAST_MEMORY) / 1e6
+        problem = f"memory limit of {limits.memory / 1e6:.0f} MB: the program alone takes {needed:.0f} MB"
+        raise InputError(str(config), [f"{problem}; give more, tnquench forecast says how much"])
 
 
 @contextmanager

@@ -103,7 +103,8 @@ def sweep_command(
         "memory": memory, "scheduler": scheduler, "partition": partition, "account": account,
     }  # fmt: skip
     cluster = with_options(loaded.cluster, options, subject=str(config))
-    sweep = SweepRun(loaded.points, into or DEFAULT_FOLDER / config.stem, cluster, _usable(setup, cluster))
+    folder = (into or DEFAULT_FOLDER / config.stem).absolute()  # tasks may begin elsewhere
+    sweep = SweepRun(loaded.points, folder, cluster, _usable(setup, cluster))
     standings = sweep.standings()
     if not status and (missing := sweep.missing(standings, retry=retry)):
         sweep.carry_out(missing, tell=lambda line: typer.echo(line, err=True))
