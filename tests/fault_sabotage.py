@@ -13,7 +13,7 @@ import signal
 import sys
 import time
 from collections.abc import Callable, Mapping
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 from itertools import count
 from pathlib import Path
 from typing import Any, ClassVar
@@ -168,6 +168,5 @@ class SpoiledGates(AtLayers):
             return gates
         spoiled = {}
         for bond, gate in gates.items():
-            blocks = tuple(None if block is None else block * self.factor for block in gate.blocks)
-            spoiled[bond] = type(gate)(blocks)
+            spoiled[bond] = replace(gate, blocks=gate.blocks * self.factor)
         return spoiled

@@ -67,7 +67,7 @@ def load_checkpoint(path: Path) -> dict[str, Any] | None:
             problems.append(f"{file.name}: cannot be read: {error.strerror or error}")
     if not problems:
         return None
-    advice = "no generation is sound: delete these files, and this part of the run starts afresh"
+    advice = "no generation is sound: delete these files to start this part afresh, or --fresh for all"
     raise InputError(str(path), [*problems, advice], consequence="nothing was continued")
 
 
