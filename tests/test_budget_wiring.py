@@ -9,6 +9,7 @@ import numpy as np
 import pytest
 
 from tests.budget_cases import (
+    CARRIED_ERROR,
     CUTS,
     END_NOISE,
     LOOSE_NOISE,
@@ -19,7 +20,6 @@ from tests.budget_cases import (
     SAMPLES,
     SETTINGS,
     SHORTER,
-    START_ERROR,
     STEP_NOISE,
     Perturb,
     companions,
@@ -73,10 +73,10 @@ def test_each_companion_feeds_its_own_source(
         if source != "none":
             assert np.all(claim(name)[1:].max(axis=1) > 1e-6), name
             np.testing.assert_allclose(row(budget, source), claim(name), rtol=1e-12, err_msg=name)
-        np.testing.assert_allclose(row(budget, "preparation"), START_ERROR[name], rtol=1e-14)
+        np.testing.assert_allclose(row(budget, "preparation"), CARRIED_ERROR[name], rtol=1e-14)
         rounding = ROUNDING * NORMS[name] * (1.0 + CUTS)[:, None] * np.ones_like(budget.numerical)
         np.testing.assert_allclose(row(budget, "arithmetic"), rounding, rtol=1e-12)
-        known = claim(name) + START_ERROR[name] + rounding
+        known = claim(name) + CARRIED_ERROR[name] + rounding
         np.testing.assert_allclose(budget.numerical, known, rtol=1e-12, err_msg=name)
 
 

@@ -63,7 +63,9 @@ def quantum_sources(
     """
     values, norm = main.fields[name], main.norms[name]
     found = {
-        "preparation": sources.preparation(start_error=main.start_error[name], shape=values.shape),
+        "preparation": sources.preparation(
+            name, start_error=main.start_error, norms=main.norms, shape=values.shape
+        ),
         "arithmetic": sources.arithmetic(cuts=main.cuts, norm=norm, shape=values.shape),
     }
     if not companions:

@@ -52,15 +52,19 @@ CUTS_PART, MOST_TIGHTENING, TIGHTEST_WEIGHT = 0.35, 1e4, 1e-22
 TIGHTENING_AT_FLOOR = 100.0
 
 
+#: The state that tells what cuts do to observables may lose so many times more a cut, but no more than this.
+LOOSENING, LOOSEST_WEIGHT = 100.0, 1e-3
+
+
 @dataclass(frozen=True)
 class Preparation:
     """The start and what is known of it.
 
     state : unit vector proportional to exp(-K/2); coarser : the same, one refinement earlier
-    error_share : estimated error of the state as a fraction of its difference from the coarser one
+    step_share : estimated error of the state's step as a fraction of its difference from the coarser one
     distance : estimated norm of its difference from the exact start; an expectation value moves by at most
                2 distance times the operator's norm, now and at any later time
-    steps : imaginary-time steps taken; cuts : ledger of the final preparation
+    steps : imaginary-time steps taken; weight_target, cuts : of the final preparation, and its ledger
     log_partition_function : logarithm of Tr exp(-K)
     reached : whether the distance is under the one asked for
     largest_bond, bound : largest bond dimension on the way, and whether the bond ceiling has bound any cut
@@ -68,9 +72,10 @@ class Preparation:
 
     state: ChainState
     coarser: ChainState
-    error_share: float
+    step_share: float
     distance: float
     steps: int
+    weight_target: float
     cuts: CutLedger
     log_partition_function: float
     reached: bool
@@ -135,7 +140,7 @@ def prepare(
             if step_error + cut_error <= distance_target or _hopeless(
                 attempt, step_error, cut_error, most_steps=at_first * 2**MOST_REFINEMENTS
             ):
-                return _prepared(attempt, apart, step_error + cut_error, distance_target)
+                return _prepared(attempt, apart, step_error, cut_error, distance_target)
             attempt.previous = max(apart, NEGLIGIBLE)
         attempt = _refined(attempt, rule, distance_target)
 
@@ -168,16 +173,38 @@ def _hopeless(attempt: Attempt, step_error: float, cut_error: float, *, most_ste
     return hopeless
 
 
-def _prepared(attempt: Attempt, apart: float, error: float, distance_target: float) -> Preparation:
-    """Return the finished preparation; apart : distance of its last two states, error : that of the last."""
+def loosely_cut(
+    terms: Sequence[Operator], start: Preparation, *, rule: CutRule
+) -> tuple[ChainState, CutLedger]:
+    """Return the coarser state of a preparation once more, with cuts that lose far more, and their ledger.
+
+    rule : the one with which the preparation began; floor and ceiling are halved, as they may bind
+    """
+    looser = replace(
+        rule,
+        weight_target=min(LOOSENING * start.weight_target, LOOSEST_WEIGHT),
+        bond_floor=max(1, rule.bond_floor // 2),
+        bond_ceiling=max(1, rule.bond_ceiling // 2),
+    )
+    attempt = _begun(start.steps // 2, looser.weight_target, start.state.sites, start.state.grading)
+    _finish(attempt, terms, looser, None)
+    return attempt.state, attempt.ledger
+
+
+def _prepared(
+    attempt: Attempt, apart: float, step_error: float, cut_error: float, distance_target: float
+) -> Preparation:
+    """Return the finished preparation; apart : distance of its last two states; errors : of the last."""
     state, ledger, coarser = attempt.state, attempt.ledger, attempt.coarser
+    error = step_error + cut_error
     assert coarser is not None, "a start is judged by the one before"
     return Preparation(
         state=state,
         coarser=coarser,
-        error_share=error / apart if apart > 0.0 else 1.0,
+        step_share=step_error / apart if apart > 0.0 else 1.0,
         distance=error,
         steps=attempt.steps,
+        weight_target=attempt.weight_target,
         cuts=ledger,
         log_partition_function=2.0 * ledger.log_norm + state.sites * state.grading.qubits_per_site * log(2.0),
         reached=error <= distance_target,

@@ -4,20 +4,22 @@ from __future__ import annotations
 
 from collections.abc import Callable, Sequence
 from dataclasses import dataclass
+from math import sqrt
 
 import numpy as np
 
 from tnquench.conventions import CURRENTS
 from tnquench.evolution.chain_state import ChainState
 from tnquench.evolution.cutting import CutRule
-from tnquench.evolution.preparation import Attempt, Preparation, prepare
+from tnquench.evolution.preparation import Attempt, Preparation, loosely_cut, prepare
 from tnquench.model.grading import Grading
 from tnquench.model.pauli import Operator
 from tnquench.observables.local import LocalObservables
 
-#: The two states whose difference measures the start's error share part of their cuts: for loosely prepared
-#: Hubbard starts the difference was found up to 1.5 times too small.
-START_SAFETY = 3.0
+#: What the cuts have done to an observable, in units of what looser ones do times the root of the ratio of
+#: the lost weights. States cut at two weights share part of their errors: for loosely prepared Hubbard starts
+#: (distance 1e-3) the product alone was found 5 to 8 times too small.
+CUT_SAFETY = 8.0
 
 
 @dataclass(frozen=True)
@@ -86,7 +88,7 @@ def prepare_start(
         StartFacts(
             distance=found.distance,
             asked=distance_target,
-            error=_start_error(meter, found),
+            error=_start_error(meter, found, terms, rule),
             steps=found.steps,
             log_partition_function=found.log_partition_function,
             largest_bond=found.largest_bond,
@@ -95,16 +97,23 @@ def prepare_start(
     )
 
 
-def _start_error(meter: LocalObservables, start: Preparation) -> dict[str, float]:
-    """Estimate each observable's error in the start from the state one refinement earlier.
+def _start_error(
+    meter: LocalObservables, start: Preparation, terms: Sequence[Operator], rule: CutRule
+) -> dict[str, float]:
+    """Estimate each observable's error in the start, its step and its cuts apart.
 
+    The step's follows from the state with the step doubled. Its cuts are measured by cutting that state more:
+    an error falls with the lost weight at least like its root.
     A current vanishes at t = 0 by symmetry but inherits the error of its density later, so both share the
     larger one; what no current carries stands alone.
     """
-    fine, _ = meter.measure(start.state)
-    coarse, _ = meter.measure(start.coarser)
+    looser, ledger = loosely_cut(terms, start, rule=rule)
+    fine, coarse, loose = (meter.measure(state)[0] for state in (start.state, start.coarser, looser))
+    lost, more = (float(cuts.discarded_weight.sum()) for cuts in (start.cuts, ledger))
+    cut_share = CUT_SAFETY * sqrt(min(1.0, lost / more)) if more > 0.0 else 0.0
     change = {
-        name: START_SAFETY * start.error_share * float(np.abs(fine[name] - coarse[name]).max())
+        name: start.step_share * float(np.abs(fine[name] - coarse[name]).max())
+        + cut_share * float(np.abs(loose[name] - coarse[name]).max())
         for name in fine
     }
     pairs = [pair for pair in CURRENTS.items() if change.keys() >= set(pair)]
