@@ -204,7 +204,7 @@ def test_a_refusing_file_system_is_quoted(tmp_path, monkeypatch):
     def refuse(*_: object) -> io.BytesIO:
         raise PermissionError(13, "Permission denied")
 
-    monkeypatch.setattr(Path, "open", refuse)
+    monkeypatch.setattr("tnquench.config.file_text._never_waiting", refuse)
     with pytest.raises(InputError, match=r"cannot be read \(permission denied\)"):
         load_config(path)
 

@@ -19,6 +19,9 @@ from tnquench.cluster.tasks import DONE, FAILED, STOPPED, Ending, Task
 #: A task that took this share of its own limit was stopped by it.
 NEARLY_ALL = 0.5
 
+#: How often a task may go back that has kept nothing at all yet.
+MOST_IN_VAIN = 3
+
 
 def main() -> None:
     """Carry out the task of this job's place in its array and exit with its code."""
@@ -43,7 +46,8 @@ def _why_not(task: Task, ending: Ending, signals: list[int], *, before: Mapping[
     limit = task.limits.walltime
     if signal.SIGUSR1 not in signals and (limit is None or ending.seconds < NEARLY_ALL * limit):
         return "and not by its time limit; see its log"
-    if checkpoint_marks(task.folder) == before:
+    now, restarts = checkpoint_marks(task.folder), int(os.environ.get("SLURM_RESTART_COUNT", "0"))
+    if now == before and (now or restarts >= MOST_IN_VAIN):
         return "without having come on at all; give it more time"
     return ""
 
