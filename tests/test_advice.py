@@ -190,7 +190,7 @@ def test_a_former_main_run_is_not_trusted_where_its_floor_hides_the_cuts() -> No
     blind = judge(runs)["energy_density"]
     settings = replace(SETTINGS, unloosened=frozenset({LOOSE}))
     aware = judge(runs, settings=settings)["energy_density"]
-    assert row(blind, "truncation").max() == 0.0
+    assert np.all(row(blind, "truncation")[1:] < 0.7 * row(aware, "truncation")[1:])
     assert np.all(row(aware, "truncation")[1:] > 1e-6)
 
 
