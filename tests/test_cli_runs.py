@@ -212,6 +212,22 @@ def test_interrupted_run_leaves_a_checkpoint(tmp_path: Path, sign: signal.Signal
     assert group_is_gone(process.pid), "a companion goes on behind our back"
 
 
+@pytest.mark.parametrize("sign", [signal.SIGTERM, signal.SIGUSR1])
+def test_a_run_asked_again_and_again_ends_as_asked_once(tmp_path: Path, sign: signal.Signals) -> None:
+    """Slurm asks every process of a job, and our own parent passes it on."""
+    file = config_file(tmp_path, until=500.0, discarded_weight=1e-14)
+    process = start("run", file, "--into", tmp_path / "results", "--threads", 1)
+    assert process.stderr is not None
+    assert any(line.startswith("main run") for line in process.stderr)
+    deadline = time.monotonic() + 20
+    while process.poll() is None and time.monotonic() < deadline:
+        process.send_signal(sign)
+        time.sleep(0.002)
+    _, err = process.communicate(timeout=20)
+    assert process.returncode == 3, err
+    assert err.startswith("tnquench: stopped, asked to end")
+
+
 def group_is_gone(group: int) -> bool:
     """Whether every process of a group ends within a few seconds."""
     for _ in range(50):

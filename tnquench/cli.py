@@ -15,7 +15,7 @@ from errno import EACCES, EDQUOT, EEXIST, EFBIG, EIO, EISDIR, ENOENT, ENOSPC, EN
 from importlib.metadata import PackageNotFoundError, version
 from multiprocessing import active_children
 from pathlib import Path
-from signal import SIGTERM, default_int_handler, signal
+from signal import SIG_IGN, SIGTERM, SIGUSR1, default_int_handler, signal
 from typing import Annotated, Any
 
 import typer
@@ -274,6 +274,9 @@ def main(arguments: Sequence[str] | None = None) -> None:
         if debug:
             traceback.print_exc()
         code, message = answer(error)
+    if arguments is None:
+        signal(SIGTERM, SIG_IGN)  # the code is settled; asked again, the process still ends with it
+        signal(SIGUSR1, SIG_IGN)
     for worker in set(active_children()) - others:  # companions whose results nobody will fetch
         worker.terminate()
     if message:

@@ -28,6 +28,9 @@ SIGNALS = {
     signal.SIGALRM: "the time limit is near",
 }
 
+#: Those of them that a batch system sends.
+SCHEDULERS = (signal.SIGTERM, signal.SIGUSR1)
+
 #: A quench ends so many of its slowest layers and checkpoints, and seconds, before the time limit.
 LAYERS_AHEAD, CHECKPOINTS_AHEAD, SECONDS_AHEAD = 2.0, 2.0, 0.5
 
@@ -121,7 +124,8 @@ def resident_bytes(process: psutil.Process) -> int:
 def answering_signals(limits: Limits) -> Iterator[Stop]:
     """Yield a stop that the signals of a batch system, Ctrl-C and the time limit ask within the block.
 
-    Only a process's main thread can answer signals; elsewhere the limits alone count.
+    Only a process's main thread can answer signals; elsewhere the limits alone count. After a stop that was
+    asked for, further requests of a batch system are ignored.
     """
     stop = Stop(limits)
     if threading.current_thread() is not threading.main_thread():
@@ -142,14 +146,20 @@ def answering_signals(limits: Limits) -> Iterator[Stop]:
     finally:
         signal.setitimer(signal.ITIMER_REAL, 0.0)
         for number, handler in before.items():
-            signal.signal(number, handler)
+            asked_again = stop.asked and number in SCHEDULERS
+            signal.signal(number, _already_ending if asked_again else handler)
+
+
+def _already_ending(_number: int, _frame: FrameType | None) -> None:
+    """Ignore a signal. A scheduler may ask every process of a job, and a parent pass it on: the second
+    request must not kill a process that is ending as the first one wished."""
 
 
 def answering_in_worker() -> Stop:
     """Return the stop of a worker process, which SIGTERM and SIGUSR1 ask; Ctrl-C is for its parent alone."""
     stop = Stop()
     stop.waits_for_layer = True
-    for number in (signal.SIGTERM, signal.SIGUSR1):
+    for number in SCHEDULERS:
         signal.signal(number, lambda number, _frame: stop.ask(SIGNALS[signal.Signals(number)]))
     signal.signal(signal.SIGINT, signal.SIG_IGN)
     return stop
