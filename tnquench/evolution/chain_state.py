@@ -18,6 +18,7 @@ import numpy as np
 
 from tnquench.conventions import Integers, Reals
 from tnquench.evolution.orthogonal import orthonormal_and_factor
+from tnquench.evolution.threads import product
 from tnquench.model.grading import Grading
 
 
@@ -121,21 +122,23 @@ def move_centre(state: ChainState, site: int) -> None:
 def _step_right(state: ChainState) -> None:
     """Make the centre a left isometry and hand its triangular factors to the next site."""
     here, sectors, copies = state.centre, state.grading.sectors, state.grading.multiplicity
-    q, r = orthonormal_and_factor(by_right_charge(state.tensors[here], sectors))
-    state.tensors[here] = from_right_charge(q, copies)
-    state.tensors[here + 1] = from_left_charge(r @ by_left_charge(state.tensors[here + 1], sectors), copies)
-    state.set_size(here + 1, r.shape[1])
+    vectors = np.array(by_right_charge(state.tensors[here], sectors).swapaxes(1, 2), order="C")
+    q, factor = orthonormal_and_factor(vectors)
+    handed = product(factor.swapaxes(1, 2), by_left_charge(state.tensors[here + 1], sectors))
+    state.tensors[here] = from_right_charge(q.swapaxes(1, 2), copies)
+    state.tensors[here + 1] = from_left_charge(handed, copies)
+    state.set_size(here + 1, q.shape[1])
     state.centre = here + 1
 
 
 def _step_left(state: ChainState) -> None:
     """Make the centre a right isometry and hand its triangular factors to the site before."""
     here, sectors, copies = state.centre, state.grading.sectors, state.grading.multiplicity
-    q, r = orthonormal_and_factor(by_left_charge(state.tensors[here], sectors).swapaxes(1, 2))
-    state.tensors[here] = from_left_charge(q.swapaxes(1, 2), copies)
-    handed = by_right_charge(state.tensors[here - 1], sectors) @ r.swapaxes(1, 2)
+    q, factor = orthonormal_and_factor(np.array(by_left_charge(state.tensors[here], sectors), order="C"))
+    handed = product(by_right_charge(state.tensors[here - 1], sectors), factor)
+    state.tensors[here] = from_left_charge(q, copies)
     state.tensors[here - 1] = from_right_charge(handed, copies)
-    state.set_size(here, r.shape[1])
+    state.set_size(here, q.shape[1])
     state.centre = here - 1
 
 

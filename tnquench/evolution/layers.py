@@ -25,6 +25,7 @@ from tnquench.evolution.chain_state import (
 )
 from tnquench.evolution.cutting import GRAM_FLOOR, Cut, CutRule, cut
 from tnquench.evolution.gates import Gate, apply_gate
+from tnquench.evolution.threads import product
 
 
 @dataclass
@@ -105,7 +106,7 @@ def _gated_pair(state: ChainState, bond: int, gate: Gate) -> Reals:
     """
     sectors, copies = state.grading.sectors, state.grading.multiplicity
     left, right = state.tensors[bond], state.tensors[bond + 1]
-    pair = by_right_charge(left, sectors) @ by_left_charge(right, sectors)
+    pair = product(by_right_charge(left, sectors), by_left_charge(right, sectors))
     apply_gate(gate, pair.reshape(sectors, copies, left.shape[1], copies, right.shape[2]))
     if not np.isfinite(float(np.vdot(pair, pair))):
         message = f"the state holds values that are not finite numbers at bond {bond}"

@@ -1,4 +1,4 @@
-"""QR decompositions of all charges at once.
+"""Orthonormal rows of all charges at once, by LQ decompositions.
 
 Small matrices go through numpy in one call, larger ones one by one straight to LAPACK, which spares numpy's
 copies of them.
@@ -10,37 +10,44 @@ import numpy as np
 from scipy.linalg.lapack import dgeqrf, dorgqr
 
 from tnquench.conventions import Reals
+from tnquench.evolution.threads import for_each_charge
 
-#: Columns from which LAPACK is called directly, and columns that it treats together: sets its workspace.
+#: Vectors from which LAPACK is called directly, and vectors that it treats together: sets its workspace.
 DIRECT_FROM, TOGETHER = 24, 32
 
 
-def orthonormal(matrices: Reals) -> Reals:
-    """Return orthonormal bases (charge, rows, min(rows, columns)) whose leading columns span those of the
-    matrices (charge, rows, columns).
+def orthonormal(vectors: Reals) -> Reals:
+    """Return orthonormal rows (charge, min(count, length), length) whose leading ones span those of the
+    vectors (charge, count, length), which may be overwritten.
 
-    Columns that depend on those before them are completed by arbitrary orthogonal directions.
+    Vectors that depend on those before them are replaced by arbitrary orthogonal directions.
     """
-    return _decomposed(matrices)[0]
+    if vectors.shape[1] < DIRECT_FROM:
+        return np.linalg.qr(vectors.swapaxes(1, 2))[0].swapaxes(1, 2)
+    return _by_lapack(vectors)[0]
 
 
-def orthonormal_and_factor(matrices: Reals) -> tuple[Reals, Reals]:
-    """Return orthonormal bases q (charge, rows, kept) and triangles r (charge, kept, columns) with q r the
-    matrices."""
-    return _decomposed(matrices)
+def orthonormal_and_factor(vectors: Reals) -> tuple[Reals, Reals]:
+    """Return orthonormal rows q (charge, kept, length) and lower triangles l (charge, count, kept) with l q
+    the vectors, which may be overwritten."""
+    if vectors.shape[1] < DIRECT_FROM:
+        basis, factor = np.linalg.qr(vectors.swapaxes(1, 2))
+        return basis.swapaxes(1, 2), factor.swapaxes(1, 2)
+    basis, packed = _by_lapack(vectors)
+    return basis, np.tril(packed)
 
 
-def _decomposed(matrices: Reals) -> tuple[Reals, Reals]:
-    """Return bases and triangles."""
-    charges, rows, columns = matrices.shape
-    if columns < DIRECT_FROM:
-        basis, factor = np.linalg.qr(matrices)
-        return basis, factor
-    kept = min(rows, columns)
-    bases, factors = np.empty((charges, kept, rows)), np.empty((charges, kept, columns))
-    for charge, matrix in enumerate(matrices):
-        packed, reflectors, _, _ = dgeqrf(matrix, lwork=TOGETHER * columns)
-        factors[charge] = np.triu(packed[:kept])
+def _by_lapack(vectors: Reals) -> tuple[Reals, Reals]:
+    """Return orthonormal rows, and the triangles with something else above their diagonals."""
+    charges, count, length = vectors.shape
+    kept = min(count, length)
+    bases, packed_factors = np.empty((charges, kept, length)), np.empty((charges, count, kept))
+
+    def one(charge: int) -> None:
+        packed, reflectors, _, _ = dgeqrf(vectors[charge].T, lwork=TOGETHER * count, overwrite_a=True)
+        packed_factors[charge] = packed[:kept].T
         basis, _, _ = dorgqr(packed[:, :kept], reflectors, lwork=TOGETHER * kept, overwrite_a=True)
         bases[charge] = basis.T
-    return bases.swapaxes(1, 2), factors
+
+    for_each_charge(one, charges, flops=4.0 * charges * length * count * kept)
+    return bases, packed_factors
