@@ -65,8 +65,8 @@ def simulate_with_cuts(
     """
     lost: list[list[float]] = [[]]
 
-    def listening(blocks: Reals, rule: CutRule, *, guess: Reals | None = None) -> Cut:
-        result = cut(blocks, rule, guess=guess)
+    def listening(blocks: Reals, rule: CutRule, *, guess: Reals, squared_norm: float) -> Cut:
+        result = cut(blocks, rule, guess=guess, squared_norm=squared_norm)
         if rule.weight_target == quench.discarded_weight:  # the start is cut by a rule of its own
             assert 0.0 <= result.uncertainty < 1e-14
             lost[-1].append(result.discarded_weight + result.uncertainty)

@@ -101,6 +101,25 @@ def test_discarded_weight_is_the_true_loss(method: str) -> None:
     assert sum(float((part**2).sum()) for part in result.right) == pytest.approx(1.0, abs=1e-14)
 
 
+@pytest.mark.parametrize("order", ["descending", "ascending", "mixed"])
+def test_directions_left_as_they_are_cost_little_in_any_order(order: str) -> None:
+    """The leading part of a warm start is not diagonalised; one in another order must not lose more."""
+    blocks = decaying_blocks(80, 80)
+    guess = guess_for(blocks, held=22, noise=1e-4)
+    if order != "descending":
+        places = np.arange(22)[::-1] if order == "ascending" else np.random.default_rng(2).permutation(22)
+        guess = guess[:, places]
+    result = cut(blocks, CutRule(1e-9, bond_floor=1), guess=guess)
+    reference = cut(blocks, CutRule(1e-9, bond_floor=1, method="svd"))
+    kept = result.right.shape[1]
+    assert kept > int(0.8 * 22), "the leading part alone does not decide"
+    assert reference.right.shape[1] <= kept <= reference.right.shape[1] + (1 if order == "descending" else 7)
+    scale = np.sqrt(1.0 - result.discarded_weight)
+    missing = float(np.square(blocks - scale * result.left @ result.right).sum())
+    assert missing == pytest.approx(result.discarded_weight, rel=1e-5)
+    assert missing <= 1e-9
+
+
 def test_subspace_grows_from_a_guess_that_holds_nothing() -> None:
     """Warm starts may be useless after a strong gate; the measured loss must still come under the target."""
     blocks = decaying_blocks(50, 50)

@@ -11,6 +11,7 @@ from tnquench.budget.companions import SHORT, companion_quenches
 from tnquench.budget.pilot import choose_settings
 from tnquench.checkpoints import Store, require_reachable
 from tnquench.config.schema import Config
+from tnquench.evolution.threads import threads as engine_threads
 from tnquench.observables.quench import Progress, QuantumRecord, Quench
 from tnquench.outcome import QuantumSide
 from tnquench.side_by_side import (
@@ -121,7 +122,9 @@ def simulate_all(
     """Run a main quench and its companions, the companions in processes of their own if there is more than
     one thread; those that start like the main run wait for its start and share it.
 
-    Results are the same either way. A companion that fails is left out, and an event says so.
+    Threads that no companion occupies share the charges of the quench in this process, which takes companions
+    over that have not begun when its main run has ended. Results are the same either way. A companion that
+    fails is left out, and an event says so.
     """
     stop, failures, records = stop or Stop(), list[dict[str, object]](), dict[str, QuantumRecord]()
     tasks = {name: Task(name, companion, store=store) for name, companion in companions.items()}
@@ -131,9 +134,16 @@ def simulate_all(
     said = {
         name: stage_name(store, name, f"companion {name}", each) for name, each in companions.items()
     }  # before the processes begin
-    with background(stop, workers=min(threads - 1, len(tasks))) as running:
+    workers = min(threads - 1, len(tasks))
+    with background(stop, workers=workers) as running, engine_threads(threads) as crew:
+
+        def progress(made: Progress) -> None:
+            crew.at_work = max(1, threads - running.busy)
+            watch.progress(made)
+
         if SHORT in tasks:
             running.begin(tasks[SHORT])
+            crew.at_work = max(1, threads - running.busy)
         watch.stage(stage_name(store, MAIN, "main run", quench), quench)
         if _start_wanted(store, quench):
             start = start_of_task(main_task, stop)
@@ -141,14 +151,12 @@ def simulate_all(
             main_task = replace(main_task, start=start)
         for name in (name for name in tasks if name != SHORT):
             running.begin(tasks[name])
-        main = carry_out(main_task, stop, watch.progress, keeps_state=True)
+        main = carry_out(main_task, stop, progress, keeps_state=True)
         for name, task in tasks.items():
-            here = name not in running.pending
+            here = running.taken_back(name)
             watch.stage(said[name], task.quench if here else None)
             try:
-                records[name] = (
-                    carry_out(task, stop, watch.progress) if here else fetched(task, running, stop)
-                )
+                records[name] = carry_out(task, stop, progress) if here else fetched(task, running, stop)
             except tuple(SURVIVABLE) as error:
                 failures.append(failure_event(name, error))
                 watch.stage(str(failures[-1]["detail"]), None)

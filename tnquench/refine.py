@@ -24,6 +24,7 @@ from tnquench.dataset.lock import folder_lock
 from tnquench.dataset.reader import Run, open_run
 from tnquench.dataset.writer import require_writable, write_run
 from tnquench.errors import InputError
+from tnquench.evolution.threads import threads as engine_threads
 from tnquench.observables.quench import Quench
 from tnquench.outcome import Pieces, QuantumSide, run_pieces
 from tnquench.quantum_of import MAIN, SILENT, Watch, stage_name
@@ -52,6 +53,7 @@ def refine(
     *,
     weight: float | None = None,
     time_step: float | None = None,
+    threads: int = 1,
     watch: Watch = SILENT,
     stop: Stop | None = None,
 ) -> Path:
@@ -60,6 +62,7 @@ def refine(
     folder : of the run, or its run.h5; weight : a tenth of the old one if not given; time_step : kept if not
     given. run.h5 is replaced at the end, whole or not at all. The old main run joins the companions; those it
     had follow, named by their weight over the new one. A stretch study is left out: it was of the old run.
+    threads : among which the charges of its bonds are shared
     stop : asked between layers whether to end; the same call goes on later
     Raises InputError if there is no such run, or for a weight or step that refines nothing, Stopped where
     `stop` ends it.
@@ -69,7 +72,7 @@ def refine(
     config, quench = refined_quench(old, weight=weight, time_step=time_step)
     place = old.path.parent
     require_writable(place)
-    with folder_lock(place), threadpool_limits(1):
+    with folder_lock(place), threadpool_limits(1), engine_threads(threads):
         watch.stage("prediction", None)
         prediction, absence = build_prediction(config)
         store = Store(place / CHECKPOINTS)

@@ -19,6 +19,7 @@ from tnquench.config.sweep import refuse_sweep
 from tnquench.dataset.lock import LONE_LOCK, folder_lock, lock_holder
 from tnquench.dataset.writer import clear_leftovers, require_writable, write_run
 from tnquench.errors import InputError
+from tnquench.evolution.threads import threads as engine_threads
 from tnquench.observables.quench import Quench
 from tnquench.outcome import Pieces, prediction_pieces, run_pieces
 from tnquench.quantum_of import (
@@ -102,6 +103,7 @@ def run_one(
     name: str,
     *,
     into: Path | None = None,
+    threads: int = 1,
     watch: Watch = SILENT,
     continuation: Continuation | None = None,
     allow_outside: bool = False,
@@ -109,6 +111,7 @@ def run_one(
     """Carry out one quench of a run alone and keep it for the run that puts all together; return the folder.
 
     name : main, the name of a companion, or that of a stretched run's quench, as in stretch_2/main
+    threads : among which the charges of its bonds are shared
     Raises InputError for a name that the run does not have, and for a config that leaves its weight open.
     """
     how = continuation or Continuation()
@@ -136,7 +139,7 @@ def run_one(
         )
     own, quench, config, folder = quenches[name]
     require_writable(folder)
-    with folder_lock(folder, name=f"{LONE_LOCK}{own}"), threadpool_limits(1):
+    with folder_lock(folder, name=f"{LONE_LOCK}{own}"), threadpool_limits(1), engine_threads(threads):
         if (holder := lock_holder(top)) is not None:  # looked at under our own lock, which a run looks at
             problem = f"a whole run is under way here: process {holder.pid} on {holder.host}"
             raise InputError(str(top), [problem])

@@ -79,17 +79,27 @@ def start_of_task(task: Task, stop: Stop) -> Start:
 class Background:
     """Processes that carry out tasks beside this one; none if `pool` is None.
 
-    pending : the results to come, by the tasks' names
+    workers : how many processes; pending : the results to come, by the tasks' names
     """
 
     pool: ProcessPoolExecutor | None
+    workers: int = 0
     pending: dict[str, Future[QuantumRecord]] = field(default_factory=dict)
+
+    @property
+    def busy(self) -> int:
+        """How many of the processes are at work."""
+        return min(self.workers, sum(not result.done() for result in self.pending.values()))
 
     def begin(self, task: Task) -> None:
         """Hand a task to the processes, if there are any."""
         if self.pool is not None:
             with _interrupts_ignored():
                 self.pending[task.name] = self.pool.submit(_in_worker, task)
+
+    def taken_back(self, name: str) -> bool:
+        """Whether a task is this process's own: never handed over, or taken back before it was begun."""
+        return name not in self.pending or self.pending[name].cancel()
 
 
 @contextmanager
@@ -110,7 +120,7 @@ def background(stop: Stop, *, workers: int) -> Iterator[Background]:
         initargs=(stop.deadline, os.getpid()),
     ) as pool:
         try:
-            yield Background(pool)
+            yield Background(pool, workers)
         except BaseException as error:
             pool.shutdown(wait=False, cancel_futures=True)
             for worker in set(active_children()) - others:

@@ -133,16 +133,19 @@ class _Spectrum:
         return left, right
 
 
-def cut(blocks: Reals, rule: CutRule, *, guess: Reals | None = None) -> Cut:
+def cut(
+    blocks: Reals, rule: CutRule, *, guess: Reals | None = None, squared_norm: float | None = None
+) -> Cut:
     """Cut a two-site tensor, given by one matrix a charge, keeping its largest singular values.
 
     blocks : shape (charge, rows, columns)
     guess  : rows that span the kept space nearly, (charge, any number, columns); used by `subspace` alone
+    squared_norm : of all blocks together, where it is known already
     Returns a Cut; its discarded_weight is the true lost fraction of the squared norm.
     Raises numpy.linalg.LinAlgError only if both SVD drivers fail, which means the tensor holds no numbers.
     """
     method = rule.method if rule.weight_target >= GRAM_FLOOR else "svd"
-    total = float(np.vdot(blocks, blocks))
+    total = float(np.vdot(blocks, blocks)) if squared_norm is None else squared_norm
     fallbacks, outside = 0, 0.0
     if method == "svd":
         spectrum, fallbacks = _by_svd(blocks)

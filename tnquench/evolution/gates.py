@@ -9,15 +9,20 @@ from __future__ import annotations
 
 from collections.abc import Callable
 from dataclasses import dataclass
-from functools import cache
+from functools import cache, cached_property
+from math import isqrt
 
 import numpy as np
 from numpy.typing import NDArray
 from scipy.linalg import expm
 
 from tnquench.conventions import Integers, Reals
+from tnquench.evolution.threads import for_each_charge, shared
 from tnquench.model.grading import Grading
 from tnquench.model.pauli import PHASE, Operator, PauliString
+
+#: A gate is memory traffic: about so many times slower than its floating-point operations.
+SLOWER_THAN_FLOPS = 4.0
 
 
 @dataclass(frozen=True)
@@ -27,10 +32,24 @@ class Gate:
     charges : total charges of the two sites where the map is not the identity, (active,)
     blocks : for each of them the matrix on the sites' operators, flattened as (charge of the left site's
              operator, copy of the left, copy of the right), shape (active, size, size)
+    copies : local operators of one charge
     """
 
     charges: Integers
     blocks: Reals
+    copies: int
+
+    @cached_property
+    def mirrored(self) -> Gate:
+        """The gate as it acts on the mirror image of a two-site tensor, whose sites have changed places."""
+        active, size, _ = self.blocks.shape
+        sectors = size // self.copies**2
+        places = np.arange(size).reshape(sectors, self.copies, self.copies).swapaxes(1, 2)
+        orders = [places[charge ^ np.arange(sectors)].ravel() for charge in self.charges.tolist()]
+        order = np.array(orders, dtype=np.int64).reshape(active, size)
+        which = np.arange(active)[:, None, None]
+        blocks = self.blocks[which, order[:, :, None], order[:, None, :]]
+        return Gate(self.charges, blocks, self.copies)
 
 
 @dataclass(frozen=True)
@@ -96,13 +115,27 @@ def apply_gate(gate: Gate, pair: Reals) -> None:
     if not active.any():
         return
     split = pair.reshape(sectors, copies, *outer[0], copies, *outer[1])
-    middle, lefts, rights = (
-        each[gate.charges[active]] for each in _places(sectors, outer[0][0], outer[1][0])
-    )
+    places = [each[gate.charges[active]] for each in _places(sectors, outer[0][0], outer[1][0])]
+    blocks = gate.blocks[active]
+    flops = 2.0 * pair.size * blocks.shape[1] * SLOWER_THAN_FLOPS
+    if not shared(flops):
+        _mix(split, blocks, places)
+        return
+
+    def one(charge: int) -> None:
+        part = slice(charge, charge + 1)
+        _mix(split, blocks[part], [each[part] for each in places])
+
+    for_each_charge(one, len(blocks), flops=flops)
+
+
+def _mix(split: Reals, blocks: Reals, places: list[Integers]) -> None:
+    """Apply the blocks of some total charges in place; places : middle, left and right charges of each."""
+    middle, lefts, rights = places
     part = split[middle, :, lefts, :, :, rights, :]  # (active, operator, outer charges, copy, l, copy, r)
-    shape = part.shape
+    copies, shape = split.shape[1], part.shape
     flat = part.transpose(0, 1, 3, 5, 2, 4, 6)
-    mapped = gate.blocks[active] @ flat.reshape(len(part), gate.blocks.shape[2], -1)
+    mapped = blocks @ flat.reshape(len(part), blocks.shape[2], -1)
     split[middle, :, lefts, :, :, rights, :] = mapped.reshape(
         *shape[:2], copies, copies, shape[2], shape[4], shape[6]
     ).transpose(0, 1, 4, 2, 5, 3, 6)
@@ -156,12 +189,13 @@ def _exponential(generators: Reals) -> Gate:
 
 
 def _gate(blocks: Reals) -> Gate:
-    """Keep the matrices that are not the identity."""
+    """Keep the matrices, one a charge, that are not the identity."""
     identity = np.eye(blocks.shape[1])
     charges = np.array(
         [c for c, block in enumerate(blocks) if not np.array_equal(block, identity)], dtype=np.int64
     )
-    return Gate(charges, np.ascontiguousarray(blocks[charges]))
+    copies = isqrt(blocks.shape[1] // len(blocks))
+    return Gate(charges, np.ascontiguousarray(blocks[charges]), copies)
 
 
 @cache

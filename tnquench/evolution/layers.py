@@ -99,26 +99,29 @@ def apply_layer(state: ChainState, gates: Mapping[int, Gate], rule: CutRule, led
         move_centre(state, 0)
 
 
-def _gated_pair(state: ChainState, bond: int, gate: Gate) -> Reals:
-    """Join two sites, apply the gate, and make sure that the result is made of numbers.
+def _gated(pair: Reals, gate: Gate, *, sizes: tuple[int, int], copies: int, bond: int) -> float:
+    """Apply a gate to two joined sites in place, make sure that the result is made of numbers, and return its
+    squared norm.
 
-    Returns one matrix a charge of the middle bond, (charge, multiplicity x left, multiplicity x right).
+    pair : one matrix a charge of the middle bond, (charge, multiplicity x left, multiplicity x right)
+    sizes : of the outer bonds left and right
     """
-    sectors, copies = state.grading.sectors, state.grading.multiplicity
-    left, right = state.tensors[bond], state.tensors[bond + 1]
-    pair = product(by_right_charge(left, sectors), by_left_charge(right, sectors))
-    apply_gate(gate, pair.reshape(sectors, copies, left.shape[1], copies, right.shape[2]))
-    if not np.isfinite(float(np.vdot(pair, pair))):
+    apply_gate(gate, pair.reshape(len(pair), copies, sizes[0], copies, sizes[1]))
+    squared_norm = float(np.vdot(pair, pair))
+    if not np.isfinite(squared_norm):
         message = f"the state holds values that are not finite numbers at bond {bond}"
         raise StateError(message)
-    return pair
+    return squared_norm
 
 
 def _cut_rightwards(state: ChainState, bond: int, gate: Gate, rule: CutRule, ledger: CutLedger) -> None:
     """Gate and cut a bond whose left site is the centre; the centre moves to its right site."""
     sectors, copies = state.grading.sectors, state.grading.multiplicity
-    pair = _gated_pair(state, bond, gate)
-    result = cut(pair, rule, guess=by_left_charge(state.tensors[bond + 1], sectors))
+    left, right = state.tensors[bond], state.tensors[bond + 1]
+    guess = by_left_charge(right, sectors)
+    pair = product(by_right_charge(left, sectors), guess)
+    total = _gated(pair, gate, sizes=(left.shape[1], right.shape[2]), copies=copies, bond=bond)
+    result = cut(pair, rule, guess=guess, squared_norm=total)
     ledger.enter(bond, result, rule)
     state.tensors[bond] = from_right_charge(result.left, copies)
     state.tensors[bond + 1] = from_left_charge(result.right, copies)
@@ -127,10 +130,16 @@ def _cut_rightwards(state: ChainState, bond: int, gate: Gate, rule: CutRule, led
 
 
 def _cut_leftwards(state: ChainState, bond: int, gate: Gate, rule: CutRule, ledger: CutLedger) -> None:
-    """Gate and cut a bond whose right site is the centre; the centre moves to its left site."""
+    """Gate and cut a bond whose right site is the centre; the centre moves to its left site.
+
+    Everything is done on the mirror image, so that the matrices lie in memory as they do rightwards.
+    """
     sectors, copies = state.grading.sectors, state.grading.multiplicity
-    mirrored = np.ascontiguousarray(_gated_pair(state, bond, gate).swapaxes(1, 2))
-    result = cut(mirrored, rule, guess=by_right_charge(state.tensors[bond], sectors).swapaxes(1, 2))
+    left, right = state.tensors[bond], state.tensors[bond + 1]
+    guess = by_right_charge(left, sectors).swapaxes(1, 2)
+    pair = product(by_left_charge(right, sectors).swapaxes(1, 2), guess)
+    total = _gated(pair, gate.mirrored, sizes=(right.shape[2], left.shape[1]), copies=copies, bond=bond)
+    result = cut(pair, rule, guess=guess, squared_norm=total)
     ledger.enter(bond, result, rule)
     state.tensors[bond + 1] = from_left_charge(result.left.swapaxes(1, 2), copies)
     state.tensors[bond] = from_right_charge(result.right.swapaxes(1, 2), copies)

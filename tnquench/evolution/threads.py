@@ -18,49 +18,59 @@ from tnquench.conventions import Reals
 WORTHWHILE = 2e7
 
 
-class _Crew:
-    """The threads that are at work in this process, if there are more than one."""
+class Crew:
+    """The threads of this process that may work at the same time.
 
-    pool: ThreadPoolExecutor | None = None
+    at_work : how many do; may be changed at any time between two calls of the engine
+    """
+
+    def __init__(self, pool: ThreadPoolExecutor | None, most: int) -> None:
+        self.pool, self.at_work = pool, most
+
+
+_crews = [Crew(None, 1)]
 
 
 @contextmanager
-def threads(count: int) -> Iterator[None]:
+def threads(most: int) -> Iterator[Crew]:
     """Let the engine use so many threads of this process within the block; one is the calling thread alone.
 
     A chain cannot use more threads than its bonds have charges.
     """
-    before = _Crew.pool
-    if count <= 1:
-        _Crew.pool = None
+    with ThreadPoolExecutor(max(1, most), thread_name_prefix="charges") as pool:  # begins none until asked
+        _crews.append(Crew(pool, most))
         try:
-            yield
+            yield _crews[-1]
         finally:
-            _Crew.pool = before
-        return
-    with ThreadPoolExecutor(count, thread_name_prefix="charges") as pool:
-        _Crew.pool = pool
-        try:
-            yield
-        finally:
-            _Crew.pool = before
+            _crews.pop()
+
+
+def shared(flops: float) -> bool:
+    """Whether an operation on all charges, of so many floating-point operations, is worth sharing."""
+    return _crews[-1].at_work > 1 and flops >= WORTHWHILE
 
 
 def for_each_charge(task: Callable[[int], None], charges: int, *, flops: float) -> None:
     """Carry out `task(charge)` for every charge; flops : what all of them take, about."""
-    pool = _Crew.pool
-    if pool is None or flops < WORTHWHILE:
+    crew = _crews[-1]
+    if crew.pool is None or not shared(flops):
         for charge in range(charges):
             task(charge)
-    else:
-        list(pool.map(task, range(charges)))  # the list raises what a task has raised
+        return
+    count = min(crew.at_work, charges)
+
+    def share(first: int) -> None:
+        for charge in range(first, charges, count):
+            task(charge)
+
+    list(crew.pool.map(share, range(count)))  # the list raises what a task has raised
 
 
 def product(first: Reals, second: Reals, out: Reals | None = None) -> Reals:
     """Return the matrix products of all charges, (charge, rows, inner) @ (charge, inner, columns)."""
     charges, rows, inner = first.shape
     flops = 2.0 * charges * rows * inner * second.shape[2]
-    if _Crew.pool is None or flops < WORTHWHILE:
+    if not shared(flops):
         return np.matmul(first, second, out=out)
     result = np.empty((charges, rows, second.shape[2])) if out is None else out
 
@@ -77,7 +87,7 @@ def eigensystems(matrices: Reals) -> tuple[Reals, Reals]:
     symmetric matrices."""
     charges, size, _ = matrices.shape
     flops = 9.0 * charges * size**3
-    if _Crew.pool is None or flops < WORTHWHILE:
+    if not shared(flops):
         values, vectors = np.linalg.eigh(matrices)
         return values, vectors
     values, vectors = np.empty((charges, size)), np.empty(matrices.shape)

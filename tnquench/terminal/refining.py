@@ -10,6 +10,7 @@ import typer
 from tnquench.refine import refine
 from tnquench.stopping import Limits
 from tnquench.terminal.display import watching
+from tnquench.terminal.options import Threads, usable_cores
 from tnquench.terminal.running import stoppable
 from tnquench.terminal.summary import show_findings
 
@@ -22,6 +23,7 @@ def refine_command(
     step: Annotated[
         float | None, typer.Option(metavar="DT", help="New time step; default: the old one.")
     ] = None,
+    threads: Threads = None,
 ) -> None:
     """Add a tighter main run to a finished run, which becomes a companion of it.
 
@@ -30,6 +32,13 @@ def refine_command(
     command is given again.
     """
     with stoppable(Limits()) as stop, watching() as watch:
-        folder = refine(dataset, weight=weight, time_step=step, watch=watch, stop=stop)
+        folder = refine(
+            dataset,
+            weight=weight,
+            time_step=step,
+            threads=threads or usable_cores(),
+            watch=watch,
+            stop=stop,
+        )
     show_findings(folder)
     typer.echo(str(folder))

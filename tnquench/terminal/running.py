@@ -85,7 +85,13 @@ def run_command(
         how = Continuation(stop=stop, checkpoint_every=checkpoint_every, fresh=fresh)
         if only is not None:
             folder = run_one(
-                config, only, into=into, watch=watch, continuation=how, allow_outside=allow_outside
+                config,
+                only,
+                into=into,
+                threads=threads or usable_cores(),
+                watch=watch,
+                continuation=how,
+                allow_outside=allow_outside,
             )
         else:
             folder = run(
