@@ -20,7 +20,7 @@ import numpy as np
 from scipy.linalg import LinAlgError, svd
 
 from tnquench.conventions import Reals
-from tnquench.evolution.orthogonal import orthonormal
+from tnquench.evolution.orthogonal import orthonormal, orthonormal_beside
 from tnquench.evolution.threads import eigensystems, product
 
 METHODS = ("subspace", "gram", "svd")
@@ -241,9 +241,7 @@ def _outside(blocks: Reals, basis: Reals, image: Reals, probes: Reals) -> Reals:
     """Return orthonormal directions of what the blocks have outside a basis, where the probes find it."""
     sample = product(probes, blocks.swapaxes(1, 2))
     sample -= product(product(probes, image.swapaxes(1, 2)), basis)
-    new = orthonormal(sample)
-    # rounding left a trace of the basis
-    new = orthonormal(new - product(product(new, basis.swapaxes(1, 2)), basis))
+    new = orthonormal_beside(basis, sample)
     if np.abs(product(new, basis.swapaxes(1, 2))).max() > ORTHOGONALITY:
         # nothing but rounding is left of the blocks: any directions serve, as long as they are orthogonal
         new = orthonormal(np.concatenate([basis, new], axis=1))[:, basis.shape[1] :]

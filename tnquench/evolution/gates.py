@@ -17,12 +17,15 @@ from numpy.typing import NDArray
 from scipy.linalg import expm
 
 from tnquench.conventions import Integers, Reals
-from tnquench.evolution.threads import for_each_charge, shared
+from tnquench.evolution.threads import for_each_charge
 from tnquench.model.grading import Grading
 from tnquench.model.pauli import PHASE, Operator, PauliString
 
 #: A gate is memory traffic: about so many times slower than its floating-point operations.
 SLOWER_THAN_FLOPS = 4.0
+
+#: Entries of a two-site tensor from which gates are applied in portions, and of a portion.
+IN_PORTIONS_FROM, PORTION = 400_000, 65_536
 
 
 @dataclass(frozen=True)
@@ -115,22 +118,22 @@ def apply_gate(gate: Gate, pair: Reals) -> None:
     if not active.any():
         return
     split = pair.reshape(sectors, copies, *outer[0], copies, *outer[1])
-    places = [each[gate.charges[active]] for each in _places(sectors, outer[0][0], outer[1][0])]
-    blocks = gate.blocks[active]
-    flops = 2.0 * pair.size * blocks.shape[1] * SLOWER_THAN_FLOPS
-    if not shared(flops):
-        _mix(split, blocks, places)
+    if pair.size < IN_PORTIONS_FROM or 1 in (left, right):
+        _mix_at_once(
+            split,
+            gate.blocks[active],
+            [each[gate.charges[active]] for each in _places(sectors, outer[0][0], outer[1][0])],
+        )
         return
 
     def one(charge: int) -> None:
-        part = slice(charge, charge + 1)
-        _mix(split, blocks[part], [each[part] for each in places])
+        _mix_in_portions(split, gate, charge)
 
-    for_each_charge(one, len(blocks), flops=flops)
+    for_each_charge(one, sectors, flops=2.0 * pair.size * gate.blocks.shape[1] * SLOWER_THAN_FLOPS)
 
 
-def _mix(split: Reals, blocks: Reals, places: list[Integers]) -> None:
-    """Apply the blocks of some total charges in place; places : middle, left and right charges of each."""
+def _mix_at_once(split: Reals, blocks: Reals, places: list[Integers]) -> None:
+    """Apply the blocks of all total charges in place; places : middle, left and right charges of each."""
     middle, lefts, rights = places
     part = split[middle, :, lefts, :, :, rights, :]  # (active, operator, outer charges, copy, l, copy, r)
     copies, shape = split.shape[1], part.shape
@@ -139,6 +142,24 @@ def _mix(split: Reals, blocks: Reals, places: list[Integers]) -> None:
     split[middle, :, lefts, :, :, rights, :] = mapped.reshape(
         *shape[:2], copies, copies, shape[2], shape[4], shape[6]
     ).transpose(0, 1, 4, 2, 5, 3, 6)
+
+
+def _mix_in_portions(split: Reals, gate: Gate, left: int) -> None:
+    """Apply the gate in place at one charge of the left bond, in portions that stay in the processor's cache.
+
+    The blocks are sorted by the charge of the left site's operator, which is `left` XOR the middle charge.
+    """
+    sectors, copies = split.shape[:2]
+    size = gate.blocks.shape[1]
+    sorted_by_middle = (left ^ np.arange(sectors))[:, None] * copies**2 + np.arange(copies**2)
+    order = sorted_by_middle.ravel()
+    rows = max(1, PORTION // (size * split.shape[6]))
+    for charge, block in zip(gate.charges.tolist(), gate.blocks, strict=True):
+        mixing = block[np.ix_(order, order)]
+        whole = split[:, :, left, :, :, left ^ charge].transpose(0, 1, 3, 2, 4)  # (middle, copy, copy, l, r)
+        for first in range(0, whole.shape[3], rows):
+            part = whole[:, :, :, first : first + rows]
+            part[...] = (mixing @ part.reshape(size, -1)).reshape(part.shape)
 
 
 def _reachable(charges: Integers, outer: list[tuple[int, int]]) -> Integers:
