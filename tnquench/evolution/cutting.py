@@ -49,7 +49,7 @@ ORTHOGONALITY = 1e-13
 
 #: Random directions added to the warm start of each charge: at least this many, and this fraction of its
 #: size. Few of them make a second portion likely, which costs more than they do.
-EXTRA_DIRECTIONS, EXTRA_FRACTION = 2, 0.15
+EXTRA_DIRECTIONS, EXTRA_FRACTION = 2, 0.25
 
 #: A subspace of more than this fraction of all directions is no cheaper than the whole.
 LARGEST_FRACTION = 0.6
