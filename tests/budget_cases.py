@@ -7,7 +7,7 @@ from collections.abc import Callable, Sequence
 import numpy as np
 
 from tnquench.budget.assess import PredictedLevel, RunSettings, assess
-from tnquench.budget.companions import COARSE, LOOSE, LOOSER, SHORT
+from tnquench.budget.companions import COARSE, LOOSE, SHORT
 from tnquench.budget.verdict import ObservableBudget
 from tnquench.conventions import ERROR_SOURCES, OBSERVABLE_PLACES, Reals, bond_positions, site_positions
 from tnquench.model.chain import start_terms
@@ -22,6 +22,8 @@ CARRIED_ERROR = START_ERROR | {"energy_density": 0.3 * 0.5 * 4e-7 / 0.3}
 #: The observables of a run of the XXZ chain.
 NAMES = tuple(NORMS)
 CUTS = 100.0 * np.arange(SAMPLES)
+#: Weight of the companions, thirty times the main run's.
+LOOSE_WEIGHT = 3e-7
 SETTINGS = RunSettings(step_ratio=3.0, trotter_order=4, resolve_at=3.0)
 ROUNDING = 2.0**-52
 Perturb = Callable[[str, Reals], Reals]
@@ -52,6 +54,7 @@ def record(
     weight: float = 1e-8,
     samples: int = SAMPLES,
     names: Sequence[str] = NAMES,
+    time_step: float = 0.1,
 ) -> QuantumRecord:
     """A run whose fields are functions of time and position alone, so that chains of all lengths agree."""
     times = np.arange(samples, dtype=np.float64)
@@ -79,28 +82,26 @@ def record(
         cpu_seconds=1.0,
         cuts=100.0 * times,
         peak_state_bytes=1,
+        weight_asked=weight,
+        time_step=time_step,
     )
 
 
 def companions(
-    *,
-    loose: Perturb = unchanged,
-    looser: Perturb | None = None,
-    coarse: Perturb | None = None,
-    short: Perturb | None = None,
+    *, loose: Perturb = unchanged, coarse: Perturb | None = None, short: Perturb | None = None
 ) -> dict[str, QuantumRecord]:
-    """Companions that agree with the one at ten times the weight unless told otherwise."""
+    """Companions that agree with the one before them unless told otherwise: looser, longer step, shorter."""
+    coarse = coarse or loose
 
     def central(name: str, values: Reals) -> Reals:
-        full = record(loose).fields[name]
+        full = record(coarse).fields[name]
         removed = (full.shape[1] - values.shape[1]) // 2
         return full[:, removed : full.shape[1] - removed]
 
     return {
-        LOOSE: record(loose, weight=1e-7),
-        LOOSER: record(looser or loose, weight=1e-6),
-        COARSE: record(coarse or loose, weight=1e-7),
-        SHORT: record(short or central, sites=SHORTER, weight=1e-7),
+        LOOSE: record(loose, weight=LOOSE_WEIGHT),
+        COARSE: record(coarse, weight=LOOSE_WEIGHT, time_step=0.3),
+        SHORT: record(short or central, sites=SHORTER, weight=LOOSE_WEIGHT, time_step=0.3),
     }
 
 
@@ -123,7 +124,7 @@ def expected_numerical(budget: ObservableBudget) -> Reals:
     return np.asarray(sum(row(budget, source) for source in ERROR_SOURCES if source != "initial_gradient"))
 
 
-LOOSE_NOISE, LOOSER_NOISE = noise(1, 3e-5), noise(2, 1e-4)
+LOOSE_NOISE = noise(1, 3e-5)
 STEP_NOISE, END_NOISE = noise(3, 2e-4), noise(4, 5e-4)
 
 

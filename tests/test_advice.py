@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import re
 from concurrent.futures import Future
 from concurrent.futures.process import BrokenProcessPool
 from dataclasses import replace
@@ -13,7 +14,6 @@ import pytest
 
 from tests.budget_cases import (
     LOOSE_NOISE,
-    LOOSER_NOISE,
     NAMES,
     NORMS,
     SETTINGS,
@@ -21,6 +21,7 @@ from tests.budget_cases import (
     companions,
     free_quench,
     judge,
+    noise,
     positions_of,
     record,
     row,
@@ -30,7 +31,7 @@ from tnquench import open_run, side_by_side
 from tnquench import run as run_module
 from tnquench.budget.advice import advise, tighter_cost
 from tnquench.budget.assess import RunSettings, assess
-from tnquench.budget.companions import COARSE, LOOSE, LOOSER, SHORT, WITHOUT, companion_quenches
+from tnquench.budget.companions import COARSE, LOOSE, SHORT, WITHOUT, companion_quenches
 from tnquench.budget.verdict import ObservableBudget
 from tnquench.conventions import ERROR_SOURCES, bond_positions
 from tnquench.dataset.integrity import check_run
@@ -54,7 +55,7 @@ def visible_quench(weight: float) -> Quench:
         chain=chain,
         start_terms=start_terms(chain, beta=beta.tolist(), potentials={}),
         discarded_weight=weight,
-        steps=2,
+        steps=3,
         bond_floor=8,
         preparation_weight=1e-11,
         preparation_distance=1e-5,
@@ -65,14 +66,14 @@ def advised(weight: float) -> tuple[QuantumRecord, dict[str, ObservableBudget], 
     """A run, its budget and the advice; the ends do nothing: their run agrees with its partner."""
     quench = visible_quench(weight)
     runs = {name: simulate(each) for name, each in companion_quenches(quench, shorter=None).items()}
-    short = {name: values[:, 2:-2] for name, values in runs[LOOSE].fields.items()}
+    short = {name: values[:, 2:-2] for name, values in runs[COARSE].fields.items()}
     main = simulate(quench)
     budgets = assess(
         main,
-        runs | {SHORT: replace(runs[LOOSE], fields=short)},
+        runs | {SHORT: replace(runs[COARSE], fields=short)},
         {},
         positions=positions_of(12),
-        settings=RunSettings(step_ratio=2.0, trotter_order=4, resolve_at=3.0),
+        settings=RunSettings(step_ratio=3.0, trotter_order=4, resolve_at=3.0),
     )
     return main, budgets, advise(main, runs, budgets, quench)
 
@@ -94,14 +95,14 @@ def test_forecast_of_error_and_cost_is_right_within_a_factor_three() -> None:
 
 
 def test_cost_follows_bonds_that_grow_with_the_weight() -> None:
-    """Cube roots 4, 5, 6 at 1e-6, 1e-7, 1e-8: 7 comes next. All time goes into cubes of bonds."""
+    """Cube roots 4 and 6 at 1e-6 and 1e-8: 7 comes at 1e-9. All time goes into cubes of bonds."""
 
-    def run(root: float) -> QuantumRecord:
+    def run(root: float, weight: float = 1e-8) -> QuantumRecord:
         bonds = np.full((6, 15), root**3)
-        return replace(record(), bond_dimension=bonds, cpu_seconds=1e-6 * 500.0 * root**9)
+        return replace(record(weight=weight), bond_dimension=bonds, cpu_seconds=1e-6 * 500.0 * root**9)
 
-    quench = replace(free_quench(16), bond_floor=32)
-    companions_then = {LOOSE: run(5.0), LOOSER: run(4.0)}
+    quench = replace(free_quench(16), bond_floor=32, discarded_weight=1e-8)
+    companions_then = {"weight_100": run(4.0, 1e-6)}
     inner = slice(5, 10)  # bonds near the ends are full
     ends = run(6.0).bond_dimension
     found = tighter_cost(run(6.0), companions_then, quench)
@@ -117,11 +118,13 @@ def test_windows_are_thirds_and_name_their_source() -> None:
         noisy = STEP_NOISE(name, values) - values
         return np.asarray(LOOSE_NOISE(name, values) + 400.0 * noisy * (np.arange(len(values)) >= 4)[:, None])
 
-    runs = companions(loose=LOOSE_NOISE, looser=LOOSER_NOISE, coarse=late_step)
+    runs = companions(loose=LOOSE_NOISE, coarse=late_step)
     quench = replace(free_quench(16), trotter_order=4)
     advice = advise(record(), runs, judge(runs), quench)
     assert [(window["from"], window["until"]) for window in advice["windows"]] == [(1, 2), (3, 3), (4, 5)]
     assert [window["dominant"] for window in advice["windows"]] == ["truncation", "time_step", "time_step"]
+    said = advice["sentences"][0]
+    assert re.search(r"from truncation up to t = 2 \(\d+ %\), then from the time step up to t = 5 \(", said)
     assert advice["action"] == "step"
     step = advice["windows"][-1]["shares"]["time_step"]
     kept = advice["error_then"] / advice["error"]
@@ -138,10 +141,11 @@ def test_cost_without_bonds_continues_the_measured_seconds() -> None:
     class Kept:
         fields: dict[str, Any] = {}  # noqa: RUF012
         discarded_weight = np.zeros((1, 1))
-        weight_asked, time_step, seconds = 1e-7, 0.1, 0.25
+        weight_asked, time_step, seconds = 1e-6, 0.1, 0.25
 
-    assert tighter_cost(record(), {LOOSE: Kept()}, free_quench(16)) == pytest.approx(4.0)
-    assert tighter_cost(record(), {}, free_quench(16)) == pytest.approx(np.sqrt(10.0))
+    quench = replace(free_quench(16), discarded_weight=1e-8)
+    assert tighter_cost(record(), {"weight_100": Kept()}, quench) == pytest.approx(2.0)
+    assert tighter_cost(record(), {}, quench) == pytest.approx(np.sqrt(10.0))
 
 
 def test_report_writes_the_numbers_of_the_advice_as_powers() -> None:
@@ -157,10 +161,9 @@ def test_report_writes_the_numbers_of_the_advice_as_powers() -> None:
 # A missing companion.
 
 
-@pytest.mark.parametrize("missing", [(LOOSE,), (LOOSER,), (LOOSE, LOOSER)])
-def test_without_a_looser_run_truncation_claims_more(missing: tuple[str, ...]) -> None:
-    runs = companions(loose=LOOSE_NOISE, looser=LOOSER_NOISE, coarse=STEP_NOISE)
-    some = {name: found for name, found in runs.items() if name not in missing}
+def test_without_the_looser_run_truncation_claims_more() -> None:
+    runs = companions(loose=LOOSE_NOISE, coarse=STEP_NOISE)
+    some = {name: found for name, found in runs.items() if name != LOOSE}
     full, fewer = judge(runs), judge(some)
     for name in NAMES:
         more, before = row(fewer[name], "truncation"), row(full[name], "truncation")
@@ -186,7 +189,7 @@ def test_without_its_run_step_or_length_is_unknown(missing: str, source: str) ->
 
 def test_a_former_main_run_is_not_trusted_where_its_floor_hides_the_cuts() -> None:
     """It agrees with the new main run, as where the bond floor binds in both; the next looser run decides."""
-    runs = companions(looser=LOOSER_NOISE)
+    runs = companions() | {"weight_100": record(noise(2, 1e-4), weight=1e-6)}
     blind = judge(runs)["energy_density"]
     settings = replace(SETTINGS, unloosened=frozenset({LOOSE}))
     aware = judge(runs, settings=settings)["energy_density"]
@@ -211,8 +214,8 @@ def test_a_run_goes_on_without_a_companion_that_fails(
 
     monkeypatch.setattr(side_by_side, "simulate", failing)
     side = simulate_all(main, runs, threads=1, watch=SILENT)
-    assert list(side.companions) == [LOOSE, LOOSER]
-    assert list(side.companion_quenches) == [LOOSE, LOOSER]
+    assert list(side.companions) == [LOOSE]
+    assert list(side.companion_quenches) == [LOOSE]
     (event,) = side.failures
     assert event["kind"] == "companion_failed"
     assert str(event["detail"]).startswith(f"{COARSE}: ")
@@ -225,11 +228,11 @@ def test_a_process_that_is_ended_gets_a_second_try_of_its_own() -> None:
     pending: Future[QuantumRecord] = Future()
     pending.set_exception(BrokenProcessPool())
     quench = replace(free_quench(4), samples=1)
-    task, stop = side_by_side.Task(LOOSER, quench), Stop()
-    found = side_by_side.fetched(task, side_by_side.Background(None, {LOOSER: pending}), stop)
+    task, stop = side_by_side.Task(COARSE, quench), Stop()
+    found = side_by_side.fetched(task, side_by_side.Background(None, pending={COARSE: pending}), stop)
     np.testing.assert_array_equal(found.fields["energy_density"], simulate(quench).fields["energy_density"])
     assert found.last_state is None
-    assert "ended from outside" in str(side_by_side.failure_event(LOOSER, BrokenProcessPool())["detail"])
+    assert "ended from outside" in str(side_by_side.failure_event(COARSE, BrokenProcessPool())["detail"])
 
 
 def test_failures_reach_the_dataset(tmp_path: Path, monkeypatch: pytest.MonkeyPatch) -> None:

@@ -227,6 +227,6 @@ def test_budget_holds_the_tighter_bounds_and_the_state_its_own() -> None:
     assert uncut.last_state is not None
     apart = distance(record.last_state, uncut.last_state)
     known = state_numbers(record, apart)
-    assert known["distance_to_weight_10"] == apart
+    assert known["distance_to_weight_30"] == apart
     assert 0.02 * known["state_bound"] < apart <= known["state_bound"] + 1e-6
     assert not state_numbers(replace(record, trail=None), apart)

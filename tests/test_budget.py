@@ -31,22 +31,32 @@ def noisy_run(weight: float, power: float, *, seed: int = 2) -> TruncatedRun:
     return TruncatedRun(TRUE + weight**power * pattern, np.full((TIMES, PLACES), weight))
 
 
-@pytest.mark.parametrize("power", [0.5, 0.55, 0.6])
-def test_truncation_estimate_recovers_a_known_power_law(power: float) -> None:
-    runs = {"main": noisy_run(1e-8, power), "loose": noisy_run(1e-7, power), "looser": noisy_run(1e-6, power)}
-    np.testing.assert_allclose(sources.weight_power(**runs), power, atol=1e-9)
-    claimed, true = sources.truncation(**runs), np.abs(runs["main"].values - TRUE)
-    assert np.mean(true <= claimed) > 0.95
-    assert np.median(claimed) < 6.0 * np.median(true)
+@pytest.mark.parametrize("power", [0.7, 0.75, 0.8])
+def test_truncation_estimate_covers_a_known_power_law(power: float) -> None:
+    """At the power that it assumes it claims 2.6 local root mean squares of the error itself."""
+    main, loose = noisy_run(1e-8, power), noisy_run(3e-7, power)
+    claimed, error = sources.truncation(main=main, loose=loose), main.values - TRUE
+    assert np.mean(np.abs(error) <= claimed) > 0.95
+    assert np.median(claimed) < 6.0 * np.median(np.abs(error))
+    if power == sources.TYPICAL_POWER:
+        np.testing.assert_allclose(claimed, 2.6 * sources.local_scale(error), rtol=1e-8)
 
 
 def test_truncation_estimate_uses_the_weight_really_lost() -> None:
-    """Where the bond floor binds the companion loses far more than ten times the weight of the main run."""
-    main, loose, looser = (noisy_run(w, 0.6) for w in (1e-8, 1e-7, 1e-6))
-    bound = TruncatedRun(TRUE + 1e-3 * (main.values - TRUE), main.discarded_weight * 1e-3 ** (1 / 0.6))
-    ordinary = sources.truncation(main=main, loose=loose, looser=looser)
-    floored = sources.truncation(main=bound, loose=loose, looser=looser)
-    assert floored.max() < 0.05 * ordinary.max()
+    """Where the bond floor binds the companion loses far more than thirty times what the main run does."""
+    main, loose = (noisy_run(w, 0.75) for w in (1e-8, 3e-7))
+    bound = TruncatedRun(TRUE + 0.1 * (main.values - TRUE), main.discarded_weight * 0.1 ** (1 / 0.75))
+    ordinary = sources.truncation(main=main, loose=loose)
+    floored = sources.truncation(main=bound, loose=loose)
+    np.testing.assert_allclose(floored, 0.1 * ordinary, rtol=1e-9)
+
+
+def test_losses_further_apart_than_any_law_holds_claim_no_less() -> None:
+    """A main run that loses next to nothing: its error is claimed as if it had lost 1e-4 of the companion."""
+    loose = noisy_run(3e-7, 0.75)
+    far, further = (TruncatedRun(TRUE, np.full((TIMES, PLACES), weight)) for weight in (3e-11, 3e-14))
+    claimed = sources.truncation(main=far, loose=loose)
+    np.testing.assert_allclose(sources.truncation(main=further, loose=loose), claimed, rtol=1e-12)
 
 
 def test_truncation_estimate_lives_on_sites_and_bonds() -> None:
@@ -61,6 +71,23 @@ def test_step_estimate_recovers_a_known_law(order: int) -> None:
     claimed = sources.time_step(fine=TRUE + error[0.1], coarse=TRUE + error[0.2], step_ratio=2.0, order=order)
     assert np.mean(np.abs(error[0.1]) <= claimed) > 0.95
     assert np.median(claimed) < 6.0 * np.median(np.abs(error[0.1]))
+
+
+def test_step_estimate_leaves_out_part_of_what_the_cuts_do() -> None:
+    """Cuts alone, twice as large in the coarser run: at least 0.7 of their difference remains.
+
+    A step error far above stays.
+    """
+    cuts = 1e-6 * np.random.default_rng(1).standard_normal((TIMES, PLACES))
+
+    def claimed(*, step: Reals | float = 0.0, noise: Reals | float = 0.0) -> Reals:
+        runs = {"fine": TRUE + cuts, "coarse": TRUE + 2.0 * cuts + step}
+        return sources.time_step(**runs, step_ratio=2.0, order=2, noise=noise)
+
+    np.testing.assert_allclose(claimed(noise=cuts), np.sqrt(0.5) * claimed(), rtol=1e-6)
+    np.testing.assert_allclose(claimed(noise=10.0 * cuts), 0.7 * claimed(), rtol=1e-12)
+    far = 1e3 * cuts[::-1]
+    np.testing.assert_allclose(claimed(step=far, noise=cuts), claimed(step=far), rtol=1e-4)
 
 
 def test_length_estimate_keeps_the_depth_below_the_end() -> None:
@@ -118,10 +145,12 @@ def test_companions_differ_from_the_main_run_by_what_they_isolate() -> None:
     assert short is not None
     assert (24 - short) % 2 == 0
     runs = companion_quenches(main, shorter=free_quench(short, weight=1e-8, samples=2))
-    assert sorted(run.discarded_weight for run in runs.values()) == pytest.approx([1e-7, 1e-7, 1e-7, 1e-6])
-    assert runs[COARSE].steps == coarser_steps(main.steps) < main.steps
-    assert runs[COARSE].discarded_weight == runs[SHORT].discarded_weight == runs["weight_10"].discarded_weight
-    assert runs[SHORT].chain.sites == short
+    assert list(runs) == ["weight_30", COARSE, SHORT]
+    assert [run.discarded_weight for run in runs.values()] == pytest.approx([3e-7] * 3)
+    assert [run.bond_floor for run in runs.values()] == [main.bond_floor // 3] * 3
+    assert runs["weight_30"].steps == main.steps
+    assert runs[SHORT].steps == runs[COARSE].steps == coarser_steps(main.steps) < main.steps
+    assert (runs[COARSE].chain.sites, runs[SHORT].chain.sites) == (24, short)
     assert shorter_length(4) is None
 
 

@@ -14,7 +14,7 @@ from tests.budget_cases import (
     record,
 )
 from tnquench.budget.assess import PredictedLevel, RunSettings, assess
-from tnquench.budget.companions import COARSE, LOOSE, LOOSER, SHORT
+from tnquench.budget.companions import COARSE, LOOSE, SHORT
 from tnquench.budget.verdict import END_MARGIN, ObservableBudget
 from tnquench.conventions import ERROR_SOURCES, OBSERVABLE_PLACES, bond_positions
 
@@ -36,7 +36,7 @@ def verdict_budgets(
         norms=dict.fromkeys(NAMES, 0.0),
         start_error=dict.fromkeys(NAMES, ERROR),
     )
-    runs = {name: main for name in (LOOSE, LOOSER, COARSE)}
+    runs = {name: main for name in (LOOSE, COARSE)}
     runs[SHORT] = record(sites=LONG - 4)
     predicted, errors = {}, {}
     for name in NAMES:

@@ -13,7 +13,7 @@ from tests.budget_cases import (
     CUTS,
     END_NOISE,
     LOOSE_NOISE,
-    LOOSER_NOISE,
+    LOOSE_WEIGHT,
     NAMES,
     NORMS,
     ROUNDING,
@@ -32,21 +32,26 @@ from tests.budget_cases import (
 )
 from tnquench.budget import sources
 from tnquench.budget.assess import PredictedLevel
-from tnquench.budget.companions import COARSE, LOOSE, LOOSER, SHORT
+from tnquench.budget.companions import COARSE, LOOSE, SHORT, partner
 from tnquench.conventions import ERROR_SOURCES, Reals
 
 
 def claimed_truncation(name: str) -> Reals:
-    main, *looser_runs = (
+    main, loose = (
         sources.TruncatedRun(run.fields[name], run.discarded_weight)
-        for run in (record(), record(LOOSE_NOISE, weight=1e-7), record(LOOSER_NOISE, weight=1e-6))
+        for run in (record(), record(LOOSE_NOISE, weight=LOOSE_WEIGHT))
     )
-    return sources.truncation(main=main, loose=looser_runs[0], looser=looser_runs[1])
+    return sources.truncation(main=main, loose=loose)
 
 
 def claimed_step(name: str, *, fine: Perturb = unchanged, order: int = 4, ratio: float = 3.0) -> Reals:
+    values = record(fine).fields[name]
     return sources.time_step(
-        fine=record(fine).fields[name], coarse=record(STEP_NOISE).fields[name], step_ratio=ratio, order=order
+        fine=values,
+        coarse=record(STEP_NOISE).fields[name],
+        step_ratio=ratio,
+        order=order,
+        noise=values - record().fields[name],
     )
 
 
@@ -56,7 +61,7 @@ def claimed_length(name: str) -> Reals:
 
 
 ONE_SOURCE = [
-    ("truncation", {"loose": LOOSE_NOISE, "looser": LOOSER_NOISE}, claimed_truncation),
+    ("truncation", {"loose": LOOSE_NOISE}, claimed_truncation),
     ("time_step", {"coarse": STEP_NOISE}, claimed_step),
     ("length", {"short": END_NOISE}, claimed_length),
     ("none", {}, lambda name: np.zeros_like(record().fields[name])),
@@ -87,19 +92,53 @@ def test_step_source_knows_order_and_ratio_of_the_steps(order: int, ratio: float
         np.testing.assert_allclose(row(budget, "time_step"), claimed_step(name, order=order, ratio=ratio))
 
 
-def test_step_and_length_are_measured_from_the_companion_of_equal_weight() -> None:
-    """Truncation must not leak: both compare with the run at ten times the weight, not with the main run."""
-    runs = companions(loose=LOOSE_NOISE, looser=LOOSER_NOISE, coarse=STEP_NOISE, short=END_NOISE)
+def test_step_and_length_are_measured_from_the_companion_of_equal_settings() -> None:
+    """Nothing else must leak: the step from the run of equal weight, the ends from that of equal step too."""
+    runs = companions(loose=LOOSE_NOISE, coarse=STEP_NOISE, short=END_NOISE)
     for name, budget in judge(runs).items():
         truncation = claimed_truncation(name)
-        long = record(LOOSE_NOISE).fields[name]
-        blur = sources.WIDENING * sources.local_scale(long - record().fields[name]) + truncation
-        ends = sources.length(long=long, short=record(END_NOISE, sites=SHORTER).fields[name], noise=blur)
+        loose, coarse = record(LOOSE_NOISE).fields[name], record(STEP_NOISE).fields[name]
+        blur = sources.WIDENING * sources.local_scale(loose - record().fields[name]) + truncation
+        ends = sources.length(long=coarse, short=record(END_NOISE, sites=SHORTER).fields[name], noise=blur)
         np.testing.assert_allclose(row(budget, "truncation"), truncation, rtol=1e-12)
         np.testing.assert_allclose(row(budget, "time_step"), claimed_step(name, fine=LOOSE_NOISE), rtol=1e-12)
         assert ends.max() > 1e-4
         np.testing.assert_allclose(row(budget, "length"), ends, rtol=1e-9, atol=1e-15)
         np.testing.assert_allclose(budget.numerical, expected_numerical(budget), rtol=1e-12)
+
+
+def test_companions_of_an_older_dataset_find_their_partners() -> None:
+    """Ten and a hundred times the weight, step and length at ten times, the shorter chain with the main step:
+    each is compared with the run it differs from by one thing, the tightest one tells of the cuts."""
+    runs = {
+        "weight_100": record(noise(2, 1e-4), weight=1e-6),
+        "weight_10": record(LOOSE_NOISE, weight=1e-7),
+        COARSE: record(STEP_NOISE, weight=1e-7, time_step=0.3),
+        SHORT: record(END_NOISE, sites=SHORTER, weight=1e-7),
+    }
+    assert (partner(runs, COARSE), partner(runs, SHORT)) == ("weight_10", "weight_10")
+    without = {name: run for name, run in runs.items() if name != "weight_10"}
+    assert (partner(without, COARSE), partner(without, SHORT)) == (None, None)
+    for name, budget in judge(runs).items():
+        values = record().fields[name]
+        main, loose = (
+            sources.TruncatedRun(run.fields[name], run.discarded_weight)
+            for run in (record(), runs["weight_10"])
+        )
+        truncation = sources.truncation(main=main, loose=loose)
+        blur = sources.WIDENING * sources.local_scale(loose.values - values) + truncation
+        ends = sources.length(long=loose.values, short=runs[SHORT].fields[name], noise=blur)
+        np.testing.assert_allclose(row(budget, "truncation"), truncation, rtol=1e-12)
+        np.testing.assert_allclose(row(budget, "time_step"), claimed_step(name, fine=LOOSE_NOISE), rtol=1e-12)
+        np.testing.assert_allclose(row(budget, "length"), ends, rtol=1e-9, atol=1e-15)
+
+
+def test_a_shorter_chain_of_another_step_has_no_partner() -> None:
+    runs = companions()
+    assert (partner(runs, COARSE), partner(runs, SHORT)) == (LOOSE, COARSE)
+    assert partner({name: runs[name] for name in (LOOSE, SHORT)}, SHORT) is None
+    assert partner(runs | {SHORT: record(sites=SHORTER, weight=LOOSE_WEIGHT, time_step=0.2)}, SHORT) is None
+    assert partner(runs | {SHORT: record(sites=SHORTER, weight=1e-7, time_step=0.3)}, SHORT) is None
 
 
 def test_without_companions_their_sources_are_unknown() -> None:
@@ -181,7 +220,7 @@ def test_a_run_is_judged_by_the_observables_it_holds() -> None:
         main = record(names=names)
         runs = {
             name: record(LOOSE_NOISE, names=names, weight=weight)
-            for name, weight in ((LOOSE, 1e-7), (LOOSER, 1e-6), (COARSE, 1e-7))
+            for name, weight in ((LOOSE, LOOSE_WEIGHT), (COARSE, LOOSE_WEIGHT))
         }
         some = level(shift=0.1, grid=1e-3)
         partial = replace(some, fields={name: some.fields[name] for name in names if name in NAMES})
@@ -203,8 +242,8 @@ def test_without_its_prediction_an_observable_keeps_the_light_cone_of_the_others
     grid = level(cone=(-1.0, 2.0))
     energy = replace(grid, fields={"energy_density": grid.fields["energy_density"]})
     much = noise(1, 3e-3)
-    runs = {name: record(much, names=names, weight=1e-7) for name in (LOOSE, LOOSER, COARSE)}
-    runs[SHORT] = record(END_NOISE, names=names, sites=SHORTER)
+    runs = {name: record(much, names=names, weight=LOOSE_WEIGHT) for name in (LOOSE, COARSE)}
+    runs[SHORT] = record(END_NOISE, names=names, sites=SHORTER, weight=LOOSE_WEIGHT)
     with_cone = judge(runs, {"euler": energy}, main=record(names=names))["transverse_magnetisation"]
     without = judge(runs, {}, main=record(names=names))["transverse_magnetisation"]
     np.testing.assert_array_equal(with_cone.numerical, without.numerical)

@@ -40,7 +40,7 @@ def test_run_prints_its_folder_alone(finished: tuple[Path, Answer]) -> None:
 def test_run_tells_each_stage_in_one_line_and_then_the_verdict(finished: tuple[Path, Answer]) -> None:
     _, answer = finished
     expected = ["prediction", "main run: 8 sites, t up to 0.5, discarded weight 1e-8, step 0.1667"]
-    expected += [f"companion {name}" for name in ("weight_10", "weight_100", "step_2", "length")]
+    expected += [f"companion {name}" for name in ("weight_30", "step_2", "length")]
     expected += ["budget and dataset", "report"]
     assert answer.lines[: len(expected)] == expected
     assert "energy density" in answer.lines[len(expected)]
@@ -52,7 +52,7 @@ def test_run_leaves_dataset_report_and_figures(finished: tuple[Path, Answer]) ->
     dataset = open_run(folder)
     assert set(NAMES) <= set(dataset.quantum)
     assert list(dataset.hydrodynamics) == ["euler"]
-    assert len(dataset.companions) == 4
+    assert len(dataset.companions) == 3
 
 
 def test_dataset_of_a_run_is_sound(finished: tuple[Path, Answer]) -> None:
@@ -94,7 +94,7 @@ def test_forecast_foretells_the_run(finished: tuple[Path, Answer], tmp_path: Pat
     found = dataset.quantum["bond_dimension"].values.max(axis=1)
     np.testing.assert_allclose(numbers["bond_dimension"][1:], found[1:], rtol=0.3, atol=0.0)
     assert numbers["disk_bytes"] == pytest.approx((folder / "run.h5").stat().st_size, rel=0.25)
-    assert numbers["companions"] == 4
+    assert numbers["companions"] == 3
     assert numbers["total_memory_bytes"] == 3 * numbers["memory_bytes"]
     assert numbers["wall_seconds"] == max(numbers["main_seconds"], numbers["companion_seconds"] / 2)
     assert [entry.name for entry in tmp_path.iterdir()] == ["tiny.toml"]

@@ -42,9 +42,14 @@ RANKS = {
     "__main__": 17,
 }
 
-#: What the report may see: files, and the budget's norms and windows; any report can be rebuilt from its
-#: dataset.
-REPORT_SEES = {"tnquench.conventions", "tnquench.errors", "tnquench.budget.verdict"}
+#: What the report may see: files, the budget's norms and windows, and how honest it was found to be; any
+#: report can be rebuilt from its dataset.
+REPORT_SEES = {
+    "tnquench.conventions",
+    "tnquench.errors",
+    "tnquench.budget.honesty",
+    "tnquench.budget.verdict",
+}
 
 #: Evolution and prediction never see each other: their agreement must mean something.
 APART = {("observables", "bethe"), ("hydro", "evolution"), ("hydro", "observables"), ("hydro", "model")}

@@ -190,14 +190,14 @@ def lawful(quench: Quench) -> QuantumRecord:
 
 def claims(quench: Quench) -> tuple[float, float]:
     """Largest errors over all observables that the estimates would claim for truncation and step."""
-    weights = [10.0**power * quench.discarded_weight for power in range(3)]
-    main, loose, looser = (lawful(replace(quench, discarded_weight=weight)) for weight in weights)
+    weights = [quench.discarded_weight, 30.0 * quench.discarded_weight]
+    main, loose = (lawful(replace(quench, discarded_weight=weight)) for weight in weights)
     coarse = lawful(replace(quench, discarded_weight=weights[1], steps=quench.steps // 2))
     ratio = quench.steps / (quench.steps // 2)
     cutting, stepping = 0.0, 0.0
     for name in NAMES:
-        runs = [sources.TruncatedRun(run.fields[name], run.discarded_weight) for run in (main, loose, looser)]
-        found = sources.truncation(main=runs[0], loose=runs[1], looser=runs[2])
+        runs = [sources.TruncatedRun(run.fields[name], run.discarded_weight) for run in (main, loose)]
+        found = sources.truncation(main=runs[0], loose=runs[1])
         cutting = max(cutting, float(found.max()))
         found = sources.time_step(
             fine=loose.fields[name],

@@ -7,6 +7,7 @@ from __future__ import annotations
 
 import base64
 import re
+from dataclasses import replace
 from pathlib import Path
 from typing import Any
 
@@ -26,10 +27,14 @@ from tests.report_cases import (
     written,
 )
 from tests.synthetic_run import NAMES
+from tnquench.budget.honesty import MEASURED, sentence
 from tnquench.conventions import OBSERVABLE_PLACES
 from tnquench.dataset.reader import Run, open_run
 from tnquench.errors import InputError
-from tnquench.report.figures import comparisons, figure
+from tnquench.report import page as page_module
+from tnquench.report import sources as report_sources
+from tnquench.report.comparison import Comparison
+from tnquench.report.figures import Chapter, chapters, comparisons, figure
 from tnquench.report.page import write_report
 from tnquench.report.references import EULER_KEYS, QUANTUM_KEYS, REFERENCES, TROTTER_KEYS, citations
 from tnquench.report.verdict import headline
@@ -89,6 +94,25 @@ def test_nothing_is_loaded_and_nothing_runs(full: tuple[Path, Page, Run]) -> Non
     assert "@import" not in markup
     assert "url(" not in markup
     assert "http" not in re.sub(r"base64,[A-Za-z0-9+/=]+", "", markup)
+
+
+def test_error_budget_cites_the_study_of_exactly_solved_cases(
+    full: tuple[Path, Page, Run], tmp_path: Path, monkeypatch: pytest.MonkeyPatch
+) -> None:
+    """With the command that measures it, as text; a run without measured errors has nothing to cite."""
+    _, page, _ = full
+    assert sentence().removesuffix(".") in page.texts["budget"]
+    assert MEASURED.command in page.texts["budget"]
+    monkeypatch.setattr(report_sources, "MEASURED", replace(MEASURED, command="<b>study</b>"))
+    monkeypatch.setattr(page_module, "chapters", without_pictures)
+    assert "<b>study</b>" in page_of(written(tmp_path)).texts["budget"]
+    assert "<b>study" not in (tmp_path / "report.html").read_text(encoding="utf-8")
+    alone = page_of(written(tmp_path / "alone", companions=False))
+    assert "exactly solved" not in " ".join(alone.texts.values())
+
+
+def without_pictures(run: Run, fields: list[Comparison]) -> list[Chapter]:
+    return [replace(chapter, plates=()) for chapter in chapters(run, fields)]
 
 
 def test_every_picture_is_described(full: tuple[Path, Page, Run]) -> None:

@@ -36,7 +36,7 @@ class QuantumSide:
     """The main run and its companions with their settings, and events of the choice of settings.
 
     failures : events of companions that failed; state_distance : norm of the difference of the last states of
-    the main run and of the companion at ten times its weight, nan where it is not known
+    the main run and of the looser companion, nan where it is not known
     settings : what the budget must know, if it does not follow from the quench
     """
 

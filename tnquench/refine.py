@@ -14,7 +14,7 @@ from threadpoolctl import threadpool_limits
 
 from tnquench.assemble import budget_settings, build_prediction, build_quench
 from tnquench.budget.assess import RunSettings
-from tnquench.budget.companions import COARSE, SHORT, WEIGHT, WEIGHT_RATIO, CompanionRun, partner
+from tnquench.budget.companions import COARSE, REFINEMENT, SHORT, WEIGHT, CompanionRun, partner
 from tnquench.checkpoints import CHECKPOINTS, Store
 from tnquench.config.load import read_config
 from tnquench.config.schema import Config
@@ -107,7 +107,7 @@ def refined_quench(old: Run, *, weight: float | None, time_step: float | None) -
         problem = "holds no main run to refine; tnquench run CONFIG makes one"
         raise InputError(str(old.path), [problem])
     had = old.provenance["main_run"]
-    new = _rounded(had["discarded_weight"] / WEIGHT_RATIO) if weight is None else weight
+    new = _rounded(had["discarded_weight"] / REFINEMENT) if weight is None else weight
     step = had["time_step"] if time_step is None else time_step
     problems = []
     if not 0.0 < new <= LARGEST_FRACTION * had["discarded_weight"]:

@@ -170,8 +170,7 @@ def failure_event(name: str, error: BaseException) -> dict[str, object]:
 
 
 def state_distance(main: QuantumRecord, companions: Mapping[str, QuantumRecord]) -> float:
-    """Return the norm of the difference of the last states of the main run and of the one at ten times its
-    weight.
+    """Return the norm of the difference of the last states of the main run and of the looser one.
 
     Exact up to rounding; nan where a state is missing.
     """

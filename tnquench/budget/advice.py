@@ -1,22 +1,22 @@
 """Advice in words: which source limits a run in each part of its time, what would help, and at what cost.
 
-Predictions are forecasts, not measurements: the truncation error falls once more as it has fallen between the
-companions, the step's with the order of the scheme, and the cost follows the growth law of the pilot
-runs (the cube root of each bond dimension grows linearly with the logarithm of the weight).
+Predictions are forecasts, not measurements: the truncation error falls with the power of the weight that the
+budget itself assumes, the step's with the order of the scheme, and the cost follows the growth law of the
+pilot runs (the cube root of each bond dimension grows linearly with the logarithm of the weight).
 """
 
 from __future__ import annotations
 
 from collections.abc import Mapping
 from dataclasses import dataclass
-from itertools import pairwise
+from itertools import groupby, pairwise
 from typing import Any
 
 import numpy as np
 from scipy.optimize import nnls
 
 from tnquench.budget import sources
-from tnquench.budget.companions import WEIGHT_RATIO, CompanionRun, ladder
+from tnquench.budget.companions import REFINEMENT, WEIGHT_RATIO, CompanionRun, ladder
 from tnquench.budget.verdict import ObservableBudget
 from tnquench.conventions import ERROR_SOURCES, PHYSICAL_SOURCES, Reals
 from tnquench.observables.quench import QuantumRecord, Quench
@@ -80,7 +80,7 @@ def advise(
     name = max(judged, key=lambda each: judged[each].numerical_norm.max() / main.norms[each])
     parts = _parts(len(main.times))
     windows = [_window(judged[name], main.times, part) for part in parts]
-    remedy = _remedy(windows[-1], parts[-1], name, main, companions, judged[name], quench)
+    remedy = _remedy(windows[-1], parts[-1], main, companions, judged[name], quench)
     return {
         "observable": name,
         "windows": windows,
@@ -134,7 +134,6 @@ def _mean(values: Reals) -> float:
 def _remedy(
     window: Mapping[str, Any],
     part: slice,
-    name: str,
     main: QuantumRecord,
     companions: Mapping[str, CompanionRun],
     budget: ObservableBudget,
@@ -143,8 +142,8 @@ def _remedy(
     """Return what helps against the dominant source of a part of the time."""
     norms, error = _norms(budget, part), float(window["error"])
     if window["dominant"] in ("truncation", "preparation"):
-        gained = norms["truncation"] * (1.0 - _gain(name, main, companions, part))
-        gained += norms["preparation"] * (1.0 - WEIGHT_RATIO**-START_POWER)
+        gained = norms["truncation"] * (1.0 - REFINEMENT**-sources.TYPICAL_POWER)
+        gained += norms["preparation"] * (1.0 - REFINEMENT**-START_POWER)
         return Remedy("weight", max(error - gained, 0.0), tighter_cost(main, companions, quench))
     if window["dominant"] == "time_step":
         gained = norms["time_step"] * (1.0 - 0.5**quench.trotter_order)
@@ -152,20 +151,6 @@ def _remedy(
     if window["dominant"] == "length":
         return Remedy("sites", float("nan"), 1.5)
     return Remedy("", error, 1.0)
-
-
-def _gain(name: str, main: QuantumRecord, companions: Mapping[str, CompanionRun], part: slice) -> float:
-    """Return the factor by which a tenfold smaller weight reduces the truncation error in a part of the time.
-
-    It is the one by which the last tenfold one has reduced the difference of successive runs, between those
-    of a power 1 and of the least power; the latter where nothing is measured.
-    """
-    rungs = [companions[rung].fields[name][part] for rung in ladder(companions)[:2]]
-    least = float(WEIGHT_RATIO**-sources.LEAST_POWER)
-    if len(rungs) < 2:
-        return least
-    narrow, wide = _mean(rungs[0] - main.fields[name][part]), _mean(rungs[1] - rungs[0])
-    return float(np.clip(narrow / max(wide, np.finfo(np.float64).tiny), 1.0 / WEIGHT_RATIO, least))
 
 
 def tighter_cost(main: QuantumRecord, companions: Mapping[str, CompanionRun], quench: Quench) -> float:
@@ -177,16 +162,17 @@ def tighter_cost(main: QuantumRecord, companions: Mapping[str, CompanionRun], qu
     """
     rungs = ladder(companions)
     if not rungs:
-        return float(np.sqrt(WEIGHT_RATIO))
+        return float(np.sqrt(REFINEMENT))
     loose = companions[rungs[0]]
+    further = float(np.log(REFINEMENT) / np.log(_looser_by(loose, quench)))
     if not isinstance(loose, QuantumRecord):
-        return max(1.0, main.seconds / max(loose.seconds, 1e-9))
+        return float(max(1.0, main.seconds / max(loose.seconds, 1e-9)) ** further)
     runs = [main, *(run for run in (companions[rung] for rung in rungs) if isinstance(run, QuantumRecord))]
     work = np.array([_work(run.cuts[-1], run.bond_dimension) for run in runs])
     scale = np.maximum(work[0], 1.0)
     costs, _ = nnls(work / scale, np.array([run.cpu_seconds for run in runs]))
     roots = np.cbrt(main.bond_dimension)
-    grown = (2.0 * roots - np.minimum(np.cbrt(loose.bond_dimension), roots)) ** 3
+    grown = (roots + further * np.maximum(roots - np.cbrt(loose.bond_dimension), 0.0)) ** 3
     bonds = np.where(main.bond_dimension > quench.bond_floor, grown, main.bond_dimension)
     sites = np.arange(1, bonds.shape[1] + 1)
     depth = np.minimum(np.minimum(sites, sites[::-1]), 15)
@@ -196,6 +182,12 @@ def tighter_cost(main: QuantumRecord, companions: Mapping[str, CompanionRun], qu
     return float(max(1.0, then @ costs / max(main.cpu_seconds, 1e-9)))
 
 
+def _looser_by(loose: CompanionRun, quench: Quench) -> float:
+    """Return how many times the main run's weight a companion has; where it does not say, the usual ratio."""
+    ratio = loose.weight_asked / quench.discarded_weight
+    return float(ratio) if np.isfinite(ratio) and ratio > 1.0 else WEIGHT_RATIO
+
+
 def _work(cuts: float, bonds: Reals) -> Reals:
     """Return the number of cuts and of bonds cubed that they cut, (2,); bonds : (time, bond)."""
     middle = 0.5 * (bonds[1:] + bonds[:-1])
@@ -203,18 +195,22 @@ def _work(cuts: float, bonds: Reals) -> Reals:
 
 
 def _dominance(name: str, windows: list[dict[str, Any]]) -> str:
-    """Say which source dominates in each part of the time."""
+    """Say which source dominates in each part of the time, parts with the same one together."""
     said = name.replace("_", " ")
-    if len({window["dominant"] for window in windows}) == 1:
-        shares = sorted(round(100 * window["share"]) for window in windows)
-        span = f"{shares[0]} to {shares[-1]} %" if shares[0] < shares[-1] else f"{shares[0]} %"
-        named = WORDS[windows[0]["dominant"]]
-        return f"The error of the {said} comes mostly from {named} at all times ({span} of it)."
+    spans = [list(span) for _, span in groupby(windows, key=lambda window: window["dominant"])]
     told = [
-        f"{WORDS[window['dominant']]} up to t = {window['until']:g} ({round(100 * window['share'])} %)"
-        for window in windows
+        f"{WORDS[span[0]['dominant']]} up to t = {span[-1]['until']:g} ({_share(span)})" for span in spans
     ]
+    if len(spans) == 1:
+        named = WORDS[windows[0]["dominant"]]
+        return f"The error of the {said} comes mostly from {named} at all times ({_share(windows)} of it)."
     return f"The error of the {said} comes mostly from {', then from '.join(told)}."
+
+
+def _share(windows: list[dict[str, Any]]) -> str:
+    """Say the shares of the dominant source in some parts of the time."""
+    shares = sorted(round(100 * window["share"]) for window in windows)
+    return f"{shares[0]} to {shares[-1]} %" if shares[0] < shares[-1] else f"{shares[0]} %"
 
 
 def _sentence(remedy: Remedy, window: Mapping[str, Any], budget: ObservableBudget, part: slice) -> str:

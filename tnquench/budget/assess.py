@@ -10,7 +10,7 @@ import numpy as np
 
 from tnquench.budget import sources
 from tnquench.budget.bounds import layer_bound, light_cone_bound
-from tnquench.budget.companions import COARSE, SHORT, CompanionRun, ladder, partner
+from tnquench.budget.companions import COARSE, SHORT, CompanionRun, ladder, partner, rung_of
 from tnquench.budget.verdict import (
     SHARP_REACH,
     TIGHTER_BOUNDS,
@@ -73,18 +73,21 @@ def quantum_sources(
         return found | {"truncation": unknown, "time_step": unknown, "length": unknown}
     found["truncation"] = _truncation(name, main, companions, settings)
     if COARSE in companions:
+        fine = _beside(COARSE, companions, main).fields[name]
         at_companions = sources.time_step(
-            fine=_beside(COARSE, companions, main).fields[name],
+            fine=fine,
             coarse=companions[COARSE].fields[name],
             step_ratio=settings.step_ratio,
             order=settings.trotter_order,
+            noise=fine - values,
         )
         found["time_step"] = at_companions * settings.shrunk**settings.trotter_order
     else:
         found["time_step"] = sources.unknown(norm=norm, shape=values.shape)
     if SHORT in companions:
         long = _beside(SHORT, companions, main).fields[name]
-        noise = sources.WIDENING * sources.local_scale(long - values) + found["truncation"]
+        cut_alike = companions.get(rung_of(companions, SHORT) or "", main).fields[name]
+        noise = sources.WIDENING * sources.local_scale(cut_alike - values) + found["truncation"]
         found["length"] = sources.length(long=long, short=companions[SHORT].fields[name], noise=noise)
     else:
         found["length"] = sources.unknown(norm=norm, shape=values.shape)
@@ -109,24 +112,20 @@ def _truncation(
 
     One that was a main run has the same bond floor and is blind to what it hides: the next looser one is
     asked too, and the larger claim counts. Without any that differ by the cuts alone the one with the coarser
-    step stands in, whose difference contains the step's error; without that the rigorous bound is claimed.
+    step stands in, whose difference contains the step's error, with the least power of the weight; without
+    that the rigorous bound is claimed.
     """
     rungs = [rung for rung in ladder(companions) if np.isfinite(companions[rung].discarded_weight).all()]
-    rungs = rungs or [rung for rung in (COARSE,) if rung in companions]
+    own = _truncated(main, name)
+    if not rungs and COARSE in companions:
+        stand_in = _truncated(companions[COARSE], name)
+        return sources.truncation(main=own, loose=stand_in, power=sources.LEAST_POWER)
     if not rungs:
         bounds = [_angle_bound(name, main), *_tighter_bounds(name, main).values()]
         return np.asarray(np.minimum.reduce(bounds))
-    claims = []
-    for rung, next_one in zip(rungs, [*rungs[1:], None], strict=True):
-        claims.append(
-            sources.truncation(
-                main=_truncated(main, name),
-                loose=_truncated(companions[rung], name),
-                looser=None if next_one is None else _truncated(companions[next_one], name),
-            )
-        )
-        if rung not in settings.unloosened:
-            break
+    loosened = [index for index, rung in enumerate(rungs) if rung not in settings.unloosened]
+    asked = rungs[: loosened[0] + 1] if loosened else rungs
+    claims = [sources.truncation(main=own, loose=_truncated(companions[rung], name)) for rung in asked]
     return np.asarray(np.maximum.reduce(claims))
 
 

@@ -31,6 +31,7 @@ from dataclasses import dataclass
 
 import numpy as np
 
+from tnquench.budget.companions import LOOSE
 from tnquench.conventions import Integers, Reals
 from tnquench.evolution.light_cone import CutTrail, Extents
 from tnquench.observables.quench import QuantumRecord
@@ -80,9 +81,9 @@ def light_cone_bound(trail: CutTrail, name: str, *, samples: int) -> Reals:
 def state_numbers(main: QuantumRecord, distance: float) -> dict[str, float]:
     """Return what is known of the last state as a vector; empty where the run has not kept its cuts.
 
-    distance : norm of the difference from the last state of the companion at ten times the weight
+    distance : norm of the difference from the last state of the looser companion
     "state_bound" : rigorous bound on the norm of the difference from the uncut evolution, by the angles of
-    layers. "distance_to_weight_10" : the measured distance, exact. It bounds how far the two runs differ in
+    layers. "distance_to_weight_30" : the measured distance, exact. It bounds how far the two runs differ in
     any observable, spread times it at most, but it gives no bound on either run's error: the two have starts
     of their own, whose distance is only estimated, and the looser run's bound is the larger one. It shows how
     far bounds lie above what happens.
@@ -90,7 +91,7 @@ def state_numbers(main: QuantumRecord, distance: float) -> dict[str, float]:
     if main.trail is None:
         return {}
     angle = float(np.arcsin(sine_of_layers(main.trail)).sum())
-    known = {} if np.isnan(distance) else {"distance_to_weight_10": distance}
+    known = {} if np.isnan(distance) else {f"distance_to_{LOOSE}": distance}
     return {"state_bound": 2.0 * float(np.sin(0.5 * min(angle, np.pi)))} | known
 
 

@@ -1,7 +1,7 @@
-"""Companion runs: the main run again at looser settings, each cheaper than the main run.
+"""Companion runs: the main run again at looser settings, together no more work than the main run.
 
-With w the main weight, runs at (r w), (r^2 w), (r w, at least twice the step) and (r w, a shorter chain)
-isolate each source of error by differences at otherwise equal settings.
+With w the main weight, runs at (r w), (r w, at least twice the step) and (r w, that step, a shorter chain)
+isolate each source of error: each differs from the one before it by one thing alone.
 """
 
 from __future__ import annotations
@@ -16,19 +16,24 @@ import numpy as np
 from tnquench.conventions import Reals
 from tnquench.observables.quench import Quench
 
-#: Factor r between the weights of neighbouring companions.
-WEIGHT_RATIO = 10.0
+#: Factor r by which the weight of all companions is larger than the main run's, and the one by which their
+#: bond floors and ceilings are smaller. At ten times the weight runs are dear and may err as little as the
+#: main run, at a hundred times errors saturate and hide that of the step.
+WEIGHT_RATIO, BOND_RATIO = 30.0, 3
+
+#: A refined run has so many times less weight than the run it refines, where its user does not choose.
+REFINEMENT = 10.0
 
 WEIGHT = "weight_"
-LOOSE, LOOSER, COARSE, SHORT = "weight_10", "weight_100", "step_2", "length"
+LOOSE, COARSE, SHORT = f"{WEIGHT}{WEIGHT_RATIO:g}", "step_2", "length"
 
 
 #: What becomes of the budget without a companion.
 WITHOUT: dict[str, str] = {
-    LOOSE: "truncation is estimated from a looser run and the least power of the weight, step and ends from "
-    "the main run, which claims more",
-    LOOSER: "the power of the weight is not measured, and the least one claims more",
-    COARSE: "the error of the time step is unknown and claimed as twice the norm of each observable",
+    LOOSE: "truncation is estimated from the run with the longer step and the least power of the weight, the "
+    "error of the step from the main run, which claims more",
+    COARSE: "the error of the time step is unknown and claimed as twice the norm of each observable, and the "
+    "influence of the ends is measured from the main run, which claims more",
     SHORT: "the influence of the ends is unknown and claimed as twice the norm of each observable",
 }
 
@@ -62,16 +67,34 @@ def ladder(companions: Mapping[str, CompanionRun]) -> list[str]:
     return sorted(rungs, key=lambda name: float(name.removeprefix(WEIGHT)))
 
 
+def rung_of(companions: Mapping[str, CompanionRun], name: str) -> str | None:
+    """Return the companion that has the weight of `name` and the main run's step and length, None if it is
+    missing.
+
+    Where weights are not known it is the tightest one.
+    """
+    weight, rungs = companions[name].weight_asked, ladder(companions)
+    if np.isnan(weight):
+        return next(iter(rungs), None)
+    return next((rung for rung in rungs if isclose(companions[rung].weight_asked, weight)), None)
+
+
 def partner(companions: Mapping[str, CompanionRun], name: str) -> str | None:
     """Return the companion from which `name` differs by the step or the length alone, None if it is missing.
 
-    It has the same weight; where weights are not known it is the one at ten times the main run's.
+    For the longer step that is the run of the same weight, for the shorter chain the one of the same weight
+    and step, be it the main run's step (as in older datasets) or the longer one.
     """
-    weight = companions[name].weight_asked
-    if np.isnan(weight):
-        return LOOSE if LOOSE in companions else None
-    rungs = (rung for rung in ladder(companions) if isclose(companions[rung].weight_asked, weight))
-    return next(rungs, None)
+    rung = rung_of(companions, name)
+    if name == COARSE or rung is None:
+        return rung
+    step, weight = companions[name].time_step, companions[name].weight_asked
+    if np.isnan(step) or isclose(step, companions[rung].time_step):
+        return rung
+    coarse = companions.get(COARSE)
+    if coarse is None or not (isclose(coarse.time_step, step) and isclose(coarse.weight_asked, weight)):
+        return None
+    return COARSE
 
 
 def shorter_length(sites: int) -> int | None:
@@ -86,28 +109,24 @@ def companion_quenches(main: Quench, *, shorter: Quench | None) -> dict[str, Que
 
     shorter : the main run on a shorter chain, or None to leave the influence of the ends unestimated
     """
-    loose, looser = loosened(main, times=1), loosened(main, times=2)
-    runs = {
-        LOOSE: loose,
-        LOOSER: looser,
-        COARSE: replace(loose, steps=coarser_steps(main.steps)),
-    }
+    loose, steps = loosened(main), coarser_steps(main.steps)
+    runs = {LOOSE: loose, COARSE: replace(loose, steps=steps)}
     if shorter is not None:
-        runs[SHORT] = loosened(shorter, times=1)
+        runs[SHORT] = replace(loosened(shorter), steps=steps)
     return runs
 
 
-def loosened(quench: Quench, *, times: int) -> Quench:
-    """Return a quench with r^times its weight and, as often, half its bond floor and ceiling.
+def loosened(quench: Quench) -> Quench:
+    """Return a quench with r times its weight and a third of its bond floor and ceiling.
 
     Where floor or ceiling bind rather than the weight, runs that differ by the weight alone would be
     identical and show no error at all.
     """
     return replace(
         quench,
-        discarded_weight=WEIGHT_RATIO**times * quench.discarded_weight,
-        bond_floor=max(1, quench.bond_floor // 2**times),
-        bond_ceiling=max(1, quench.bond_ceiling // 2**times),
+        discarded_weight=WEIGHT_RATIO * quench.discarded_weight,
+        bond_floor=max(1, quench.bond_floor // BOND_RATIO),
+        bond_ceiling=max(1, quench.bond_ceiling // BOND_RATIO),
     )
 
 

@@ -257,15 +257,15 @@ class _WeightPilot:
 
 
 def _weight_pilot(quench: Quench) -> _WeightPilot:
-    """Run a pilot with the two companions that its truncation estimate needs."""
-    loose_quench = loosened(quench, times=1)
-    records = [simulate(run) for run in (quench, loose_quench, loosened(quench, times=2))]
+    """Run a pilot with the companion that its truncation estimate needs."""
+    loose_quench = loosened(quench)
+    records = [simulate(run) for run in (quench, loose_quench)]
     claimed = 0.0
     for name in records[0].fields:
-        main, loose, looser = (
+        main, loose = (
             sources.TruncatedRun(record.fields[name], record.discarded_weight) for record in records
         )
-        claimed = max(claimed, float(sources.truncation(main=main, loose=loose, looser=looser).max()))
+        claimed = max(claimed, float(sources.truncation(main=main, loose=loose).max()))
     return _WeightPilot(loose_quench, records[1], claimed)
 
 

@@ -20,7 +20,7 @@ from tnquench.config.document import effective_toml
 from tnquench.config.points import Point
 from tnquench.errors import InputError
 
-#: More processes of one run would idle: a main quench and its four companions.
+#: A main quench and its companions, or the charges of its bonds: few runs use more.
 MOST_THREADS = 5
 
 

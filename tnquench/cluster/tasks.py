@@ -7,7 +7,7 @@ from collections.abc import Iterable, Iterator
 from dataclasses import dataclass, replace
 from pathlib import Path
 
-from tnquench.budget.companions import COARSE, LOOSE, LOOSER, SHORT, shorter_length
+from tnquench.budget.companions import COARSE, LOOSE, SHORT, shorter_length
 from tnquench.config.schema import Config
 from tnquench.config.stretch import stretched_sites
 
@@ -104,7 +104,7 @@ def quenches_of(config: Config) -> tuple[str, ...]:
 
 def _companions(sites: int) -> tuple[str, ...]:
     short = () if shorter_length(sites) is None else (SHORT,)
-    return (LOOSE, LOOSER, COARSE, *short)
+    return (LOOSE, COARSE, *short)
 
 
 def tasks_of(whole: Task, quenches: Iterable[str]) -> Iterator[Task]:

@@ -1,7 +1,7 @@
 """The table of everything a dataset may hold: dimensions, units and meaning of each variable, group by group.
 
 Groups are named by their path in the file, without a leading slash: "quantum", "hydrodynamics/euler",
-"budget/energy_density", "companions/weight_10". What a group may hold depends on nothing but that name; of
+"budget/energy_density", "companions/weight_30". What a group may hold depends on nothing but that name; of
 the observables a run holds those of its model, which the root's attribute "observables" lists.
 """
 

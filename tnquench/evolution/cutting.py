@@ -222,8 +222,7 @@ def _by_subspace(blocks: Reals, guess: Reals, rule: CutRule, total: float) -> tu
     extra = max(EXTRA_DIRECTIONS, int(EXTRA_FRACTION * held), -(-rule.bond_floor // sectors) - held)
     if held + extra > LARGEST_FRACTION * most:
         return _by_gram(blocks), 0.0
-    probes = np.concatenate([guess, rule.random.standard_normal((sectors, extra, columns))], axis=1)
-    basis = orthonormal(product(probes, blocks.swapaxes(1, 2)))
+    basis = orthonormal(_sampled(blocks, guess, rule.random.standard_normal((sectors, extra, columns))))
     image = product(basis, blocks)
     allowed = OUTSIDE_SHARE * rule.weight_target * total
     while (missing := total - float(np.vdot(image, image))) > allowed:
@@ -235,6 +234,11 @@ def _by_subspace(blocks: Reals, guess: Reals, rule: CutRule, total: float) -> tu
         extra *= 2
     leading = int(LEADING_FRACTION * held) if held >= LEADING_FROM else 0
     return _rotated(basis, image, leading=leading), max(missing, 0.0)
+
+
+def _sampled(blocks: Reals, guess: Reals, probes: Reals) -> Reals:
+    """Return the images of a warm start and of random directions under the transposed blocks, in rows."""
+    return product(np.concatenate([guess, probes], axis=1), blocks.swapaxes(1, 2))
 
 
 def _outside(blocks: Reals, basis: Reals, image: Reals, probes: Reals) -> Reals:

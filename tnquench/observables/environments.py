@@ -103,15 +103,24 @@ class Environments:
         self.depth = depth
         self.known: dict[tuple[int, int, Letters], Environment] = {}
         self.blocks: dict[int, Reals] = {}
+        self.centre = state.centre
 
     def follow_centre(self) -> None:
-        """Forget what the present position of the centre has made invalid or too far away.
+        """Forget what the present position of the centre has made invalid or useless.
 
-        An environment on a bond stays valid while the centre is on the other side of that bond.
+        An environment on a bond stays valid while the centre is on the other side of that bond. Those ahead
+        will be used again; of those behind only the last site's, to grow by one letter.
         """
-        centre = self.state.centre
+        forwards, self.centre = self.state.centre - self.centre, self.state.centre
         self.blocks.clear()
-        self.known = {key: value for key, value in self.known.items() if abs(key[0] - centre) <= self.depth}
+
+        def useful(site: int, side: int, letters: Letters) -> bool:
+            if side * forwards > 0:
+                return 0 <= (site - self.centre) * side <= self.depth
+            return site == self.centre + side and len(letters) < self.depth
+
+        if forwards:
+            self.known = {key: value for key, value in self.known.items() if useful(*key)}
 
     def site(self, site: int) -> Reals:
         """Return `site_blocks` of a site."""

@@ -30,6 +30,9 @@ from tnquench.observables.strings import (
     sides,
 )
 
+#: Entries of a block from which right charges are treated one by one.
+SMALL_BLOCK = 2500
+
 #: Coefficient of a string in the operator of an observable at a place.
 Uses = dict[tuple[str, int], float]
 
@@ -165,31 +168,41 @@ def overlaps(environments: Environments, site: int, closing: Closing) -> Reals:
 
     Shape (bra's left charge, ket's right charge, rows, columns). A row is (left environment, real or
     imaginary part, copy of the ket's operator), a column (right environment, part, copy of the bra's
-    operator). One left charge is done at a time, which bounds the memory in use.
+    operator). One left charge is done at a time, of large blocks one right charge too: it bounds the memory
+    in use.
     """
     blocks = environments.site(site)
     sectors, _, copies, *size = blocks.shape
-    charges = np.arange(sectors)
     left = [environments.beside(site, LEFT, letters) if letters else None for letters in closing.left]
     right = [environments.beside(site, RIGHT, letters) if letters else None for letters in closing.right]
-    rows = np.zeros((sectors, len(left), 2, copies, *size))
-    columns = np.zeros((sectors, len(right), 2, copies, *size))
     found = np.empty((sectors, sectors, 2 * len(left) * copies, 2 * len(right) * copies))
+    together = sectors if size[0] * size[1] < SMALL_BLOCK else 1
+    rows = np.zeros((together, len(left), 2, copies, *size))
+    columns = np.zeros((together, len(right), 2, copies, *size))
     for bra_left in range(sectors):
-        for row, known in enumerate(left):
-            if known is None:
-                rows[:, row, 0] = blocks[bra_left]
-            else:
-                ket_left = bra_left ^ known.charge
-                np.matmul(known.parts[None, :, None, ket_left], blocks[ket_left, :, None], out=rows[:, row])
-        for column, known in enumerate(right):
-            if known is None:
-                columns[:, column, 0] = blocks[bra_left]
-            else:
-                bras = blocks[bra_left, charges ^ known.charge]
-                np.matmul(bras[:, None], known.parts.swapaxes(0, 1)[:, :, None], out=columns[:, column])
-        flat = columns.reshape(sectors, found.shape[3], -1).swapaxes(1, 2)
-        np.matmul(rows.reshape(sectors, found.shape[2], -1), flat, out=found[bra_left])
+        for first in range(0, sectors, together):
+            ket_right = np.arange(first, first + together)
+            for row, known in enumerate(left):
+                if known is None:
+                    rows[:, row, 0] = blocks[bra_left, ket_right]
+                else:
+                    kets = blocks[bra_left ^ known.charge, ket_right]
+                    np.matmul(
+                        known.parts[None, :, None, bra_left ^ known.charge], kets[:, None], out=rows[:, row]
+                    )
+            for column, known in enumerate(right):
+                if known is None:
+                    columns[:, column, 0] = blocks[bra_left, ket_right]
+                else:
+                    bras = blocks[bra_left, ket_right ^ known.charge]
+                    parts = known.parts[:, ket_right].swapaxes(0, 1)
+                    np.matmul(bras[:, None], parts[:, :, None], out=columns[:, column])
+            flat = columns.reshape(together, found.shape[3], -1).swapaxes(1, 2)
+            np.matmul(
+                rows.reshape(together, found.shape[2], -1),
+                flat,
+                out=found[bra_left, first : first + together],
+            )
     return found
 
 

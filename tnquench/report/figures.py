@@ -15,7 +15,7 @@ from tnquench.report.maps import map_note, map_plate
 from tnquench.report.models import words_of
 from tnquench.report.overlays import overlay_note, overlay_plate
 from tnquench.report.question import settings_of, subject
-from tnquench.report.sources import advice_of, budget_plate, start_plate
+from tnquench.report.sources import advice_of, budget_note, budget_plate, start_plate
 from tnquench.report.stretch import stretch_note, stretch_summary, stretched
 from tnquench.report.stretch_figures import stretch_plate
 from tnquench.report.tables import Summary
@@ -78,7 +78,8 @@ def chapters(run: Run, fields: list[Comparison]) -> list[Chapter]:
     if compared:
         found.append(_alone("start", start_plate(compared)))
     if budgeted := _budgeted(first):
-        found.append(_alone("budget", budget_plate(budgeted, advice=advice_of(run))))
+        plate = budget_plate(budgeted, advice=advice_of(run))
+        found.append(_alone("budget", plate, note=budget_note(budgeted)))
     if studies := stretched(run, first):
         plates = (stretch_plate(studies),)
         table = stretch_summary(stretched(run, fields))
@@ -136,8 +137,8 @@ def _joined(plates: list[Plate], *, name: str = "maps", columns: int = 3) -> tup
     return (Plate(name, "", "", panels, columns=2 if len(panels) in (2, 4) else columns),)
 
 
-def _alone(anchor: str, plate: Plate) -> Chapter:
-    return Chapter(anchor, plate.heading, "", (plate,))
+def _alone(anchor: str, plate: Plate, *, note: str = "") -> Chapter:
+    return Chapter(anchor, plate.heading, note, (plate,))
 
 
 def figure(run: Run, name: str) -> Figure:

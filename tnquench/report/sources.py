@@ -9,6 +9,7 @@ import numpy as np
 from matplotlib.axes import Axes
 from matplotlib.figure import FigureBase
 
+from tnquench.budget.honesty import MEASURED, sentence
 from tnquench.conventions import Reals
 from tnquench.dataset.reader import Run
 from tnquench.report.canvas import FAINT, INK, PREDICTION, QUANTUM, SOURCE_STYLES, Panel, Plate, axes_at
@@ -41,6 +42,13 @@ def advice_of(run: Run) -> str:
     advice = run.provenance.get("advice")
     sentences = advice.get("sentences", []) if isinstance(advice, dict) else []
     return POWER.sub(lambda found: number(float(found.group())), " ".join(map(str, sentences)))
+
+
+def budget_note(fields: list[Comparison]) -> str:
+    """Return how far claimed errors may be trusted; empty where no companion runs measured any."""
+    if all(field.numerical is None for field in fields):
+        return ""
+    return f"Are these errors right? {sentence().removesuffix('.')} (measured by {MEASURED.command})."
 
 
 def budget_plate(fields: list[Comparison], *, advice: str = "") -> Plate:

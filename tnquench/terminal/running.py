@@ -61,7 +61,7 @@ def run_command(
     fresh: Annotated[bool, typer.Option("--fresh", help="Forget the checkpoints that are there.")] = False,
     only: Annotated[
         str | None,
-        typer.Option(metavar="QUENCH", help="Carry out one quench alone: main, weight_10, step_2 ..."),
+        typer.Option(metavar="QUENCH", help="Carry out one quench alone: main, weight_30, step_2 ..."),
     ] = None,
     checkpoint_every: Annotated[
         float | None, typer.Option(metavar="SECONDS", min=0.0, help="Least time between two checkpoints.")
