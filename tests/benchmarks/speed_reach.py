@@ -39,7 +39,7 @@ def reach_lines(sites: int = SITES, until: int = UNTIL, weight: float = WEIGHT) 
             bonds[unit] = int(moment.state.bond_dimensions.max())
             minutes = (time.perf_counter() - began) / 60.0
             print(f"reach: t = {unit}, bond {bonds[unit]}, {minutes:.1f} min", file=sys.stderr, flush=True)
-    grew = ", ".join(f"{bonds[unit]} at t = {unit}" for unit in (*TOLD, until) if unit in bonds)
+    grew = ", ".join(f"{bonds[unit]} at t = {unit}" for unit in sorted({*TOLD, until}) if unit in bonds)
     what = f"{problem.name}, {sites} sites, weight {weight:g}, until t = {until} on {THREADS} threads"
     whole = until == UNTIL and sites == SITES
     yield Line(what, f"< {MINUTES:g} min" if whole else "", f"{minutes:.1f} min",
