@@ -111,9 +111,9 @@ def test_the_run_of_a_point_waits_for_its_own_quenches(tmp_path, pretence):
     stage = Rehearsal(tmp_path, config, {}, engine="slurm", tasks="quenches")
     stage.run()
     submitted = pretence.calls("sbatch")
-    assert [words[2] for words in submitted] == ["--array=0-1"] * 6
+    assert [words[2] for words in submitted] == ["--array=0-1"] * 5
     waits = [[word for word in words if word.startswith("--dependency")] for words in submitted]
-    assert waits == [[]] * 5 + [["--dependency=aftercorr:101:102:103:104:105"]]
+    assert waits == [[]] * 4 + [["--dependency=aftercorr:101:102:103:104"]]
     assert "--kill-on-invalid-dep=yes" in submitted[-1]
     lists = sorted((stage.sweep.folder / "slurm").glob("*-length.json"))
     assert [read_task(lists[0], index)[0] is None for index in (0, 1)] == [True, False]

@@ -104,11 +104,11 @@ def test_cores_are_divided_among_the_tasks(tmp_path, monkeypatch):
         return jobs, limits.threads
 
     assert shares(4) == (4, 4)
-    assert shares(1) == (1, 5), "more processes than quenches would idle"
+    assert shares(1) == (1, 5), "few runs use more"
     assert shares(100) == (16, 1)
     assert shares(100, threads=4) == (4, 4)
     assert shares(100, jobs=2) == (2, 5)
-    assert shares(2, tasks="quenches") == (8, 2)  # four sites: a main quench and three companions
+    assert shares(2, tasks="quenches") == (6, 2)  # four sites: a main quench and two companions
     assert shares(100, engine="slurm") == (100, 1)
     assert shares(3, engine="dask") == (3, 1)
     assert shares(30, engine="dask", scheduler="tcp://a:1") == (30, 1)
