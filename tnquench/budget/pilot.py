@@ -119,9 +119,10 @@ def forecast_quench(quench: Quench, *, companions: dict[str, Quench], seconds: f
     )
 
 
-#: Arrays of the size of a two-site tensor held at once beside the state: the tensor and its gated copy; all
-#: blocks, guesses, frames, images and results of a cut together are as large as four more.
-WORKSPACE_PAIRS = 6.0
+#: Arrays of the size of a two-site tensor held at once beside the state: the tensor itself, guesses, frames
+#: and images of a cut or, while measuring, environments are 2.3; the allocator and the buffers of linear
+#: algebra add as much again (measured at bonds of 650 and 1100: `python -m tests.benchmarks.speed memory`).
+WORKSPACE_PAIRS = 4.5
 
 
 def _memory(quench: Quench, bonds: Reals) -> tuple[float, float]:
