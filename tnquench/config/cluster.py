@@ -81,7 +81,7 @@ class Cluster(Section):
         default_rule="none; for slurm the partition's own",
     )
     threads: int | None = setting(
-        "processes a task uses at once, at most one a quench",
+        "cores a task uses at once: for its quenches, then for the charges of their bonds",
         default=None,
         default_rule="the machine's cores divided among the jobs; 1 for dask and slurm",
         ge=1,
