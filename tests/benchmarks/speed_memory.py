@@ -93,7 +93,7 @@ def _in_a_process(measure: str, sites: int, until: float, weight: float) -> dict
 def memory_lines(sites: int = 64, until: float = UNTIL, weight: float = WEIGHT) -> Iterator[Line]:
     """Yield the lines of the row `memory`."""
     run = _in_a_process("run", sites, until, weight)
-    above = run["peak"] - run["baseline"]
+    above = max(run["peak"] - run["baseline"], 1.0)  # a tiny run stays below the buffers
     states = above / run["state"]
     what = f"peak above the baseline over the state, {sites} sites, weight {weight:g}, bond {run['bond']:.0f}"
     measured = f"{states:.2f} ({1e-6 * above:.0f} MB / {1e-6 * run['state']:.0f} MB)"
