@@ -119,9 +119,9 @@ def forecast_quench(quench: Quench, *, companions: dict[str, Quench], seconds: f
     )
 
 
-#: Arrays of the size of a two-site tensor held at once beside the state: the tensor itself, guesses, frames
-#: and images of a cut or, while measuring, environments are 2.3; the allocator and the buffers of linear
-#: algebra add as much again (measured at bonds of 650 and 1100: `python -m tests.benchmarks.speed memory`).
+#: Arrays of the size of a two-site tensor held at once beside the state. Measured: 4.0 at bond 648, 3.0 at
+#: 1100 (`python -m tests.benchmarks.speed memory`). 2.3 are arrays alive at the same time: the tensor itself,
+#: frames and images of a cut or, while measuring, environments; the rest is the allocator's.
 WORKSPACE_PAIRS = 4.5
 
 
